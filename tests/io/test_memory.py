@@ -1,0 +1,130 @@
+"""How much memory there is, and what is refused."""
+
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+from viewshed.errors import MemoryLimitError
+from viewshed.io._memory import available_memory, check_memory
+
+GB = 10**9
+MEMINFO = "MemTotal:       24683652 kB\nMemFree:  100 kB\nMemAvailable:   4000000 kB\n"
+
+
+def put(root, files):
+    for name, text in files.items():
+        path = root / name
+        path.parent.mkdir(parents=True, exist_ok=True)
+        path.write_text(str(text))
+
+
+def test_here():
+    assert 10**7 < available_memory() < 10**14
+
+
+def test_system(tmp_path):
+    put(tmp_path, {"proc/meminfo": MEMINFO})
+    assert available_memory(tmp_path) == 4_000_000 * 1024
+
+
+def test_old_system(tmp_path):
+    put(tmp_path, {"proc/meminfo": "MemFree: 100 kB\nBuffers: 20 kB\nCached: 3 kB\n"})
+    assert available_memory(tmp_path) == 123 * 1024
+
+
+def test_no_system(tmp_path):
+    assert available_memory(tmp_path) > 0
+
+
+def test_cgroup_2(tmp_path):
+    put(
+        tmp_path,
+        {
+            "proc/meminfo": MEMINFO,
+            "proc/self/cgroup": "0::/user.slice/job\n",
+            "sys/fs/cgroup/user.slice/job/memory.max": "max\n",
+            "sys/fs/cgroup/user.slice/job/memory.current": 5 * GB,
+            "sys/fs/cgroup/user.slice/memory.max": 2 * GB,
+            "sys/fs/cgroup/user.slice/memory.current": GB,
+            "sys/fs/cgroup/user.slice/memory.stat": "anon 5\ninactive_file 300000000\n",
+        },
+    )
+    assert available_memory(tmp_path) == 1_300_000_000
+
+
+@pytest.mark.parametrize("group", ["/docker/abc", "/", "/../.."])
+def test_cgroup_1(tmp_path, group):
+    put(
+        tmp_path,
+        {
+            "proc/meminfo": MEMINFO,
+            "proc/self/cgroup": f"9:name=systemd:/\n4:cpu,memory:{group}\n0::/\n",
+            "sys/fs/cgroup/memory/memory.limit_in_bytes": 3 * GB,
+            "sys/fs/cgroup/memory/memory.usage_in_bytes": GB,
+            "sys/fs/cgroup/memory/memory.stat": "total_inactive_file 500000000\n",
+        },
+    )
+    assert available_memory(tmp_path) == 2_500_000_000
+
+
+def test_cgroup_without_limit(tmp_path):
+    put(
+        tmp_path,
+        {
+            "proc/meminfo": MEMINFO,
+            "proc/self/cgroup": "4:memory:/\n",
+            "sys/fs/cgroup/memory/memory.limit_in_bytes": 9223372036854771712,
+            "sys/fs/cgroup/memory/memory.usage_in_bytes": GB,
+        },
+    )
+    assert available_memory(tmp_path) == 4_000_000 * 1024
+
+
+def test_more_used_than_allowed(tmp_path):
+    put(
+        tmp_path,
+        {
+            "proc/meminfo": MEMINFO,
+            "proc/self/cgroup": "0::/\n",
+            "sys/fs/cgroup/memory.max": GB,
+            "sys/fs/cgroup/memory.current": 2 * GB,
+        },
+    )
+    assert available_memory(tmp_path) == 0
+
+
+def test_address_space():
+    code = (
+        "import resource; resource.setrlimit(resource.RLIMIT_AS, (10**9, 10**9))\n"
+        "from viewshed.io._memory import available_memory; print(available_memory())\n"
+    )
+    root = Path(__file__).parents[2]
+    done = subprocess.run([sys.executable, "-c", code], cwd=root, capture_output=True, check=True)
+    assert 10**8 < int(done.stdout) < 10**9
+
+
+def test_enough():
+    check_memory(GB, GB, 30_000.0)
+
+
+@pytest.mark.parametrize(
+    ("need", "have", "range_m", "said"),
+    [
+        (
+            40 * GB,
+            10 * GB,
+            60_000,
+            "range 60 km needs 40 GB of memory and there are 10 GB; a range",
+        ),
+        (40 * GB, 10 * GB, 60_000, "a range of 30 km would fit"),
+        (2 * GB, GB, 100_000, "a range of 70 km would fit"),
+        (2 * GB, 5e8, 1234, "there are 500 MB; a range of 610 m would fit"),
+        (2 * GB, 900, 1234, "there are 0.9 kB; free some memory"),
+        (2 * GB, -5, 1234, "there are 0 kB; free some memory"),
+    ],
+)
+def test_too_much(need, have, range_m, said):
+    with pytest.raises(MemoryLimitError, match=said):
+        check_memory(need, have, range_m)

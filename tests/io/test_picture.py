@@ -1,0 +1,301 @@
+"""The page: right colours in right places, nothing cut off, same bytes each time."""
+
+import struct
+import zlib
+
+import numpy as np
+import pytest
+from affine import Affine
+
+from viewshed.constants import CAUTIONS
+from viewshed.grid import Grid, PostMap
+from viewshed.io import picture
+from viewshed.places import Sector
+
+WORDS = picture.Words(
+    question="from 20 m above ground at the observer to the ground everywhere, k = 0.13",
+    refraction="k = 0.13 (K = 1.149)",
+    dem_name="hills.tif",
+    crs_name="invented, metres",
+    summary=[("Visible", "12.3 km²"), ("Hidden", "45.6 km²")],
+    made_with="viewshed 0",
+)
+
+
+def flat_map(row0, col0, jacobian):
+    power = np.zeros((2, 2, 2))
+    power[0, 1, 0] = power[1, 0, 1] = 1.0
+    return PostMap(
+        row0, col0, np.array(jacobian, float), 1.0, *power, 0.0, 0.0, 9.0, 47.0, 6.37e6, 6.39e6
+    )
+
+
+def scene(rows=120, cols=120, *, visible=None, elevation=None, jacobian=None, **changes):
+    """Flat ground in 100 m cells, observer in the middle, everything hidden unless said."""
+    jacobian = [[100.0, 0.0], [0.0, -100.0]] if jacobian is None else jacobian
+    (a, b), (d, e) = jacobian
+    grid = Grid((rows, cols), Affine(a, b, 500_000.0, d, e, 4_600_000.0), "none needed")
+    row0, col0 = (rows - 1) / 2, (cols - 1) / 2
+    x, y = (float(v) for v in grid.xy(row0, col0))
+    facts = {
+        "elevation": np.zeros((rows, cols), np.float32) if elevation is None else elevation,
+        "visible": np.zeros((rows, cols), np.uint8) if visible is None else visible,
+        "grid": grid,
+        "post_map": flat_map(row0, col0, jacobian),
+        "observers": [(x, y, "observer")],
+        "range_m": 5000.0,
+        **changes,
+    }
+    return picture.Scene(**facts)
+
+
+def colours_at(drawn, places, size=(400, 400)):
+    """Colours of a scene at local places east, north [m]."""
+    view = picture.view_of(drawn, *size)
+    rgb, found = picture.paint(drawn, view)
+    pixels = [view.place(east, north) for east, north in places]
+    return np.array([rgb[int(y), int(x)] for x, y in pixels]), found, view
+
+
+def is_plum(rgb):
+    return np.abs(rgb / rgb.max() - np.array(picture.PLUM) / max(picture.PLUM)).max() < 0.05
+
+
+def grey(rgb):
+    return float(np.dot(rgb, [0.2126, 0.7152, 0.0722]))
+
+
+def test_the_classes_tell_apart_in_colour_and_in_grey():
+    visible = np.zeros((120, 120), np.uint8)
+    visible[:60, 60:] = 1  # north-east
+    visible[60:, :60] = 2  # south-west
+    visible[60:, 60:] = 255  # south-east, void
+    elevation = np.where(visible == 255, np.nan, 0).astype(np.float32)
+    view = picture.view_of(scene(), 400, 400)
+    rgb, found = picture.paint(scene(visible=visible, elevation=elevation), view)
+    seen, hidden = rgb[100, 300], rgb[100, 100]
+    unsure, void = rgb[250:350, 60:150].reshape(-1, 3), rgb[250:350, 250:340].reshape(-1, 3)
+    assert is_plum(seen)
+    assert np.ptp(hidden) < 0.05
+    assert grey(hidden) - grey(seen) > 0.4
+    assert np.ptp([grey(c) for c in unsure]) > 0.3  # stripes
+    assert np.mean([c.min() for c in void]) > 0.9  # nearly white
+    assert found >= {"unresolved", "void"}
+    assert "mixed" not in found
+
+
+@pytest.mark.parametrize(
+    "jacobian",
+    [
+        [[100.0, 0.0], [0.0, -100.0]],
+        [[100.0, 0.0], [0.0, 100.0]],  # south up
+        [[-80.0, 60.0], [60.0, 80.0]],  # turned and mirrored
+        [[50.0, 0.0], [0.0, -140.0]],  # cells longer than wide
+    ],
+)
+def test_things_are_drawn_where_they_are(jacobian):
+    base = scene(jacobian=jacobian)
+    east, north = base.post_map.en(*np.mgrid[:120, :120])
+    near = np.hypot(east - 1500, north - 700) < 500
+    drawn = scene(jacobian=jacobian, visible=near.astype(np.uint8))
+    colours, _, view = colours_at(drawn, [(1500, 700), (-1500, 700), (1500, -700), (1500, 1500)])
+    assert [bool(is_plum(c)) for c in colours] == [True, False, False, False]
+    assert view.place(0.0, 100.0)[1] < view.place(0.0, 0.0)[1]
+
+
+@pytest.mark.parametrize("n", [300, 1500, 4000])
+@pytest.mark.parametrize("across", [False, True])
+def test_a_strip_one_cell_wide_stays_on_the_page(n, across):
+    cell = 12_000.0 / n
+    visible = np.zeros((n, n), np.uint8)
+    line = n // 3
+    visible[(slice(None), line) if across else line] = 1
+    drawn = scene(n, n, visible=visible, jacobian=[[cell, 0.0], [0.0, -cell]])
+    view = picture.view_of(drawn, 500, 500)
+    rgb, found = picture.paint(drawn, view)
+    purple = rgb[..., 2] - rgb[..., 1] > 0.08
+    along = purple.any(axis=1 if across else 0)
+    middle = slice(len(along) // 4, 3 * len(along) // 4)
+    assert along[middle].all()
+    assert ("mixed" in found) == (n > 700)
+
+
+def test_scattered_single_cells_do_not_look_solid():
+    visible = np.zeros((4000, 4000), np.uint8)
+    visible[::8, ::8] = 1
+    drawn = scene(4000, 4000, visible=visible, jacobian=[[3.0, 0.0], [0.0, -3.0]])
+    rgb, _ = picture.paint(drawn, picture.view_of(drawn, 500, 500))
+    bare, _ = picture.paint(scene(), picture.view_of(scene(), 500, 500))
+    part = grey(bare[200:300, 200:300].mean((0, 1))) - grey(rgb[200:300, 200:300].mean((0, 1)))
+    assert 0.01 < part < 0.25
+
+
+def test_shares_and_heights_of_blocks(monkeypatch):
+    monkeypatch.setattr(picture, "STRIP_CELLS", 50)
+    rng = np.random.default_rng(5)
+    visible = rng.choice(np.array([0, 1, 2, 255], np.uint8), (23, 31))
+    elevation = rng.random((23, 31), dtype=np.float32)
+    elevation[(visible == 255) & (rng.random((23, 31)) < 0.5)] = np.nan
+    for by, bx in [(1, 1), (4, 3), (1, 5), (7, 1), (40, 40)]:
+        shares, heights = picture._blocks(visible, elevation, by, bx)
+        for i in range(shares.shape[0]):
+            for j in range(shares.shape[1]):
+                cut = np.s_[i * by : (i + 1) * by, j * bx : (j + 1) * bx]
+                state, ground = visible[cut], elevation[cut]
+                void = np.isnan(ground)
+                counts = [(state == v).sum() for v in (1, 2, 0)]
+                counts += [void.sum(), ((state == 255) & ~void).sum()]
+                expected = [int(np.ceil(255 * c / state.size)) for c in counts]
+                assert shares[i, j].tolist() == expected
+                mean = np.nan if void.all() else ground[~void].mean()
+                np.testing.assert_allclose(heights[i, j], mean, rtol=1e-5)
+
+
+def test_light_comes_from_the_north_west_whatever_the_grid():
+    for jacobian in ([[100.0, 0.0], [0.0, -100.0]], [[100.0, 0.0], [0.0, 100.0]]):
+        east, north = scene(jacobian=jacobian).post_map.en(*np.mgrid[:120, :120])
+        cone = (3000 - np.hypot(east, north)).astype(np.float32)
+        drawn = scene(jacobian=jacobian, elevation=cone)
+        colours, _, _ = colours_at(drawn, [(-1500, 1500), (1500, -1500)])
+        assert grey(colours[0]) > grey(colours[1]) + 0.1
+
+
+def test_curved_grid_places_are_found_again():
+    post_map = flat_map(60, 50, [[100.0, 3.0], [-2.0, -100.0]])
+    bent = np.zeros((3, 3, 2))
+    bent[1, 0, 0] = bent[0, 1, 1] = 1.0
+    bent[2, 0, 1], bent[1, 1, 0] = 4e-4, -3e-4
+    fields = {**vars(post_map), "cp": bent[..., 0], "cq": bent[..., 1]}
+    drawn = scene(post_map=PostMap(**fields))
+    rows, cols = np.mgrid[0:120:7, 0:120:7].astype(float)
+    found = picture.index_of(drawn, *drawn.post_map.en(rows, cols))
+    np.testing.assert_allclose(found[0], rows, atol=1e-3)
+    np.testing.assert_allclose(found[1], cols, atol=1e-3)
+
+
+def text_chunks(data):
+    """Names of the chunks of a PNG file, whose checksums must hold."""
+    names, at = [], 8
+    while at < len(data):
+        (size,) = struct.unpack(">I", data[at : at + 4])
+        kind = data[at + 4 : at + 8]
+        body = data[at + 8 : at + 8 + size]
+        (check,) = struct.unpack(">I", data[at + 8 + size : at + 12 + size])
+        assert zlib.crc32(kind + body) == check
+        names.append(kind.decode())
+        at += 12 + size
+    return names
+
+
+def test_same_input_same_bytes_and_no_date(tmp_path):
+    rng = np.random.default_rng(1)
+    drawn = scene(
+        visible=rng.choice(np.array([0, 1, 2, 255], np.uint8), (120, 120)),
+        elevation=rng.random((120, 120), dtype=np.float32),
+        sector=Sector(350, 40),
+    )
+    paths = [tmp_path / "a.png", tmp_path / "b.png"]
+    for path in paths:
+        picture.draw_map(path, drawn, WORDS, dpi=80)
+    first, second = (path.read_bytes() for path in paths)
+    assert first == second
+    assert set(text_chunks(first)) <= {"IHDR", "IDAT", "pHYs", "IEND"}
+
+
+@pytest.fixture
+def boxes(monkeypatch):
+    """Boxes of all texts of the page that is drawn, in pixels from the bottom left."""
+    kept = []
+    compose = picture.Page.compose
+
+    def and_look(page, *args):
+        compose(page, *args)
+        page.axes.figure.canvas.draw()
+        for text in page.axes.texts:
+            box = text.get_window_extent(page.renderer)
+            kept.append((text.get_text(), *box.extents))
+        kept.append((None, 0, 0, page.width, page.height))
+
+    monkeypatch.setattr(picture.Page, "compose", and_look)
+    return kept
+
+
+LONG = picture.Words(
+    question="from 50 m above ground at eight turbines of the Upper Valley scheme, option B, "
+    "to 1.7 m above ground everywhere, looking over bearings 350 to 10, k = 0.13 " * 2,
+    refraction="k = 0.13 (K = 1.149)",
+    dem_name="a_long_name_" * 20 + ".tif",
+    crs_name="NAD83(2011) / Somewhere South (ftUS) + NAVD88 height (ftUS), US survey feet " * 3,
+    summary=[("Farthest visible", "19.86 km at bearing 213.4 degrees, at 498120.0, 4633030.0")]
+    + [(f"Row {i}", "value") for i in range(9)],
+    cautions=CAUTIONS + CAUTIONS,
+)
+
+
+@pytest.mark.parametrize(
+    ("changes", "words"),
+    [
+        ({}, WORDS),
+        ({"sector": Sector(350, 40)}, WORDS),
+        ({"sector": Sector(80, 81)}, WORDS),
+        ({"sector": Sector(0, 360)}, WORDS),
+        ({"sector": Sector(10, 200)}, LONG),
+        ({"rows": 1}, WORDS),
+        ({"cols": 1}, WORDS),
+        ({"rows": 1, "cols": 1}, WORDS),
+        ({"range_m": 400_000.0}, WORDS),
+        ({"range_m": 30.0}, WORDS),
+        ({}, LONG),
+        ({"jacobian": [[60.0, 80.0], [80.0, -60.0]]}, LONG),
+    ],
+)
+def test_no_text_is_cut_off_or_written_over_another(tmp_path, boxes, changes, words):
+    drawn = scene(**changes)
+    x, y, _ = drawn.observers[0]
+    named = picture.replace(drawn, observers=[(x, y, "A lookout with quite a long name")])
+    picture.draw_map(tmp_path / "page.png", named, words, dpi=100)
+    *texts, (_, _, _, width, height) = boxes
+    assert len(texts) > 12
+    for text, left, bottom, right, top in texts:
+        assert left >= 0.02 * width, text
+        assert right <= 0.98 * width, text
+        assert bottom >= 0.01 * height, text
+        assert top <= 0.99 * height, text
+    for i, (text, left, bottom, right, top) in enumerate(texts):
+        for other, left2, bottom2, right2, top2 in texts[:i]:
+            apart = (
+                right <= left2 + 1 or right2 <= left + 1 or top <= bottom2 + 2 or top2 <= bottom + 2
+            )
+            assert apart, (text, other)
+
+
+def test_odd_characters_are_written_as_they_are_or_as_boxes(tmp_path, boxes):
+    drawn = scene()
+    x, y, _ = drawn.observers[0]
+    odd = picture.replace(drawn, observers=[(x, y, "Übersicht $x^2$ \t東")])
+    picture.draw_map(tmp_path / "page.png", odd, WORDS, dpi=80)
+    assert "Übersicht $x^2$  □" in [text for text, *_ in boxes]
+
+
+def test_a_folder_that_is_not_there_is_an_os_error(tmp_path):
+    with pytest.raises(OSError, match="nowhere"):
+        picture.draw_map(tmp_path / "nowhere" / "map.png", scene(), WORDS, dpi=50)
+
+
+@pytest.mark.parametrize(
+    ("range_m", "rings"),
+    [
+        (30_000.0, [10_000.0, 20_000.0, 30_000.0]),
+        (20_000.0, [5_000.0, 10_000.0, 15_000.0, 20_000.0]),
+        (1_200.0, [500.0, 1_000.0, 1_200.0]),
+        (5.0, [2.0, 4.0, 5.0]),
+        (10_500.0, [5_000.0, 10_500.0]),
+    ],
+)
+def test_rings_are_round_and_the_range_is_the_last(range_m, rings):
+    assert picture.ring_distances(range_m) == rings
+
+
+@pytest.mark.parametrize(("room", "length"), [(7_300.0, 5_000.0), (10.0, 10.0), (0.19, 0.1)])
+def test_scale_bar_has_a_round_length(room, length):
+    assert picture.round_down(room) == length

@@ -1,0 +1,1 @@
+"""Plain twins of the fast code, written to be read."""

@@ -1,0 +1,314 @@
+"""The plain walker: every sight line walked whole, one at a time.
+
+It is the meaning of the result, spelled out. Nothing here is shared with the fast engine but the
+elevations, the post coordinates and the constants.
+"""
+
+import math
+
+import numpy as np
+
+
+class Walker:
+    """Sight lines from one observer over one elevation array.
+
+    Parameters
+    ----------
+    z : (rows, cols) float32
+        Elevation, NaN where void.
+    post_map : PostMap
+        Post coordinates p, q (sight lines are straight in them) and the metres they stand for.
+    eye_height, k, range_m, sector
+        As for `viewshed.visibility.compute`.
+    """
+
+    def __init__(self, z, post_map, *, eye_height, target_height=0.0, k=0.13, range_m=math.inf,
+                 sector=None):
+        self.z = z.astype(np.float64)
+        self.row0, self.col0 = post_map.row0, post_map.col0
+        self.target_height, self.range_m, self.sector = target_height, range_m, sector
+        self.eye_height = eye_height
+        self.k = k
+        self.M, self.P = post_map.radius_meridian, post_map.radius_prime_vertical
+        self.J = post_map.jacobian
+        rows, cols = z.shape
+        r, c = np.meshgrid(np.arange(rows), np.arange(cols), indexing="ij")
+        if post_map.cp.shape[0] <= 2:
+            self.p, self.q = c - self.col0, r - self.row0
+        else:
+            self.p, self.q = post_map.pq(r, c)
+        # the observer goes with the cell that holds it
+        corners = self.corner_weights()
+        shift_p = sum(w * self.p[at] for at, w in corners)
+        shift_q = sum(w * self.q[at] for at, w in corners)
+        if post_map.cp.shape[0] > 2:
+            self.p, self.q = self.p - shift_p, self.q - shift_q
+        self.ground = sum(w * self.z[at] for at, w in corners)
+        self.eye = self.ground + eye_height
+        self.f = self.flat_height(self.z)
+        for at in self.own_posts():  # sharp differences near the observer
+            rise = sum(w * (self.z[at] - self.z[b]) for b, w in corners) - eye_height
+            self.f[at] = rise * (1 - self.z[at] / self.bent_radius()) - self.drop()[at]
+
+    def corner_weights(self):
+        r0, c0 = math.floor(self.row0), math.floor(self.col0)
+        a, b = self.row0 - r0, self.col0 - c0
+        found = []
+        for r, wr in ((r0, 1 - a), (r0 + 1, a)):
+            for c, wc in ((c0, 1 - b), (c0 + 1, b)):
+                if wr * wc > 0:
+                    found.append(((r, c), wr * wc))
+        return found
+
+    def own_posts(self):
+        rows, cols = self.z.shape
+        near_r = {math.floor(self.row0) + d for d in (-1, 0, 1)} | {math.ceil(self.row0) + 1}
+        near_c = {math.floor(self.col0) + d for d in (-1, 0, 1)} | {math.ceil(self.col0) + 1}
+        for r in near_r:
+            for c in near_c:
+                if (abs(r - self.row0) <= 1 and abs(c - self.col0) <= 1
+                        and 0 <= r < rows and 0 <= c < cols):
+                    yield r, c
+
+    def bent_radius(self):
+        return math.sqrt(self.M * self.P) / (1 - self.k)
+
+    def metres(self):
+        east = self.J[0, 0] * self.p + self.J[0, 1] * self.q
+        north = self.J[1, 0] * self.p + self.J[1, 1] * self.q
+        return east, north
+
+    def drop(self):
+        east, north = self.metres()
+        return (1 - self.k) / 2 * (north**2 / self.M + east**2 / self.P)
+
+    def flat_height(self, z):
+        return (z - self.eye) * (1 - z / self.bent_radius()) - self.drop()
+
+    def answer(self):
+        """State and clearance of every cell."""
+        rows, cols = self.z.shape
+        state = np.full((rows, cols), 255, np.uint8)
+        clearance = np.full((rows, cols), np.nan)
+        east, north = self.metres()
+        distance = np.hypot(east, north)
+        bearing = np.degrees(np.arctan2(east, north))
+        target = self.flat_height(self.z + self.target_height)
+        for r in range(rows):
+            for c in range(cols):
+                if np.isnan(self.z[r, c]) or distance[r, c] > self.range_m * (1 + 1e-12):
+                    continue
+                if self.sector is not None and not self.sector.contains(bearing[r, c]):
+                    continue
+                if (r, c) == (self.row0, self.col0):
+                    state[r, c] = 1
+                    clearance[r, c] = self.eye_height + self.target_height
+                    continue
+                horizon, unknown, length = self.walk(r, c)
+                clear = target[r, c] - horizon * length
+                if clear < 0:
+                    state[r, c] = 0
+                elif unknown:
+                    state[r, c] = 2
+                    clear = np.nan
+                else:
+                    state[r, c] = 1
+                if clear == np.inf:
+                    clear = self.eye_height + self.target_height
+                clearance[r, c] = clear
+        return state, clearance
+
+    def walk(self, rt, ct):
+        """Horizon on the sight line to a post, whether it meets the unknown, and its length.
+
+        The horizon is a slope: flat height over distance, both in the (p, q) plane.
+        """
+        length = math.hypot(self.p[rt, ct], self.q[rt, ct])
+        ray = (self.p[rt, ct] / length, self.q[rt, ct] / length)
+        points = self.crossings(rt, ct, ray, length)
+        horizon, unknown = -math.inf, False
+        for distance, row, col, height, known in points:
+            if not known:
+                unknown = True
+            else:
+                horizon = max(horizon, height / distance)
+        # sections: from the observer, crossing to crossing, to the target
+        observer = (0.0, self.row0, self.col0, None, True)
+        goal = (length, float(rt), float(ct), self.f[rt, ct], True)
+        stops = [observer, *points, goal]
+        for start, end in zip(stops, stops[1:], strict=False):
+            peak, inside_unknown = self.section(start, end, ray)
+            horizon = max(horizon, peak)
+            unknown = unknown or inside_unknown
+        return horizon, unknown, length
+
+    def crossings(self, rt, ct, ray, length):
+        """Where the sight line crosses row and column lines strictly between its ends.
+
+        Each is (distance, row, col, flat height, known), nearest first.
+        """
+        rows, cols = self.z.shape
+        r_lo = max(0, min(rt, math.floor(self.row0)) - 3)
+        r_hi = min(rows, max(rt, math.ceil(self.row0)) + 4)
+        c_lo = max(0, min(ct, math.floor(self.col0)) - 3)
+        c_hi = min(cols, max(ct, math.ceil(self.col0)) + 4)
+        p, q = self.p[r_lo:r_hi, c_lo:c_hi], self.q[r_lo:r_hi, c_lo:c_hi]
+        side = ray[0] * q - ray[1] * p  # of the ray that each post is on
+        straight = self.p[0, 0] == -self.col0 and self.q[0, 0] == -self.row0
+        if straight:  # exact zeros for whole-number ratios
+            dp, dq = self.p[rt, ct], self.q[rt, ct]
+            side = np.where(dp * q == dq * p, 0.0, side)
+        found = {}
+        on = np.argwhere(side == 0)
+        for a, b in on:  # through a post
+            r, c = r_lo + a, c_lo + b
+            found[(float(r), float(c))] = self.at_post(r, c)
+        for axis in (0, 1):
+            first = side[:-1] if axis == 0 else side[:, :-1]
+            second = side[1:] if axis == 0 else side[:, 1:]
+            for a, b in np.argwhere(first * second < 0):
+                r, c = r_lo + a, c_lo + b
+                r2, c2 = (r + 1, c) if axis == 0 else (r, c + 1)
+                part = first[a, b] / (first[a, b] - second[a, b])
+                f0, f1 = self.f[r, c], self.f[r2, c2]
+                height = f0 + part * (f1 - f0)
+                where = (r + part, float(c)) if axis == 0 else (float(r), c + part)
+                found[where] = (height, not np.isnan(height))
+        points = []
+        for (row, col), (height, known) in found.items():
+            x, y = self.place(row, col)
+            distance = ray[0] * x + ray[1] * y
+            points.append((distance, row, col, height, known))
+        points = [w for w in points if 0 < w[0] < length * (1 - 1e-13)
+                  and (w[1], w[2]) not in ((rt, ct), (self.row0, self.col0))]
+        points.sort()
+        return self.sharpen_first(points, ray)
+
+    def at_post(self, r, c):
+        """Flat height and knowledge of a post hit exactly; alone among voids it does not block."""
+        rows, cols = self.z.shape
+        known = not np.isnan(self.f[r, c])
+        around = [(r - 1, c), (r + 1, c), (r, c - 1), (r, c + 1)]
+        edges = [at for at in around
+                 if 0 <= at[0] < rows and 0 <= at[1] < cols and not np.isnan(self.f[at])]
+        return (self.f[r, c] if edges or not known else -math.inf), known
+
+    def place(self, row, col):
+        """p and q of a place on a grid line, straight between its two posts."""
+        r, c = math.floor(row), math.floor(col)
+        a, b = row - r, col - c
+        r2, c2 = (r + 1 if a else r), (c + 1 if b else c)
+        x = self.p[r, c] + a * (self.p[r2, c] - self.p[r, c]) + b * (self.p[r, c2] - self.p[r, c])
+        y = self.q[r, c] + a * (self.q[r2, c] - self.q[r, c]) + b * (self.q[r, c2] - self.q[r, c])
+        return x, y
+
+    def own_cell(self, ray):
+        """Corner offsets and bilinear differences of the cell the ray sets out into."""
+        r0 = math.floor(self.row0) if self.row0 % 1 or ray[1] >= 0 else int(self.row0) - 1
+        c0 = math.floor(self.col0) if self.col0 % 1 or ray[0] >= 0 else int(self.col0) - 1
+        rows, cols = self.z.shape
+        if not (0 <= r0 < rows - 1 and 0 <= c0 < cols - 1):
+            return None
+        box = np.s_[r0:r0 + 2, c0:c0 + 2]
+        if np.isnan(self.f[box]).any():
+            return None
+        a, b = self.row0 - r0, self.col0 - c0
+
+        def differences(v):
+            at = ((v[0, 0] * (1 - b) + v[0, 1] * b) * (1 - a)
+                  + (v[1, 0] * (1 - b) + v[1, 1] * b) * a)
+            by_col = (v[0, 1] - v[0, 0]) * (1 - a) + (v[1, 1] - v[1, 0]) * a
+            by_row = (v[1, 0] - v[0, 0]) * (1 - b) + (v[1, 1] - v[0, 1]) * b
+            return at, by_col, by_row, v[1, 1] - v[1, 0] - v[0, 1] + v[0, 0]
+
+        return (r0, c0), differences(self.f[box]), differences(self.p[box]), differences(self.q[box])
+
+    def own_exit(self, ray):
+        """First crossing, out of the own cell: distance, x, y (index offsets) and cell data."""
+        cell = self.own_cell(ray)
+        if cell is None:
+            return None
+        (r0, c0), f, p, q = cell
+        best = None
+        for x in (c0 - self.col0, c0 + 1 - self.col0):  # its column lines
+            down = ray[0] * (q[2] + q[3] * x) - ray[1] * (p[2] + p[3] * x)
+            if x == 0 or down == 0:
+                continue
+            best = self.nearer(best, x, x * (ray[1] * p[1] - ray[0] * q[1]) / down, p, q, ray, r0, c0)
+        for y in (r0 - self.row0, r0 + 1 - self.row0):  # its row lines
+            along = ray[1] * (p[1] + p[3] * y) - ray[0] * (q[1] + q[3] * y)
+            if y == 0 or along == 0:
+                continue
+            best = self.nearer(best, y * (ray[0] * q[2] - ray[1] * p[2]) / along, y, p, q, ray, r0, c0)
+        return best, f
+
+    def nearer(self, best, x, y, p, q, ray, r0, c0):
+        slack = 1e-12
+        if not (c0 - self.col0 - slack <= x <= c0 + 1 - self.col0 + slack
+                and r0 - self.row0 - slack <= y <= r0 + 1 - self.row0 + slack):
+            return best
+        px = p[1] * x + p[2] * y + p[3] * x * y
+        qx = q[1] * x + q[2] * y + q[3] * x * y
+        distance = ray[0] * px + ray[1] * qx
+        if distance <= 0:
+            return best
+        return (distance, x, y) if best is None or distance < best[0] else best
+
+    def sharpen_first(self, points, ray):
+        """Replace the first crossing by one worked from differences at the observer."""
+        found = self.own_exit(ray)
+        if not points or found is None or found[0] is None:
+            return points
+        (distance, x, y), f = found
+        first = points[0]
+        if abs(first[0] - distance) > 1e-6 or not first[4]:
+            return points
+        height = f[0] + f[1] * x + f[2] * y + f[3] * x * y
+        # as a slope it is f0 / distance + a direction's rise: keep it as height over distance
+        return [(distance, first[1], first[2], height, True), *points[1:]]
+
+    def section(self, start, end, ray):
+        """Greatest slope strictly inside one cell, and whether the cell is unknown."""
+        d1, r1, c1, f1, known1 = start
+        d2, r2, c2, f2, known2 = end
+        r, c = math.floor((r1 + r2) / 2), math.floor((c1 + c2) / 2)
+        along_line = (r1 == r2 == math.floor(r1)) or (c1 == c2 == math.floor(c1))
+        rows, cols = self.z.shape
+        if along_line:
+            return -math.inf, False
+        if not (0 <= r < rows - 1 and 0 <= c < cols - 1):
+            return -math.inf, True
+        box = self.f[r:r + 2, c:c + 2]
+        if np.isnan(box).any():
+            return -math.inf, True
+        if d1 == 0.0:
+            return self.own_section(ray), False
+        if not (known1 and known2):
+            return -math.inf, False
+        twist = box[1, 1] - box[1, 0] - box[0, 1] + box[0, 0]
+        bulge = -twist * (r2 - r1) * (c2 - c1)  # f rises bulge * s * (1 - s) above its chord
+        if bulge <= 0 or d2 <= d1:
+            return -math.inf, False
+        span = d2 - d1
+        # slope of the ray to the surface grows at the start and falls at the end?
+        if (f2 - f1 + bulge) * d1 <= f1 * span or (f2 - f1 - bulge) * d2 >= f2 * span:
+            return -math.inf, False
+        turn = (d1 * f2 - d2 * f1) / bulge
+        top = math.sqrt(d1 * d2 + span * turn)
+        s = (d1 + turn) / (top + d1)
+        return (f1 + s * (f2 - f1) + bulge * s * (1 - s)) / top, False
+
+    def own_section(self, ray):
+        found = self.own_exit(ray)
+        if found is None or found[0] is None:
+            return -math.inf
+        (distance, x, y), f = found
+        bulge = -f[3] * x * y
+        if bulge <= 0 or -f[0] >= bulge:
+            return -math.inf
+        return (f[1] * x + f[2] * y - 2 * math.sqrt(max(0.0, -f[0] * bulge))) / distance
+
+
+def walk_all(z, post_map, **scene):
+    """State and clearance of every cell, by the plain walker."""
+    return Walker(z, post_map, **scene).answer()

@@ -1,0 +1,157 @@
+"""How much memory there is, and the refusal of a run that needs more."""
+
+import os
+from collections.abc import Iterator
+from math import isfinite, sqrt
+from pathlib import Path
+
+from viewshed.errors import MemoryLimitError
+
+try:
+    import resource
+except ImportError:  # pragma: no cover  (no such module on Windows)
+    resource = None  # type: ignore[assignment]
+
+#: A cgroup limit at or above this many bytes means that there is no limit.
+_NO_LIMIT = 1 << 60
+#: What is assumed where nothing tells [bytes].
+_FALLBACK = 2 << 30
+
+
+def available_memory(root: Path = Path("/")) -> int:
+    """Say how much memory this process can still take without being killed or swapping.
+
+    Parameters
+    ----------
+    root : pathlib.Path, optional
+        Folder that holds ``proc`` and ``sys``; another one than ``/`` only in tests.
+
+    Returns
+    -------
+    int
+        The least [bytes] of what the system, every control group (version 1 and 2) above this
+        process and the address-space limit of the process leave.
+
+    Notes
+    -----
+    File pages that a control group can drop at once count as free.
+    """
+    found = [*_system(root), *_cgroups(root), *_address_space(root)]
+    if not found:
+        found = [*_sysconf()]
+    return max(0, min(found, default=_FALLBACK))
+
+
+def check_memory(need_bytes: float, have_bytes: float, range_m: float) -> None:
+    """Refuse a run that does not fit in memory.
+
+    Parameters
+    ----------
+    need_bytes : float
+        Memory that the run takes [bytes].
+    have_bytes : float
+        Memory that there is [bytes], as from `available_memory`.
+    range_m : float
+        Range of the run [m].
+
+    Raises
+    ------
+    MemoryLimitError
+        If the need is greater; it names both and the range that would fit.
+    """
+    if need_bytes <= have_bytes:
+        return
+    fits = _round_down(range_m * sqrt(max(0.0, have_bytes) / need_bytes))
+    cure = f"a range of {_length(fits)} would fit" if fits > 0 else "free some memory"
+    msg = (
+        f"range {_length(range_m)} needs {_size(need_bytes)} of memory and there are "
+        f"{_size(max(0.0, have_bytes))}; {cure}"
+    )
+    raise MemoryLimitError(msg)
+
+
+def _round_down(metres: float) -> float:
+    """Round down to two digits, so that the range named surely fits [m]."""
+    if not isfinite(metres) or metres < 1.0:
+        return 0.0
+    step = 10.0 ** (len(str(int(metres))) - 2)
+    return int(metres / step) * step
+
+
+def _length(metres: float) -> str:
+    return f"{metres / 1000.0:g} km" if metres >= 1000.0 else f"{metres:g} m"
+
+
+def _size(count: float) -> str:
+    if count < 1e6:
+        return f"{count / 1e3:.3g} kB"
+    return f"{count / 1e9:.3g} GB" if count >= 1e9 else f"{count / 1e6:.3g} MB"
+
+
+def _text(path: Path) -> str:
+    try:
+        return path.read_text(encoding="ascii", errors="replace")
+    except OSError:
+        return ""
+
+
+def _fields(path: Path) -> dict[str, int]:
+    """Read lines of ``name number``, with or without a colon and a unit."""
+    pairs = (line.replace(":", " ").split() for line in _text(path).splitlines())
+    return {p[0]: int(p[1]) for p in pairs if len(p) >= 2 and p[1].isdigit()}
+
+
+def _number(path: Path) -> int | None:
+    text = _text(path).strip()
+    return int(text) if text.isdigit() else None
+
+
+def _system(root: Path) -> Iterator[int]:
+    info = _fields(root / "proc/meminfo")
+    if "MemAvailable" in info:
+        yield info["MemAvailable"] * 1024
+    elif "MemFree" in info:
+        yield (info["MemFree"] + info.get("Cached", 0) + info.get("Buffers", 0)) * 1024
+
+
+def _address_space(root: Path) -> Iterator[int]:
+    if resource is None:  # pragma: no cover
+        return
+    limit = resource.getrlimit(resource.RLIMIT_AS)[0]
+    used = _fields(root / "proc/self/status").get("VmSize")
+    if limit != resource.RLIM_INFINITY and used is not None:
+        yield limit - used * 1024
+
+
+def _sysconf() -> Iterator[int]:
+    for name in ("SC_AVPHYS_PAGES", "SC_PHYS_PAGES"):
+        if name in getattr(os, "sysconf_names", {}):
+            yield os.sysconf(name) * os.sysconf("SC_PAGE_SIZE")
+
+
+def _cgroups(root: Path) -> Iterator[int]:
+    """Give the headroom of each control group from this process up to the top [bytes]."""
+    mount = root / "sys/fs/cgroup"
+    for line in _text(root / "proc/self/cgroup").splitlines():
+        number, _, rest = line.partition(":")
+        controllers, _, group = rest.partition(":")
+        if number == "0" and not controllers:
+            names = ("memory.max", "memory.current", "inactive_file")
+            for top in (mount, mount / "unified"):
+                yield from _headrooms(top, group, names)
+        elif "memory" in controllers.split(","):
+            names = ("memory.limit_in_bytes", "memory.usage_in_bytes", "total_inactive_file")
+            yield from _headrooms(mount / "memory", group, names)
+
+
+def _headrooms(top: Path, group: str, names: tuple[str, str, str]) -> Iterator[int]:
+    limit_name, usage_name, cache_name = names
+    parts = [p for p in group.split("/") if p and p != ".."]
+    for depth in range(len(parts), -1, -1):
+        folder = top.joinpath(*parts[:depth])
+        limit = _number(folder / limit_name)
+        usage = _number(folder / usage_name)
+        if limit is None or usage is None or limit >= _NO_LIMIT:
+            continue
+        cache = _fields(folder / "memory.stat").get(cache_name, 0)
+        yield limit - max(0, usage - cache)
