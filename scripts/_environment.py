@@ -212,8 +212,16 @@ def _make(folder, requirements, constraints):
 
 def _logged(words, out, log):
     """Run a command with its output in a log; on failure say in one line what went wrong."""
+    # The child keeps the lock: should we be killed, nobody builds here until it has ended too.
+    inherited = [] if fcntl is None else [handle.fileno() for handle in _HELD]
     done = subprocess.run(
-        words, stdout=out, stderr=subprocess.STDOUT, cwd=str(ROOT), env=clean_environ(), check=False
+        words,
+        stdout=out,
+        stderr=subprocess.STDOUT,
+        cwd=str(ROOT),
+        env=clean_environ(),
+        pass_fds=inherited,
+        check=False,
     )
     if done.returncode == 0:
         return

@@ -29,8 +29,13 @@ def environment(load_script, tmp_path, monkeypatch):
     monkeypatch.setattr(module, "_make", make)
     module.made = made
     yield module
-    for handle in module._HELD:
-        handle.close()
+    let_go(module)
+
+
+def let_go(module):
+    """Release the environments a module holds, as the end of its process would."""
+    while module._HELD:
+        module._HELD.pop().close()
 
 
 @pytest.fixture
@@ -114,8 +119,8 @@ def test_made_once_then_reused(environment):
 
 def test_half_built_is_made_again(environment):
     python = environment.prepare("run")
-    (python.parent.parent / "complete").unlink()
     shutil.rmtree(python.parent.parent)
+    let_go(environment)
     environment.prepare("run")
     assert len(environment.made) == 2
 
@@ -123,8 +128,7 @@ def test_half_built_is_made_again(environment):
 def test_new_pyproject_makes_a_new_one_and_sweeps_the_old(environment):
     old = environment.prepare("run").parent.parent
     other = environment.prepare("test").parent.parent
-    for handle in environment._HELD:
-        handle.close()
+    let_go(environment)
     with (environment.ROOT / "pyproject.toml").open("a", encoding="utf-8") as file:
         file.write("\n# changed\n")
     new = environment.prepare("run").parent.parent

@@ -425,12 +425,15 @@ class _Workers:
             w = self._width * factor
             self._local.factor = factor
             self._local.arrays = (
-                np.zeros((2, 6, w)),
+                np.zeros((2, 7, w)),
+                np.zeros((6, w)),
                 np.zeros((2, 3, 12 * w + 256)),
-                np.zeros((4, 2 * w)),
+                np.zeros((4, w)),
                 np.zeros((8 * w + 256, 16)),
                 np.zeros((2, 4 * w + 64)),
-                np.zeros((4, w)),
+                np.zeros((2, 16)),
+                np.zeros((1, 16)),
+                np.zeros((2, 4)),
             )
         arrays: tuple[NDArray[np.float64], ...] = self._local.arrays
         return arrays

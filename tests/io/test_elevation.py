@@ -135,6 +135,21 @@ def test_habitual_void_that_is_not_declared(make_dem, value):
     assert heights[0, 0] == value
 
 
+@pytest.mark.parametrize("layout", [{}, {"tiled": True, "blockxsize": 16, "blockysize": 16}])
+def test_blocks_that_were_never_written(make_dem, layout):
+    array = np.zeros((64, 64), np.float32)
+    array[:16, :16] = 5
+    sparse = open_terrain(make_dem("a.tif", array, sparse_ok=True, compress="lzw", **layout))
+    whole = open_terrain(make_dem("b.tif", array, compress="lzw", **layout))
+    void = open_terrain(make_dem("c.tif", array, sparse_ok=True, nodata=0, **layout))
+    if layout:
+        with pytest.warns(ViewshedWarning, match=r"a\.tif: 15 blocks of cells are missing"):
+            assert sparse.read(0, 0, 64, 64).sum() == 5 * 256
+    assert sparse.read(0, 0, 16, 16).sum() == 5 * 256
+    assert whole.read(0, 0, 64, 64).sum() == 5 * 256
+    assert np.isnan(void.read(0, 0, 64, 64)).sum() == 64 * 64 - 256
+
+
 # --- units --------------------------------------------------------------------------------------
 
 

@@ -298,7 +298,7 @@ def test_ctrl_c_ends_a_long_copy_soon(tmp_path):
     timer.start()
     with pytest.raises(KeyboardInterrupt):
         write_cog(tmp_path / "a.tif", array, a_grid(array.shape), nodata=np.nan, **SAID)
-    assert time.perf_counter() - start < 2.5
+    assert time.perf_counter() - start < 4
     assert not list(tmp_path.glob(".*"))
 
 

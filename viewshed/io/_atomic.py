@@ -28,6 +28,8 @@ except ImportError:  # pragma: no cover  (no such module on Windows)
     fcntl = None  # type: ignore[assignment]
 
 RECORD_NAME = "record.json"
+#: What a record says in its section ``format``.
+RECORD_FORMAT = "viewshed record"
 #: Files whose presence means that a folder holds results.
 RESULT_NAMES = (RECORD_NAME, *(f"{n.replace('-', '_')}.tif" for n in LAYERS), "map.png")
 
@@ -209,7 +211,7 @@ def _listed(folder: Path) -> list[str]:
         record: Any = json.loads(path.read_bytes())
     except (OSError, ValueError):
         record = None
-    if not isinstance(record, dict) or record.get("format") != "viewshed record":
+    if not isinstance(record, dict) or record.get("format") != RECORD_FORMAT:
         msg = f"{path}: is not a record of viewshed; move it away or choose another folder"
         raise OutputError(msg)
     outputs = record.get("outputs")

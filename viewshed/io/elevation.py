@@ -68,7 +68,7 @@ class Tile:
     transform: Affine
     crs_wkt: str
     dtype: str
-    block_rows: int
+    block: tuple[int, int]
     nodata: float | None
     is_masked: bool
     scale: float
@@ -290,7 +290,7 @@ def _describe(path: Path, stated: Any) -> Tile:
             transform=file.transform,
             crs_wkt=_crs_wkt(path, file, stated),
             dtype=file.dtypes[0],
-            block_rows=file.block_shapes[0][0],
+            block=file.block_shapes[0],
             nodata=file.nodata,
             is_masked=MaskFlags.per_dataset in flags and MaskFlags.nodata not in flags,
             scale=float(file.scales[0]),
@@ -420,14 +420,36 @@ def _read_tile(tile: Tile, row: int, col: int, out: Heights) -> bool:
             if not isnan(low):
                 known, lowest = True, min(lowest, low)
             np.copyto(part, heights, where=np.isnan(part))
+        missing = _missing_blocks(tile, file, row, col, out.shape)
+    if missing:
+        msg = (
+            f"{tile.path}: {missing} blocks of cells are missing in the file and count as height "
+            f"{tile.offset * tile.height_factor:g} m; if it was not written to its end, get it again"
+        )
+        warnings.warn(msg, ViewshedWarning, stacklevel=3)
     _warn_of_habitual_voids(tile, lowest)
     return known
+
+
+def _missing_blocks(tile: Tile, file: Any, row: int, col: int, shape: tuple[int, ...]) -> int:
+    """Count blocks of a window that a GeoTIFF does not hold and that are not read as voids.
+
+    A file whose writer was killed opens cleanly and reads as zeros there.
+    """
+    if file.driver not in {"GTiff", "COG"} or tile.nodata is not None or tile.is_masked:
+        return 0
+    high, wide = tile.block
+    return sum(
+        file.get_tag_item(f"BLOCK_OFFSET_{x}_{y}", "TIFF", 1) is None
+        for y in range(row // high, (row + shape[0] - 1) // high + 1)
+        for x in range(col // wide, (col + shape[1] - 1) // wide + 1)
+    )
 
 
 def _strips(tile: Tile, row: int, shape: tuple[int, ...]) -> Iterator[tuple[int, int]]:
     """Cut rows of a raster into strips of whole blocks: first row and number of rows."""
     rows, cols = shape[0], shape[1]
-    block = tile.block_rows
+    block = tile.block[0]
     step = max(1, _STRIP_CELLS // cols // block) * block
     first, end = row, row + rows
     while first < end:

@@ -355,8 +355,10 @@ def _quiet_stderr() -> Iterator[None]:
     """
     with _stderr_lock:
         try:
-            real = os.dup(2)
+            real = -1 if os.name == "nt" else os.dup(2)
         except OSError:
+            real = -1
+        if real < 0:
             yield
             return
         source, sink = os.pipe()

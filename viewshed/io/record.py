@@ -14,9 +14,7 @@ from typing import Any
 
 from viewshed.constants import CAUTIONS
 from viewshed.errors import DataError, OutputError
-from viewshed.io._atomic import RECORD_NAME, file_sha256, is_plain_name
-
-FORMAT = "viewshed record"
+from viewshed.io._atomic import RECORD_FORMAT, RECORD_NAME, file_sha256, is_plain_name
 
 #: Sections that a record must hold, with their JSON type.
 _SECTIONS: dict[str, type] = {
@@ -86,7 +84,7 @@ def build_record(
         If a section is missing or of the wrong type: a mistake in the calling code.
     """
     filled = {
-        "format": FORMAT,
+        "format": RECORD_FORMAT,
         "libraries": library_versions(),
         "cautions": CAUTIONS,
         **sections,
@@ -182,7 +180,7 @@ def matching(out_dir: str | os.PathLike[str]) -> bool:
 
 def _problem(record: object) -> str | None:
     """Say in words why this is no record, or give None."""
-    if not isinstance(record, dict) or record.get("format") != FORMAT:
+    if not isinstance(record, dict) or record.get("format") != RECORD_FORMAT:
         return "is not a record of viewshed"
     for name, kind in _SECTIONS.items():
         if not isinstance(record.get(name), kind):

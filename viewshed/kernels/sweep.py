@@ -72,46 +72,51 @@ def section_peak(u1, f1, u2, f2, kappa):
 
 
 @inline
-def cell_section(c, t):
+def cell_section(c, k, t):
     """Where the sight line t enters and leaves a cell: u1, f1, u2, f2, kappa.
 
-    `c` holds u, v, f of the corners (near line, low row), (near, high), (far, low), (far, high).
+    c[k, 4:] holds u, v, f of the corners (near line, low row), (near, high), (far, low),
+    (far, high).
     """
-    s00 = c[1] - t * c[0]
-    s01 = c[4] - t * c[3]
-    s10 = c[7] - t * c[6]
-    s11 = c[10] - t * c[9]
+    u00, v00, f00 = c[k, 4], c[k, 5], c[k, 6]
+    u01, v01, f01 = c[k, 7], c[k, 8], c[k, 9]
+    u10, v10, f10 = c[k, 10], c[k, 11], c[k, 12]
+    u11, v11, f11 = c[k, 13], c[k, 14], c[k, 15]
+    s00 = v00 - t * u00
+    s01 = v01 - t * u01
+    s10 = v10 - t * u10
+    s11 = v11 - t * u11
     if s00 > 0.0:
         x1 = s00 / (s00 - s10) if s10 < s00 else 1.0
         y1 = 0.0
-        u1 = c[0] + x1 * (c[6] - c[0])
-        f1 = c[2] + x1 * (c[8] - c[2])
+        u1 = u00 + x1 * (u10 - u00)
+        f1 = f00 + x1 * (f10 - f00)
     elif s01 < 0.0:
         x1 = s01 / (s01 - s11) if s11 > s01 else 1.0
         y1 = 1.0
-        u1 = c[3] + x1 * (c[9] - c[3])
-        f1 = c[5] + x1 * (c[11] - c[5])
+        u1 = u01 + x1 * (u11 - u01)
+        f1 = f01 + x1 * (f11 - f01)
     else:
         x1 = 0.0
         y1 = -s00 / (s01 - s00) if s01 > s00 else 0.0
-        u1 = c[0] + y1 * (c[3] - c[0])
-        f1 = c[2] + y1 * (c[5] - c[2])
+        u1 = u00 + y1 * (u01 - u00)
+        f1 = f00 + y1 * (f01 - f00)
     if s10 > 0.0:
         x2 = s00 / (s00 - s10) if s10 > s00 else 1.0
         y2 = 0.0
-        u2 = c[0] + x2 * (c[6] - c[0])
-        f2 = c[2] + x2 * (c[8] - c[2])
+        u2 = u00 + x2 * (u10 - u00)
+        f2 = f00 + x2 * (f10 - f00)
     elif s11 < 0.0:
         x2 = s01 / (s01 - s11) if s11 < s01 else 1.0
         y2 = 1.0
-        u2 = c[3] + x2 * (c[9] - c[3])
-        f2 = c[5] + x2 * (c[11] - c[5])
+        u2 = u01 + x2 * (u11 - u01)
+        f2 = f01 + x2 * (f11 - f01)
     else:
         x2 = 1.0
         y2 = -s10 / (s11 - s10) if s11 > s10 else 0.0
-        u2 = c[6] + y2 * (c[9] - c[6])
-        f2 = c[8] + y2 * (c[11] - c[8])
-    kappa = -(c[11] - c[8] - c[5] + c[2]) * (x2 - x1) * (y2 - y1)
+        u2 = u10 + y2 * (u11 - u10)
+        f2 = f10 + y2 * (f11 - f10)
+    kappa = -(f11 - f10 - f01 + f00) * (x2 - x1) * (y2 - y1)
     return u1, f1, u2, f2, kappa
 
 
@@ -151,30 +156,128 @@ def own_peak(own, t):
 
 
 @inline
-def arc_value(corners, own, t):
-    """Exact greatest f/u inside the cell of an arc at t; corners[0] = -BIG: the own cell."""
-    if corners[0] == -BIG:
+def arc_value(c, k, own, t):
+    """Exact greatest f/u inside the cell at t; c[k, 4] = -BIG stands for the own cell."""
+    if c[k, 4] == -BIG:
         return own_peak(own, t)
-    u1, f1, u2, f2, kappa = cell_section(corners, t)
+    u1, f1, u2, f2, kappa = cell_section(c, k, t)
     return section_peak(u1, f1, u2, f2, kappa)
 
 
 @inline
-def closed_value(corners, own, t):
+def closed_value(c, k, own, t):
     """As `arc_value`, the ends of the section included."""
-    if corners[0] == -BIG:
+    if c[k, 4] == -BIG:
         x, y, u = own_exit(own, t)
         g = -BIG
         if u > 0.0:
             g = own[O_F0] / u + (own[O_FA] * x + own[O_FB] * y + own[O_FAB] * x * y) / u
         return max(g, own_peak(own, t))
-    u1, f1, u2, f2, kappa = cell_section(corners, t)
+    u1, f1, u2, f2, kappa = cell_section(c, k, t)
     g = section_peak(u1, f1, u2, f2, kappa)
     if u1 > 0.0:
         g = max(g, f1 / u1)
     if u2 > 0.0:
         g = max(g, f2 / u2)
     return g
+
+
+@inline
+def merge_line(old, n_old, first, count, t, g, plane_a, plane_b, least, most, high, eps, new):
+    """Write to `new` the upper envelope of `old` and of the edges of one line of posts.
+
+    Edge n runs from post n to n + 1 and is unknown where plane_a[n] is NaN; least[n] and most[n]
+    bound `old` between these posts, so that most edges are taken or left as a whole. Returns the
+    number of pieces (0: `new` is too small), a lower bound of the result, and whether it differs.
+    """
+    room = new.shape[1] - 4
+    n = 0
+    k = 0
+    low = BIG
+    start = old[0, 0]
+    last_a = BIG
+    last_b = BIG
+    changed = False
+    for i in range(first, first + count):
+        stop = min(t[i + 1], high)
+        if stop <= start:
+            continue
+        sa = plane_a[i]
+        sb = plane_b[i]
+        known = sa == sa
+        g0 = g[i]
+        g1 = g[i + 1]
+        if known and min(g0, g1) >= most[i]:
+            if n > room:
+                return 0, low, True
+            new[0, n] = start
+            new[1, n] = sa
+            new[2, n] = sb
+            n += 1
+            last_a = sa
+            last_b = sb
+            low = min(low, min(g0, g1))
+            changed = True
+            while k < n_old - 1 and old[0, k + 1] <= stop:
+                k += 1
+            start = stop
+            continue
+        mixed = known and max(g0, g1) > least[i]
+        if not mixed:
+            low = min(low, least[i])
+        while start < stop:
+            if n > room:
+                return 0, low, True
+            while k < n_old - 1 and old[0, k + 1] <= start:
+                k += 1
+            end = min(old[0, k + 1], stop)
+            a = old[1, k]
+            b = old[2, k]
+            if mixed:
+                d0 = (sa - a) + (sb - b) * start
+                d1 = (sa - a) + (sb - b) * end
+                if d0 > eps or d1 > eps:
+                    changed = True
+                    if d0 < -eps or d1 < -eps:
+                        cut = start + (end - start) * (d0 / (d0 - d1))
+                        if start < cut < end:
+                            if d0 > 0.0:
+                                ca = sa
+                                cb = sb
+                            else:
+                                ca = a
+                                cb = b
+                                a = sa
+                                b = sb
+                            if ca != last_a or cb != last_b:
+                                new[0, n] = start
+                                new[1, n] = ca
+                                new[2, n] = cb
+                                n += 1
+                                last_a = ca
+                                last_b = cb
+                            low = min(low, min(ca + cb * start, ca + cb * cut))
+                            start = cut
+                        elif d1 > d0:
+                            a = sa
+                            b = sb
+                        else:
+                            a = sa
+                            b = sb
+                    else:
+                        a = sa
+                        b = sb
+                low = min(low, min(a + b * start, a + b * end))
+            if a != last_a or b != last_b:
+                new[0, n] = start
+                new[1, n] = a
+                new[2, n] = b
+                n += 1
+                last_a = a
+                last_b = b
+            start = end
+    new[0, n] = old[0, n_old]
+    return n, low, changed
 
 
 @inline
@@ -352,63 +455,6 @@ def line_coefficients(coef, degree, x, out):
 
 
 @inline
-def fill_line(z, ints, geo, own, j, lo, hi, poly, line):
-    """Fill line[:, n] = t, g, f, u, v, drop of the posts i = lo .. hi (f = NaN where unknown)."""
-    main_is_row = ints[MAIN_IS_ROW]
-    main = ints[BASE_MAIN] + ints[SIGN_MAIN] * j
-    sign = ints[SIGN_MINOR]
-    base = ints[BASE_MINOR]
-    degree = ints[DEGREE]
-    rows, cols = z.shape
-    n_minor = cols if main_is_row else rows
-    inside_main = 0 <= main < (rows if main_is_row else cols)
-    u_line = geo[X0] + j
-    ze = geo[Z_EYE]
-    inv_r = geo[INV_R]
-    d20 = geo[D20]
-    d11 = geo[D11]
-    d02 = geo[D02]
-    for n in range(hi - lo + 1):
-        i = lo + n
-        v = geo[Y0] + i
-        u = u_line
-        if degree > 1:
-            y = v / geo[SCALE]
-            u = 0.0
-            v = 0.0
-            for k in range(degree, -1, -1):
-                u = u * y + poly[0, k]
-                v = v * y + poly[1, k]
-        drop = d20 * u * u + d11 * u * v + d02 * v * v
-        minor = base + sign * i
-        f = np.nan
-        if inside_main and 0 <= minor < n_minor:
-            height = np.float64(z[main, minor]) if main_is_row else np.float64(z[minor, main])
-            f = (height - ze) * (1.0 - height * inv_r) - drop
-        line[2, n] = f
-        line[3, n] = u
-        line[4, n] = v
-        line[5, n] = drop
-    if j <= 1:  # the corners of the own cell, sharp however near the observer
-        for i in range(2):
-            n = i - lo
-            if 0 <= n <= hi - lo:
-                line[2, n] = own[O_F + 2 * j + i]
-                line[3, n] = own[O_U + 2 * j + i]
-                line[4, n] = own[O_V + 2 * j + i]
-    for n in range(hi - lo + 1):
-        u = line[3, n]
-        v = line[4, n]
-        if u > 0.0:
-            line[0, n] = v / u
-            g = line[2, n] / u
-            line[1, n] = g if g == g else -BIG
-        else:
-            line[0, n] = BIG if v > 0.0 else -BIG
-            line[1, n] = -BIG
-
-
-@inline
 def post_t(geo, degree, poly, j, i):
     """Direction t of post i of a line whose polynomial coefficients are in `poly`."""
     v = geo[Y0] + i
@@ -426,16 +472,317 @@ def post_t(geo, degree, poly, j, i):
 
 
 @inline
-def edge_plane(line0, n0, line1, n1):
-    """A and B of the plane f = A u + B v through the observer and two posts."""
-    u0 = line0[3, n0]
-    v0 = line0[4, n0]
-    f0 = line0[2, n0]
-    u1 = line1[3, n1]
-    v1 = line1[4, n1]
-    f1 = line1[2, n1]
-    det = u0 * v1 - u1 * v0
-    return (f0 * v1 - f1 * v0) / det, (u0 * f1 - u1 * f0) / det
+def fetch(z, main_is_row, main, minor, sign, heights, n):
+    """Copy n elevations of one line into heights, NaN outside the grid."""
+    rows, cols = z.shape
+    n_minor = cols if main_is_row else rows
+    inside = 0 <= main < (rows if main_is_row else cols)
+    start = 0
+    stop = n
+    if sign > 0:
+        start = min(max(0, -minor), n)
+        stop = max(min(n, n_minor - minor), start)
+    else:
+        start = min(max(0, minor - n_minor + 1), n)
+        stop = max(min(n, minor + 1), start)
+    if not inside:
+        stop = start
+    for m in range(start):
+        heights[m] = np.nan
+    for m in range(stop, n):
+        heights[m] = np.nan
+    if main_is_row:
+        for m in range(start, stop):
+            heights[m] = z[main, minor + sign * m]
+    else:
+        for m in range(start, stop):
+            heights[m] = z[minor + sign * m, main]
+
+
+@inline
+def place(degree, y0, lo, u_line, scale, poly, u, v, n):
+    """Fill the coordinates u, v of n posts of a line from row lo on."""
+    if degree <= 1:
+        for m in range(n):
+            u[m] = u_line
+        for m in range(n):
+            v[m] = y0 + (lo + m)
+        return
+    for m in range(n):
+        u[m] = poly[0, degree]
+    for m in range(n):
+        v[m] = poly[1, degree]
+    turn = 1.0 / scale  # a power of two: the product is exact
+    for k in range(degree - 1, -1, -1):
+        pu = poly[0, k]
+        pv = poly[1, k]
+        for m in range(n):
+            u[m] = u[m] * ((y0 + (lo + m)) * turn) + pu
+        for m in range(n):
+            v[m] = v[m] * ((y0 + (lo + m)) * turn) + pv
+
+
+@inline
+def flatten(heights, raise_by, geo, u, v, f, n):
+    """Flat heights of n posts (of points `raise_by` above them)."""
+    ze = geo[Z_EYE]
+    inv_r = geo[INV_R]
+    d20 = geo[D20]
+    d11 = geo[D11]
+    d02 = geo[D02]
+    for m in range(n):
+        h = heights[m] + raise_by
+        f[m] = (h - ze) * (1.0 - h * inv_r) - (d20 * u[m] * u[m] + d11 * u[m] * v[m] + d02 * v[m] * v[m])
+
+
+@inline
+def directions(u, v, f, t, g, n):
+    """Fill t = v / u and g = f / u, g = -BIG where unknown or not ahead."""
+    for m in range(n):
+        t[m] = v[m] / u[m] if u[m] > 0.0 else (BIG if v[m] > 0.0 else -BIG)
+    for m in range(n):
+        q = f[m] / u[m]
+        g[m] = q if (u[m] > 0.0 and q == q) else -BIG
+
+
+@inline
+def greatest(g, lo, hi):
+    """Greatest of g[lo:hi] (four chains, since one would wait on itself)."""
+    a = -BIG
+    b = -BIG
+    c = -BIG
+    d = -BIG
+    m = lo
+    while m + 3 < hi:
+        a = g[m] if g[m] > a else a
+        b = g[m + 1] if g[m + 1] > b else b
+        c = g[m + 2] if g[m + 2] > c else c
+        d = g[m + 3] if g[m + 3] > d else d
+        m += 4
+    while m < hi:
+        a = g[m] if g[m] > a else a
+        m += 1
+    return max(max(a, b), max(c, d))
+
+
+@inline
+def edge_planes(u, v, f, plane_a, plane_b, n):
+    """Planes f = A u + B v through the observer and each pair of neighbours of a line."""
+    for m in range(n - 1):
+        plane_a[m] = (f[m] * v[m + 1] - f[m + 1] * v[m]) / (u[m] * v[m + 1] - u[m + 1] * v[m])
+    for m in range(n - 1):
+        plane_b[m] = (u[m] * f[m + 1] - u[m + 1] * f[m]) / (u[m] * v[m + 1] - u[m + 1] * v[m])
+
+
+@inline
+def load_corners(pu, pv, pf, a, u, v, f, b, out, k):
+    """Copy u, v, f of the corners of a cell between two lines; False if one is void.
+
+    Posts a, a + 1 of the line before and b, b + 1 of this line.
+    """
+    for m in range(2):
+        out[k, 4 + 3 * m] = pu[a + m]
+        out[k, 5 + 3 * m] = pv[a + m]
+        out[k, 6 + 3 * m] = pf[a + m]
+        out[k, 10 + 3 * m] = u[b + m]
+        out[k, 11 + 3 * m] = v[b + m]
+        out[k, 12 + 3 * m] = f[b + m]
+    total = pf[a] + pf[a + 1] + f[b] + f[b + 1]
+    return total == total
+
+
+@inline
+def own_strip_horizon(pu, pv, pf, a, u, v, f, b, j, i, t, own, own_known, cell):
+    """Horizon that the last strip before a target puts in its own way.
+
+    That is the bulge of the cell the sight line ends in and, where it crosses more than one cell
+    of the strip, what it crosses before. The target is post b of this line, post a stands on the
+    same row of the line before.
+    """
+    best = -BIG
+    side = pv[a] - t * pu[a]
+    if side == 0.0:
+        return best
+    step = -1 if side > 0.0 else 1
+    row = i - 1 if side > 0.0 else i
+    for _ in range(3):
+        at_a = a + row - i
+        at_b = b + row - i
+        known = load_corners(pu, pv, pf, at_a, u, v, f, at_b, cell, 0)
+        if j == 1 and row == 0:
+            if own_known:
+                best = max(best, own_peak(own, t))
+            return best
+        if known:
+            u1, f1, u2, f2, kappa = cell_section(cell, 0, t)
+            best = max(best, section_peak(u1, f1, u2, f2, kappa))
+        if step > 0:
+            at_a += 1
+            at_b += 1
+        near = pv[at_a] - t * pu[at_a]
+        if (step < 0 and near <= 0.0) or (step > 0 and near >= 0.0):
+            return best
+        far = v[at_b] - t * u[at_b]
+        if near != far:
+            x = near / (near - far)
+            uu = pu[at_a] + x * (u[at_b] - pu[at_a])
+            ff = pf[at_a] + x * (f[at_b] - pf[at_a])
+            if ff == ff and uu > 0.0:
+                best = max(best, ff / uu)
+        row += step
+    return best
+
+
+@inline
+def add_arcs(cell, is_own, ts, gs, own, env, n_env, low, high, slack, eps, arcs, n_arcs):
+    """Keep the parts of a cell whose chord stands above the envelope; -1 if there is no room.
+
+    ts, gs: t and g of the four corners, which are where the convex pieces of the cell meet.
+    """
+    for a in range(1, 4):  # sort four corners
+        value = ts[a]
+        other = gs[a]
+        b = a
+        while b > 0 and ts[b - 1] > value:
+            ts[b] = ts[b - 1]
+            gs[b] = gs[b - 1]
+            b -= 1
+        ts[b] = value
+        gs[b] = other
+    t1 = min(max(ts[0], low), high)
+    g1 = gs[0]
+    if is_own or t1 != ts[0]:
+        g1 = closed_value(cell, 0, own, t1)
+    for a in range(3):
+        t0 = t1
+        g0 = g1
+        t1 = min(max(ts[a + 1], low), high)
+        if t1 <= t0:
+            continue
+        g1 = gs[3]
+        if is_own or a < 2 or t1 != ts[3]:
+            g1 = closed_value(cell, 0, own, t1)
+        rise = (g1 - g0) / (t1 - t0)
+        level = g0 - rise * t0 + slack
+        first, last = above(env, n_env, level, rise, t0, t1, eps)
+        if first < last:
+            if n_arcs >= arcs.shape[0]:
+                return -1
+            arcs[n_arcs, 0] = first
+            arcs[n_arcs, 1] = last
+            arcs[n_arcs, 2] = level
+            arcs[n_arcs, 3] = rise
+            for k in range(4, 16):
+                arcs[n_arcs, k] = cell[0, k]
+            n_arcs += 1
+    return n_arcs
+
+
+@inline
+def may_bulge(c, t_low, t_high):
+    """False where g surely grows through the whole cell, so that it has no greatest inside."""
+    f00, f01, f10, f11 = c[0, 6], c[0, 9], c[0, 12], c[0, 15]
+    along = min(f10 - f00, f11 - f01)
+    across = min(f01 - f00, f11 - f10)
+    rise = along + (across * t_low if across > 0.0 else across * t_high)
+    top = max(max(f00, f01), max(f10, f11))
+    reach = min(c[0, 4], c[0, 7]) if rise > 0.0 else max(c[0, 10], c[0, 13])
+    # the margin covers cells that are not quite square in (u, v)
+    return rise * reach - 0.02 * abs(rise * reach) < top + 0.02 * abs(top)
+
+
+@inline
+def add_strip_gaps(pt, pf, t, f, shift, from_a, to_a, j, lo_prev, low, high, gaps, n_gaps):
+    """Add the directions of the unknown cells of a strip to the gaps; -1 if there is no room.
+
+    Cells from_a .. to_a (counted on the line before; post a is post a + shift of this line).
+    """
+    run_a = BIG
+    run_b = -BIG
+    for a in range(from_a, to_a + 1):
+        b = a + shift
+        some = pf[a] + pf[a + 1] + f[b] + f[b + 1]
+        if some == some:
+            continue
+        t0 = min(min(pt[a], pt[a + 1]), min(t[b], t[b + 1]))
+        t1 = max(max(pt[a], pt[a + 1]), max(t[b], t[b + 1]))
+        if j == 1 and lo_prev + a == 0:
+            t0 = t[b]
+            t1 = BIG
+        if t1 <= low or t0 >= high:
+            continue
+        if t0 < run_b:  # overlaps the run of cells before it
+            run_a = min(run_a, t0)
+            run_b = max(run_b, t1)
+        else:
+            if run_a < run_b:
+                n_gaps = add_gap(gaps, n_gaps, run_a, run_b)
+                if n_gaps < 0:
+                    return -1
+            run_a = t0
+            run_b = t1
+    if run_a < run_b:
+        n_gaps = add_gap(gaps, n_gaps, run_a, run_b)
+    return n_gaps
+
+
+@inline
+def survey_line(env, n_env, first, count, t, low, high, at, least, most):
+    """Envelope at each post of a line, and its least and greatest between neighbours."""
+    k = 0
+    for n in range(first, first + count + 1):
+        here = min(max(t[n], low), high)
+        while k < n_env - 1 and env[0, k + 1] <= here:
+            k += 1
+        a = env[1, k]
+        b = env[2, k]
+        value = a + b * here
+        bottom = value
+        peak = value
+        if k > 0 and env[0, k] == here:
+            value = max(value, env[1, k - 1] + env[2, k - 1] * here)
+        at[n] = value
+        if n == first + count:
+            return
+        there = min(max(t[n + 1], low), high)
+        while k < n_env - 1 and env[0, k + 1] < there:
+            edge = env[0, k + 1]
+            w = a + b * edge
+            bottom = min(bottom, w)
+            peak = max(peak, w)
+            k += 1
+            a = env[1, k]
+            b = env[2, k]
+            w = a + b * edge
+            bottom = min(bottom, w)
+            peak = max(peak, w)
+        w = a + b * there
+        least[n] = min(bottom, w)
+        most[n] = max(peak, w)
+
+
+@inline
+def wanted(ints, geo, piece, j, i, t, u, v):
+    """Whether a post is a question of this wedge: its own, within range and bearings."""
+    if t < piece[0] or t >= piece[1]:
+        return False
+    if geo[G20] * u * u + geo[G11] * u * v + geo[G02] * v * v > geo[RANGE2]:
+        return False
+    along = geo[X0] + j
+    across = geo[Y0] + i
+    if across < 0.0 or across > along:
+        return False
+    if across == along and ints[OWN_DIAGONAL] == 0:
+        return False
+    if across == 0.0 and ints[OWN_AXIS] == 0:
+        return False
+    if ints[HAS_BEARINGS]:
+        past_from = geo[B_FROM_U] * v - geo[B_FROM_V] * u >= -1e-12 * u
+        before_to = u * geo[B_TO_V] - v * geo[B_TO_U] >= -1e-12 * u
+        if ints[WIDE_BEARINGS]:
+            return past_from or before_to
+        return past_from and before_to
+    return True
 
 
 @inline
@@ -460,113 +807,6 @@ def own_plane(own, far, edge):
     return (r1 * p22 - r2 * p12) / det, (p11 * r2 - p21 * r1) / det
 
 
-@inline
-def load_corners(prev, lo_prev, line, lo, row, out):
-    """Copy u, v, f of the four corners of cell `row` between two lines; False if one is void."""
-    for k in range(2):
-        a = row + k - lo_prev
-        b = row + k - lo
-        out[3 * k] = prev[3, a]
-        out[3 * k + 1] = prev[4, a]
-        out[3 * k + 2] = prev[2, a]
-        out[6 + 3 * k] = line[3, b]
-        out[6 + 3 * k + 1] = line[4, b]
-        out[6 + 3 * k + 2] = line[2, b]
-    total = out[2] + out[5] + out[8] + out[11]
-    return total == total
-
-
-@inline
-def own_strip_horizon(prev, lo_prev, line, lo, j, i, t, own, own_known, corners):
-    """Horizon that the last strip before a target puts in its own way.
-
-    That is the bulge of the cell the sight line ends in and, where it crosses more than one cell
-    of the strip, what it crosses before.
-    """
-    best = -BIG
-    side = prev[4, i - lo_prev] - t * prev[3, i - lo_prev]
-    step = -1 if side > 0.0 else 1
-    if side == 0.0:
-        return best
-    row = i - 1 if side > 0.0 else i
-    for _ in range(4):
-        if row < lo_prev or row < lo:
-            return best
-        known = load_corners(prev, lo_prev, line, lo, row, corners)
-        if j == 1 and row == 0:
-            if own_known:
-                best = max(best, own_peak(own, t))
-            return best
-        if known:
-            u1, f1, u2, f2, kappa = cell_section(corners, t)
-            best = max(best, section_peak(u1, f1, u2, f2, kappa))
-        edge = row if step < 0 else row + 1
-        near = prev[4, edge - lo_prev] - t * prev[3, edge - lo_prev]
-        if (step < 0 and near <= 0.0) or (step > 0 and near >= 0.0):
-            return best
-        far = line[4, edge - lo] - t * line[3, edge - lo]
-        if near != far:
-            x = near / (near - far)
-            u = prev[3, edge - lo_prev] + x * (line[3, edge - lo] - prev[3, edge - lo_prev])
-            f = prev[2, edge - lo_prev] + x * (line[2, edge - lo] - prev[2, edge - lo_prev])
-            if f == f and u > 0.0:
-                best = max(best, f / u)
-        row += step
-    return best
-
-
-@inline
-def add_arcs(corners, is_own, ts, own, env, n_env, low, high, slack, eps, arcs, n_arcs):
-    """Keep the parts of a cell whose chord stands above the envelope; -1 if there is no room.
-
-    `ts`: the directions of the four corners, which are where the convex pieces of the cell meet.
-    """
-    for a in range(1, 4):  # sort four numbers
-        value = ts[a]
-        b = a
-        while b > 0 and ts[b - 1] > value:
-            ts[b] = ts[b - 1]
-            b -= 1
-        ts[b] = value
-    t1 = min(max(ts[0], low), high)
-    g1 = closed_value(corners, own, t1)
-    for a in range(3):
-        t0 = t1
-        g0 = g1
-        t1 = min(max(ts[a + 1], low), high)
-        if t1 <= t0:
-            continue
-        g1 = closed_value(corners, own, t1)
-        rise = (g1 - g0) / (t1 - t0)
-        level = g0 - rise * t0 + slack
-        first, last = above(env, n_env, level, rise, t0, t1, eps)
-        if first < last:
-            if n_arcs >= arcs.shape[0]:
-                return -1
-            arcs[n_arcs, 0] = first
-            arcs[n_arcs, 1] = last
-            arcs[n_arcs, 2] = level
-            arcs[n_arcs, 3] = rise
-            for k in range(12):
-                arcs[n_arcs, 4 + k] = corners[k]
-            if is_own:
-                arcs[n_arcs, 4] = -BIG
-            n_arcs += 1
-    return n_arcs
-
-
-@inline
-def may_bulge(c, t_low, t_high):
-    """False where g surely grows through the whole cell, so that it has no greatest inside."""
-    along = min(c[8] - c[2], c[11] - c[5])
-    across = min(c[5] - c[2], c[11] - c[8])
-    rise = along + (across * t_low if across > 0.0 else across * t_high)
-    top = max(max(c[2], c[5]), max(c[8], c[11]))
-    reach = min(c[0], c[3]) if rise > 0.0 else max(c[6], c[9])
-    # the margin covers cells that are not quite square in (u, v)
-    return rise * reach - 0.02 * abs(rise * reach) < top + 0.02 * abs(top)
-
-
 @kernel
 def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
     """Answer every target of one wedge of an octant.
@@ -587,37 +827,34 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
         Directions answered, from piece[0] up to but not at piece[1], and those swept, piece[2]
         to piece[3].
     work : tuple of arrays
-        Scratch space: lines (2, 6, w), env (2, 3, e), seg (4, w), arcs (a, 16), gaps (2, b),
-        horizon (4, w).
+        Scratch space: lines (2, 7, w), post (6, w), env (2, 3, e), seg (4, w), arcs (a, 16),
+        gaps (2, b), poly (2, n + 1), cell (1, 16), corner (2, 4).
 
     Returns
     -------
     int
         DONE, or FULL if some scratch array is too small; nothing it wrote is wrong then.
     """
-    lines, envs, seg, arcs, gaps, scratch = work
+    lines, post, envs, seg, arcs, gaps, poly, cell, corner = work
     degree = ints[DEGREE]
+    curved = degree > 1
     own_known = ints[OWN_KNOWN] != 0
     want_clearance = ints[WANT_CLEARANCE] != 0
-    curved = degree > 1
+    main_is_row = ints[MAIN_IS_ROW] != 0
+    sign = ints[SIGN_MINOR]
     eps = geo[EPS]
+    target = geo[TARGET]
     low = piece[2]
     high = piece[3]
     width = lines.shape[2]
-    main_is_row = ints[MAIN_IS_ROW]
     rows, cols = z.shape
     n_minor = cols if main_is_row else rows
-    target = geo[TARGET]
-    inv_r = geo[INV_R]
-    ze = geo[Z_EYE]
 
-    poly = np.empty((2, degree + 1))
-    corners = np.empty(12)
-    ts = np.empty(4)
-    at = scratch[0]  # horizon at each post
-    least = scratch[1]  # least envelope over each interval between posts
-    wants = scratch[2]  # 1 where the post is an open question of this wedge
-    target_f = scratch[3]
+    ts = corner[0]
+    gs = corner[1]
+    heights, at, least, most, wants, goal = (
+        post[0], post[1], post[2], post[3], post[4], post[5],
+    )  # fmt: skip
 
     which = 0
     env = envs[0]
@@ -630,24 +867,36 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
     n_arcs = 0
     n_gaps = 0
 
-    prev = lines[0]
-    line = lines[1]
+    # line 0, at or just behind the observer
     lo_prev = -4
-    hi_prev = 6
-    if hi_prev - lo_prev + 1 > width:
+    n_prev = 11
+    if n_prev > width:
         return FULL
+    x = geo[X0] / geo[SCALE]
     if curved:
-        line_coefficients(coef_u, degree, geo[X0] / geo[SCALE], poly[0])
-        line_coefficients(coef_v, degree, geo[X0] / geo[SCALE], poly[1])
-    fill_line(z, ints, geo, own, 0, lo_prev, hi_prev, poly, prev)
+        line_coefficients(coef_u, degree, x, poly[0])
+        line_coefficients(coef_v, degree, x, poly[1])
+    before = lines[0]
+    fetch(z, main_is_row, ints[BASE_MAIN], ints[BASE_MINOR] + sign * lo_prev, sign, heights, n_prev)
+    place(degree, geo[Y0], lo_prev, geo[X0], geo[SCALE], poly, before[3], before[4], n_prev)
+    flatten(heights, 0.0, geo, before[3], before[4], before[2], n_prev)
+    for i in range(2):
+        before[2, i - lo_prev] = own[O_F + i]
+        before[3, i - lo_prev] = own[O_U + i]
+        before[4, i - lo_prev] = own[O_V + i]
+    directions(before[3], before[4], before[2], before[0], before[1], n_prev)
+    planes_prev = False
+    void_prev = True
+    top_prev = BIG
     first_prev = 0
     last_prev = 2
     first = 0
     last = 1
 
     for j in range(1, ints[LAST_LINE] + 1):
+        u_line = geo[X0] + j
         if curved:
-            x = (geo[X0] + j) / geo[SCALE]
+            x = u_line / geo[SCALE]
             line_coefficients(coef_u, degree, x, poly[0])
             line_coefficients(coef_v, degree, x, poly[1])
         # posts that straddle the wedge: t[first] <= low < ..., ... < high <= t[last]
@@ -662,288 +911,253 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
         while last - 1 > first and post_t(geo, degree, poly, j, last - 1) >= high:
             last -= 1
         lo = min(first, first_prev) - 3
-        hi = max(last, last_prev) + 3
-        if hi - lo + 1 > width:
+        count = max(last, last_prev) + 4 - lo
+        if count > width:
             return FULL
+        main = ints[BASE_MAIN] + ints[SIGN_MAIN] * j
+        minor = ints[BASE_MINOR] + sign * lo
         # outside the grid for good?
-        end_a = ints[BASE_MINOR] + ints[SIGN_MINOR] * lo
-        end_b = ints[BASE_MINOR] + ints[SIGN_MINOR] * hi
-        if max(end_a, end_b) < -ints[MARGIN] or min(end_a, end_b) >= n_minor + ints[MARGIN]:
+        beyond = minor + sign * (count - 1)
+        if max(minor, beyond) < -ints[MARGIN] or min(minor, beyond) >= n_minor + ints[MARGIN]:
             return DONE
-        fill_line(z, ints, geo, own, j, lo, hi, poly, line)
+
+        before = lines[(j - 1) & 1]
+        here = lines[j & 1]
+        pt, pg, pf, pu, pv, pa, pb = (
+            before[0], before[1], before[2], before[3], before[4], before[5], before[6],
+        )  # fmt: skip
+        t, g, f, u, v, ea, eb = here[0], here[1], here[2], here[3], here[4], here[5], here[6]
+        fetch(z, main_is_row, main, minor, sign, heights, count)
+        place(degree, geo[Y0], lo, u_line, geo[SCALE], poly, u, v, count)
+        flatten(heights, 0.0, geo, u, v, f, count)
+        if j == 1:  # the corners of the own cell, sharp however near the observer
+            for i in range(2):
+                if 0 <= i - lo < count:
+                    f[i - lo] = own[O_F + 2 + i]
+                    u[i - lo] = own[O_U + 2 + i]
+                    v[i - lo] = own[O_V + 2 + i]
+        directions(u, v, f, t, g, count)
         if j == 1:
             # Edges of the first strip begin behind the observer: ahead of it they come from
             # straight left or right, whichever side of the observer they pass.
-            for i in range(max(lo, lo_prev), min(hi, hi_prev) + 1):
+            for i in range(max(lo, lo_prev), min(lo + count, lo_prev + n_prev)):
                 a = i - lo_prev
                 b = i - lo
-                if prev[3, a] <= 0.0 and line[3, b] > 0.0:
-                    passes = prev[4, a] * line[3, b] - line[4, b] * prev[3, a]
-                    prev[0, a] = BIG if passes > 0.0 else -BIG
+                if pu[a] <= 0.0 and u[b] > 0.0:
+                    passes = pv[a] * u[b] - v[b] * pu[a]
+                    pt[a] = BIG if passes > 0.0 else -BIG
             if geo[Y0] == 0.0:
-                prev[0, 0 - lo_prev] = line[0, 0 - lo]
+                pt[0 - lo_prev] = t[0 - lo]
             elif own_known:
-                prev[0, 0 - lo_prev] = -BIG
-                prev[0, 1 - lo_prev] = BIG
+                pt[0 - lo_prev] = -BIG
+                pt[1 - lo_prev] = BIG
 
-        # the unknown
+        n_first = first - lo
+        n_last = last - lo
         cell_lo = min(first, first_prev) - 1
         cell_hi = max(last, last_prev)
+        shift = lo_prev - lo  # post a of the line before stands on the row of post a + shift
+        top = greatest(g, cell_lo - lo, cell_hi + 2 - lo)
         total = 0.0
-        top = -BIG
-        for i in range(cell_lo, cell_hi + 2):
-            total += line[2, i - lo] + prev[2, i - lo_prev]
-            top = max(top, max(line[1, i - lo], prev[1, i - lo_prev]))
-        has_void = total != total
-        if has_void:
-            run_a = BIG
-            run_b = -BIG
-            for i in range(cell_lo, cell_hi + 1):
-                a = i - lo_prev
-                b = i - lo
-                some = prev[2, a] + prev[2, a + 1] + line[2, b] + line[2, b + 1]
-                if some == some:
-                    continue
-                t0 = min(min(prev[0, a], prev[0, a + 1]), min(line[0, b], line[0, b + 1]))
-                t1 = max(max(prev[0, a], prev[0, a + 1]), max(line[0, b], line[0, b + 1]))
-                if j == 1 and i == 0:
-                    t0 = line[0, b]
-                    t1 = BIG
-                if t1 <= low or t0 >= high:
-                    continue
-                if t0 < run_b:  # overlaps the run of cells before it
-                    run_a = min(run_a, t0)
-                    run_b = max(run_b, t1)
-                else:
-                    if run_a < run_b:
-                        n_gaps = add_gap(gaps, n_gaps, run_a, run_b)
-                        if n_gaps < 0:
-                            return FULL
-                    run_a = t0
-                    run_b = t1
-            if run_a < run_b:
-                n_gaps = add_gap(gaps, n_gaps, run_a, run_b)
-                if n_gaps < 0:
-                    return FULL
+        for n in range(cell_lo - lo, cell_hi + 2 - lo):
+            total += f[n]
+        void = total != total
+        if void or void_prev:
+            n_gaps = add_strip_gaps(
+                pt, pf, t, f, shift, cell_lo - lo_prev, cell_hi - lo_prev, j, lo_prev, low, high,
+                gaps, n_gaps,
+            )  # fmt: skip
+            if n_gaps < 0:
+                return FULL
 
-        # the envelope at the posts and its least value between them
-        k = 0
-        for i in range(first, last + 1):
-            n = i - lo
-            t = min(max(line[0, n], low), high)
-            while k < n_env - 1 and env[0, k + 1] <= t:
-                k += 1
-            value = env[1, k] + env[2, k] * t
-            if k > 0 and env[0, k] == t:
-                value = max(value, env[1, k - 1] + env[2, k - 1] * t)
-            at[n] = value
-            bottom = min(env[1, k] + env[2, k] * t, value)
-            t_next = min(max(line[0, n + 1], low), high)
-            m = k
-            while m < n_env - 1 and env[0, m + 1] < t_next:
-                edge = env[0, m + 1]
-                bottom = min(bottom, env[1, m] + env[2, m] * edge)
-                m += 1
-                bottom = min(bottom, env[1, m] + env[2, m] * edge)
-            least[n] = min(bottom, env[1, m] + env[2, m] * t_next)
-
-        # which posts are questions of this wedge, and what their own strip says
+        # targets
+        top_goal = top
+        if target == 0.0:
+            for n in range(n_first, n_last + 1):
+                goal[n] = f[n]
+        else:
+            flatten(heights, target, geo, u, v, goal, count)
+            top_goal = -BIG
+            for n in range(n_first, n_last + 1):
+                if goal[n] > top_goal * u[n]:
+                    top_goal = goal[n] / u[n]
         nearest = BIG
-        a_main = geo[X0] + j
-        for i in range(first, last + 1):
-            n = i - lo
-            wants[n] = 0.0
-            u = line[3, n]
-            v = line[4, n]
-            dist2 = geo[G20] * u * u + geo[G11] * u * v + geo[G02] * v * v
-            nearest = min(nearest, dist2)
-            t = line[0, n]
-            f = line[2, n]
-            if not (f == f) or t < piece[0] or t >= piece[1] or dist2 > geo[RANGE2]:
-                continue
-            b_minor = geo[Y0] + i
-            if b_minor < 0.0 or b_minor > a_main:
-                continue
-            if b_minor == a_main and not ints[OWN_DIAGONAL]:
-                continue
-            if b_minor == 0.0 and not ints[OWN_AXIS]:
-                continue
-            if ints[HAS_BEARINGS]:
-                past_from = geo[B_FROM_U] * v - geo[B_FROM_V] * u >= -1e-12 * u
-                before_to = u * geo[B_TO_V] - v * geo[B_TO_U] >= -1e-12 * u
-                if ints[WIDE_BEARINGS]:
-                    if not (past_from or before_to):
-                        continue
-                elif not (past_from and before_to):
-                    continue
-            minor = ints[BASE_MINOR] + ints[SIGN_MINOR] * i
-            main = ints[BASE_MAIN] + ints[SIGN_MAIN] * j
-            height = np.float64(z[main, minor]) if main_is_row else np.float64(z[minor, main])
-            height += target
-            ft = (height - ze) * (1.0 - height * inv_r) - line[5, n]
-            target_f[n] = ft
-            wants[n] = 1.0
-            if not want_clearance and ft - at[n] * u < 0.0:
-                continue
-            a = i - lo_prev
-            if j > 2:
-                if not curved:  # the last cell alone, and only if it is concave along the line
-                    twist = line[2, n] - line[2, n - 1] - prev[2, a] + prev[2, a - 1]
-                    if twist >= 0.0:
-                        continue
-                highest = -BIG
-                for m in range(-2, 3):
-                    highest = max(highest, max(line[1, n + m], prev[1, a + m]))
-                if highest <= at[n]:
-                    continue
-                if not want_clearance and ft - highest * u > 1e-9:
-                    continue
-            here = own_strip_horizon(prev, lo_prev, line, lo, j, i, t, own, own_known, corners)
-            at[n] = max(at[n], here)
-
-        # cells that may rise above the envelope
-        for k in range(n_arcs):
-            t0 = arcs[k, 0]
-            t1 = arcs[k, 1]
-            i = int(np.ceil(t0 * a_main - geo[Y0]))
-            i = min(max(i, first), last)
-            while i > first and line[0, i - 1 - lo] >= t0:
-                i -= 1
-            while i <= last and line[0, i - lo] < t0:
-                i += 1
-            while i <= last:
-                n = i - lo
-                t = line[0, n]
-                if t > t1:
-                    break
-                if wants[n] != 0.0:
-                    bound = arcs[k, 2] + arcs[k, 3] * t
-                    if bound > at[n]:
-                        u = line[3, n]
-                        ft = target_f[n]
-                        if want_clearance or (
-                            ft - at[n] * u >= 0.0 and ft - bound * u < 1e-9
-                        ):
-                            at[n] = max(at[n], arc_value(arcs[k, 4:], own, t))
-                i += 1
-
-        # the answers
-        main = ints[BASE_MAIN] + ints[SIGN_MAIN] * j
-        for i in range(first, last + 1):
-            n = i - lo
-            if wants[n] == 0.0:
-                continue
-            minor = ints[BASE_MINOR] + ints[SIGN_MINOR] * i
-            r = main if main_is_row else minor
-            c = minor if main_is_row else main
-            clear = target_f[n] - at[n] * line[3, n]
-            answer = 0
-            if clear >= 0.0:
-                answer = 1
-                if n_gaps > 0 and in_gap(gaps, n_gaps, line[0, n]):
-                    answer = 2
-            state[r, c] = answer
-            if want_clearance:
-                if answer == 2:
-                    clearance[r, c] = np.nan
-                elif at[n] <= -BIG:
-                    clearance[r, c] = np.inf
-                else:
-                    clearance[r, c] = clear
+        for n in range(n_first, n_last + 1):
+            dist2 = geo[G20] * u[n] * u[n] + geo[G11] * u[n] * v[n] + geo[G02] * v[n] * v[n]
+            nearest = dist2 if dist2 < nearest else nearest
         if nearest > geo[RANGE2]:
             return DONE
 
+        if top_goal + 1e-12 < env_low and not want_clearance:
+            for n in range(n_first, n_last + 1):
+                if f[n] == f[n] and wanted(ints, geo, piece, j, lo + n, t[n], u[n], v[n]):
+                    k = minor + sign * n
+                    if main_is_row:
+                        state[main, k] = 0
+                    else:
+                        state[k, main] = 0
+        else:
+            survey_line(env, n_env, n_first, n_last - n_first, t, low, high, at, least, most)
+            # the questions, and what their own strip says
+            for n in range(n_first, n_last + 1):
+                i = lo + n
+                wants[n] = 0.0
+                if not (f[n] == f[n] and wanted(ints, geo, piece, j, i, t[n], u[n], v[n])):
+                    continue
+                wants[n] = 1.0
+                if not want_clearance and goal[n] - at[n] * u[n] < 0.0:
+                    continue
+                a = n - shift
+                if j > 2:
+                    highest = max(max(g[n - 1], g[n]), max(pg[a - 1], pg[a]))
+                    if curved:
+                        for m in (-2, 1, 2):
+                            highest = max(highest, max(g[n + m], pg[a + m]))
+                    elif f[n] - f[n - 1] - pf[a] + pf[a - 1] >= 0.0:
+                        continue  # the last cell is not concave along the sight line
+                    if highest <= at[n]:
+                        continue
+                    if not want_clearance and goal[n] - highest * u[n] > 1e-9:
+                        continue
+                strip = own_strip_horizon(
+                    pu, pv, pf, a, u, v, f, n, j, i, t[n], own, own_known, cell
+                )
+                at[n] = max(at[n], strip)
+            # cells that may rise above the envelope
+            for k in range(n_arcs):
+                t0 = arcs[k, 0]
+                t1 = arcs[k, 1]
+                n = int(t0 * u_line - geo[Y0]) + 1 - lo
+                n = min(max(n, n_first), n_last)
+                while n > n_first and t[n - 1] >= t0:
+                    n -= 1
+                while n <= n_last and t[n] < t0:
+                    n += 1
+                while n <= n_last and t[n] <= t1:
+                    bound = arcs[k, 2] + arcs[k, 3] * t[n]
+                    if wants[n] != 0.0 and bound > at[n]:
+                        if want_clearance or (
+                            goal[n] - at[n] * u[n] >= 0.0 and goal[n] - bound * u[n] < 1e-9
+                        ):
+                            at[n] = max(at[n], arc_value(arcs, k, own, t[n]))
+                    n += 1
+            # the answers
+            for n in range(n_first, n_last + 1):
+                if wants[n] == 0.0:
+                    continue
+                k = minor + sign * n
+                r = main if main_is_row else k
+                c = k if main_is_row else main
+                clear = goal[n] - at[n] * u[n]
+                answer = 0
+                if clear >= 0.0:
+                    answer = 1
+                    if n_gaps > 0 and in_gap(gaps, n_gaps, t[n]):
+                        answer = 2
+                state[r, c] = answer
+                if want_clearance:
+                    if answer == 2:
+                        clearance[r, c] = np.nan
+                    elif at[n] <= -BIG:
+                        clearance[r, c] = np.inf
+                    else:
+                        clearance[r, c] = clear
+
         # merge this strip
-        if top > env_low or j <= 2:
+        planes = False
+        if max(top, top_prev) > env_low:
+            if top_goal + 1e-12 < env_low and not want_clearance:
+                survey_line(env, n_env, n_first, n_last - n_first, t, low, high, at, least, most)
             go_lo = cell_hi + 1
             go_hi = cell_lo - 1
             for i in range(cell_lo, cell_hi + 1):
                 a = i - lo_prev
                 b = i - lo
-                highest = max(max(prev[1, a], prev[1, a + 1]), max(line[1, b], line[1, b + 1]))
-                under = BIG
-                for m in range(i - 1, i + 3):
-                    under = min(under, least[min(max(m, first), last) - lo])
+                highest = max(max(pg[a], pg[a + 1]), max(g[b], g[b + 1]))
+                under = least[min(max(b, n_first), n_last - 1)]
+                for m in (b - 1, b + 1, b + 2):
+                    under = min(under, least[min(max(m, n_first), n_last - 1)])
                 if highest > under or j <= 2:
                     go_lo = min(go_lo, i)
                     go_hi = i
             if go_lo <= go_hi:
-                # edges of this line
-                n_seg = 0
-                for i in range(go_lo, go_hi + 1):
-                    b = i - lo
-                    t0 = max(line[0, b], low)
-                    t1 = min(line[0, b + 1], high)
-                    if t1 <= t0:
-                        continue
-                    if j == 1 and i == 0 and own_known:
-                        pa, pb = own_plane(own, True, 0.0)
-                    else:
-                        both = line[2, b] + line[2, b + 1]
-                        if not (both == both):
-                            continue
-                        pa, pb = edge_plane(line, b, line, b + 1)
-                    seg[0, n_seg] = t0
-                    seg[1, n_seg] = t1
-                    seg[2, n_seg] = pa
-                    seg[3, n_seg] = pb
-                    n_seg += 1
-                if n_seg > 0:
-                    n_env, env_low = merge_edges(env, n_env, seg, n_seg, eps, envs[1 - which])
-                    if n_env == 0:
-                        return FULL
+                if not planes_prev:
+                    edge_planes(pu, pv, pf, pa, pb, n_prev)
+                edge_planes(u, v, f, ea, eb, count)
+                planes = True
+                if j <= 2:  # close to the observer g of the posts is no bound
+                    for n in range(n_first, n_last):
+                        least[n] = -2.0 * BIG
+                        most[n] = 2.0 * BIG
+                        if g[n] == -BIG or g[n + 1] == -BIG:
+                            least[n] = -2.0 * BIG
+                    if j == 1 and own_known and 0 <= 0 - lo < count:
+                        ea[0 - lo], eb[0 - lo] = own_plane(own, True, 0.0)
+                spare = envs[1 - which]
+                n_new, low_new, changed = merge_line(
+                    env, n_env, n_first, n_last - n_first, t, g, ea, eb, least, most, high, eps,
+                    spare,
+                )  # fmt: skip
+                if n_new == 0:
+                    return FULL
+                env_low = low_new
+                if changed:
+                    n_env = n_new
                     which = 1 - which
-                    env = envs[which]
-                # edges between the last line and this, even and odd rows apart: neighbours may
-                # overlap where the map bends
+                    env = spare
+                # Edges between the last line and this, even and odd rows apart: neighbours may
+                # overlap where the map bends.
                 for parity in range(2):
                     n_seg = 0
                     for i in range(go_lo + ((go_lo + parity) & 1), go_hi + 2, 2):
                         a = i - lo_prev
                         b = i - lo
-                        t0 = max(min(line[0, b], prev[0, a]), low)
-                        t1 = min(max(line[0, b], prev[0, a]), high)
-                        if t1 <= t0:
+                        t0 = max(min(t[b], pt[a]), low)
+                        t1 = min(max(t[b], pt[a]), high)
+                        both = f[b] + pf[a]
+                        if t1 <= t0 or not (both == both):
                             continue
                         if j == 1 and own_known and (i == 1 or i == 0):
                             if i == 0 and geo[Y0] == 0.0:
                                 continue  # the observer stands on it
-                            pa, pb = own_plane(own, False, geo[Y0] + i)
+                            sa, sb = own_plane(own, False, geo[Y0] + i)
+                        elif j == 1 and pu[a] == 0.0 and pv[a] == 0.0:
+                            continue  # it starts at the observer
                         else:
-                            both = line[2, b] + prev[2, a]
-                            if not (both == both):
-                                continue
-                            if j == 1 and prev[3, a] == 0.0 and prev[4, a] == 0.0:
-                                continue  # it starts at the observer
-                            pa, pb = edge_plane(prev, a, line, b)
-                        if j > 2:
-                            # under an edge of this line, or of the last, along its whole length?
-                            m = b if line[0, b] <= prev[0, a] else b - 1
-                            both = line[2, m] + line[2, m + 1]
-                            if both == both and line[0, m] <= prev[0, a] <= line[0, m + 1]:
-                                qa, qb = edge_plane(line, m, line, m + 1)
-                                if qa + qb * prev[0, a] >= prev[1, a]:
+                            if j > 2:
+                                # under an edge of this line or of the last, all along?
+                                m = b if t[b] <= pt[a] else b - 1
+                                if t[m] <= pt[a] <= t[m + 1] and (
+                                    pf[a] <= ea[m] * pu[a] + eb[m] * pv[a]
+                                ):
                                     continue
-                            m = a - 1 if line[0, b] <= prev[0, a] else a
-                            both = prev[2, m] + prev[2, m + 1]
-                            if both == both and prev[0, m] <= line[0, b] <= prev[0, m + 1]:
-                                qa, qb = edge_plane(prev, m, prev, m + 1)
-                                if qa + qb * line[0, b] >= line[1, b]:
+                                m = a - 1 if t[b] <= pt[a] else a
+                                if pt[m] <= t[b] <= pt[m + 1] and (
+                                    f[b] <= pa[m] * u[b] + pb[m] * v[b]
+                                ):
                                     continue
-                        seg[0, n_seg] = t0
-                        seg[1, n_seg] = t1
-                        seg[2, n_seg] = pa
-                        seg[3, n_seg] = pb
-                        n_seg += 1
+                            det = pu[a] * v[b] - u[b] * pv[a]
+                            sa = (pf[a] * v[b] - f[b] * pv[a]) / det
+                            sb = (pu[a] * f[b] - u[b] * pf[a]) / det
+                            if not (sa - sa == 0.0):
+                                continue  # seen end on
+                        q0, q1 = above(env, n_env, sa, sb, t0, t1, eps)
+                        if q0 < q1:
+                            seg[0, n_seg] = t0
+                            seg[1, n_seg] = t1
+                            seg[2, n_seg] = sa
+                            seg[3, n_seg] = sb
+                            n_seg += 1
                     if n_seg > 0:
                         n_env, env_low = merge_edges(env, n_env, seg, n_seg, eps, envs[1 - which])
                         if n_env == 0:
                             return FULL
+                        changed = True
                         which = 1 - which
                         env = envs[which]
                 # bulges that are still above the envelope
                 k = 0
-                while k < n_arcs:
+                while changed and k < n_arcs:
                     t0, t1 = above(
                         env, n_env, arcs[k, 2], arcs[k, 3], arcs[k, 0], arcs[k, 1], eps
                     )
@@ -957,40 +1171,52 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                             arcs[k, m] = arcs[n_arcs, m]
                 # bulges of this strip
                 for i in range(go_lo, go_hi + 1):
+                    a = i - lo_prev
+                    b = i - lo
+                    twist = f[b + 1] - f[b] - pf[a + 1] + pf[a]
+                    if not (twist < 0.0 or (twist > 0.0 and curved)):
+                        continue  # nowhere concave along a sight line, or unknown
                     is_own = j == 1 and i == 0
                     if is_own and not own_known:
                         continue
-                    if not load_corners(prev, lo_prev, line, lo, i, corners):
-                        continue
-                    twist = corners[11] - corners[8] - corners[5] + corners[2]
-                    if twist == 0.0 or (twist > 0.0 and not curved):
-                        continue
-                    a = i - lo_prev
-                    b = i - lo
-                    ts[0] = prev[0, a]
-                    ts[1] = prev[0, a + 1]
-                    ts[2] = line[0, b]
-                    ts[3] = line[0, b + 1]
+                    ts[0] = pt[a]
+                    ts[1] = pt[a + 1]
+                    ts[2] = t[b]
+                    ts[3] = t[b + 1]
                     t0 = max(min(min(ts[0], ts[1]), min(ts[2], ts[3])), low)
                     t1 = min(max(max(ts[0], ts[1]), max(ts[2], ts[3])), high)
                     if t1 <= t0 or (twist > 0.0 and t0 > 0.3):
                         continue
-                    if j > 2 and not may_bulge(corners, t0, t1):
-                        continue
+                    load_corners(pu, pv, pf, a, u, v, f, b, cell, 0)
+                    gs[0] = pg[a]
+                    gs[1] = pg[a + 1]
+                    gs[2] = g[b]
+                    gs[3] = g[b + 1]
+                    if j > 2:
+                        if not may_bulge(cell, t0, t1):
+                            continue
+                        highest = max(max(gs[0], gs[1]), max(gs[2], gs[3]))
+                        q0, q1 = above(env, n_env, highest, 0.0, t0, t1, eps)
+                        if q0 >= q1:
+                            continue
                     if is_own:
+                        cell[0, 4] = -BIG
                         ts[0] = low
                         ts[1] = high
-                    slack = 1e-4 * abs(twist) / line[3, b] if curved else 0.0
+                    slack = 1e-4 * abs(twist) / u[b] if curved else 0.0
                     n_arcs = add_arcs(
-                        corners, is_own, ts, own, env, n_env, low, high, slack, eps, arcs, n_arcs
+                        cell, is_own, ts, gs, own, env, n_env, low, high, slack, eps, arcs, n_arcs
                     )
                     if n_arcs < 0:
                         return FULL
 
-        prev, line = line, prev
         lo_prev = lo
+        n_prev = count
         first_prev = first
         last_prev = last
+        top_prev = top if j > 2 else BIG
+        void_prev = void
+        planes_prev = planes
     return DONE
 
 
