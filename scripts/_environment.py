@@ -23,12 +23,14 @@ ROOT = Path(__file__).resolve().parent.parent
 HOME = ROOT / ".venv-viewshed"
 NEEDED = (3, 11)
 
-#: What pip writes when it cannot go on, and what it was about.
+_FETCH = "is the network there, and the package index within reach?"
+_BUILD = "there may be no ready-made package for this Python and machine."
+#: What pip writes when it cannot go on, what it was about, and where to look for the cure.
 _TROUBLE = (
-    (r"No matching distribution found for (\S+)", "could not fetch {}"),
-    (r"Could not find a version that satisfies the requirement (\S+)", "could not fetch {}"),
-    (r"Failed (?:building wheel for|to build) (\S+)", "could not build {}"),
-    (r"(No space left on device)", "{}"),
+    (r"(No space left on device)", "{}", "make room."),
+    (r"No matching distribution found for (\S+)", "could not fetch {}", _FETCH),
+    (r"(conflicting dependencies)", "pyproject.toml asks for {}", "mend its versions."),
+    (r"Failed (?:building wheel for|to build) (\S+)", "could not build {}", _BUILD),
 )
 
 #: Open lock files: while this process lives nobody removes the environments it uses.
@@ -78,12 +80,17 @@ def lower_bounds():
     return [entry.replace(">=", "==") for entry in project()["project"]["dependencies"]]
 
 
+def family(purpose):
+    """Return what the names of all environments of a purpose and this Python begin with."""
+    return "{}-py{}.{}".format(purpose, *sys.version_info[:2])
+
+
 def key(purpose):
     """Return the name of the environment for a purpose: it changes with all that it depends on."""
     digest = hashlib.sha256((ROOT / "pyproject.toml").read_bytes())
     for part in (str(ROOT), os.path.realpath(sys.executable), sys.version, platform.machine()):
         digest.update(b"\0" + part.encode())
-    return "{}-py{}.{}-{}".format(purpose, *sys.version_info[:2], digest.hexdigest()[:12])
+    return f"{family(purpose)}-{digest.hexdigest()[:12]}"
 
 
 def interpreter(folder):
@@ -137,7 +144,7 @@ def _sweep(purpose, name):
     """Remove the environments of a purpose that an older pyproject.toml asked for."""
     if fcntl is None:
         return
-    for lock in HOME.glob(purpose + "-*.lock"):
+    for lock in HOME.glob(family(purpose) + "-*.lock"):
         if lock.stem == name:
             continue
         with lock.open("a+") as handle, contextlib.suppress(OSError):
@@ -226,15 +233,13 @@ def _logged(words, out, log):
     if done.returncode == 0:
         return
     text = log.read_text(encoding="utf-8", errors="replace")
-    for pattern, message in _TROUBLE:
+    lines = [line.strip() for line in text.splitlines() if line.strip()]
+    what, cure = (lines[-1] if lines else "pip failed"), _FETCH
+    for pattern, about, hint in _TROUBLE:
         found = re.search(pattern, text)
         if found:
-            what = message.format(found.group(1).rstrip(".,"))
+            what, cure = about.format(found.group(1).rstrip(".,")), hint
             break
-    else:
-        lines = [line for line in text.splitlines() if line.strip()]
-        what = lines[-1].strip() if lines else "pip failed"
-    cure = "is the network there, and the package index within reach?"
     message = f"{what}; {cure} The whole story: {log}"
     raise Trouble(message)
 

@@ -292,7 +292,7 @@ def make_elevation():
             height = 10 * ramp(-1.6, 4, inland) + 30 * plateau
         else:
             height = unbend(refine(height, size), shifts)
-        base = inland < -1.6  # noqa: PLR2004
+        base = inland < -1.6
         height = np.where(base, 0.0, height + 0.7 * rng.random((size, size)))
         cell = 1000.0 * SIDE / size
         height = wear(height, base, rise, softness, cell=cell, steps=steps)

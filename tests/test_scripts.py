@@ -125,9 +125,12 @@ def test_half_built_is_made_again(environment):
     assert len(environment.made) == 2
 
 
-def test_new_pyproject_makes_a_new_one_and_sweeps_the_old(environment):
+def test_new_pyproject_makes_a_new_one_and_sweeps_the_old(environment, monkeypatch):
     old = environment.prepare("run").parent.parent
     other = environment.prepare("test").parent.parent
+    with monkeypatch.context() as patch:
+        patch.setattr(environment.sys, "version_info", (3, 99, 0))
+        newer = environment.prepare("run").parent.parent
     let_go(environment)
     with (environment.ROOT / "pyproject.toml").open("a", encoding="utf-8") as file:
         file.write("\n# changed\n")
@@ -135,6 +138,7 @@ def test_new_pyproject_makes_a_new_one_and_sweeps_the_old(environment):
     assert new != old
     assert new.exists()
     assert other.exists()
+    assert newer.exists()
     assert not old.exists()
 
 

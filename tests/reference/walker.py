@@ -169,6 +169,9 @@ class Walker:
             for a, b in np.argwhere(first * second < 0):
                 r, c = r_lo + a, c_lo + b
                 r2, c2 = (r + 1, c) if axis == 0 else (r, c + 1)
+                ends = ((r, c), (r2, c2))
+                if (rt, ct) in ends or (self.row0, self.col0) in ends:
+                    continue  # an edge of the target or the observer is met at its end alone
                 part = first[a, b] / (first[a, b] - second[a, b])
                 f0, f1 = self.f[r, c], self.f[r2, c2]
                 height = f0 + part * (f1 - f0)
@@ -202,10 +205,8 @@ class Walker:
         y = self.q[r, c] + a * (self.q[r2, c] - self.q[r, c]) + b * (self.q[r, c2] - self.q[r, c])
         return x, y
 
-    def own_cell(self, ray):
-        """Corner offsets and bilinear differences of the cell the ray sets out into."""
-        r0 = math.floor(self.row0) if self.row0 % 1 or ray[1] >= 0 else int(self.row0) - 1
-        c0 = math.floor(self.col0) if self.col0 % 1 or ray[0] >= 0 else int(self.col0) - 1
+    def own_cell(self, r0, c0):
+        """Bilinear differences, at the observer, of a cell that touches it."""
         rows, cols = self.z.shape
         if not (0 <= r0 < rows - 1 and 0 <= c0 < cols - 1):
             return None
@@ -221,14 +222,14 @@ class Walker:
             by_row = (v[1, 0] - v[0, 0]) * (1 - b) + (v[1, 1] - v[0, 1]) * b
             return at, by_col, by_row, v[1, 1] - v[1, 0] - v[0, 1] + v[0, 0]
 
-        return (r0, c0), differences(self.f[box]), differences(self.p[box]), differences(self.q[box])
+        return differences(self.f[box]), differences(self.p[box]), differences(self.q[box])
 
-    def own_exit(self, ray):
+    def own_exit(self, ray, r0, c0):
         """First crossing, out of the own cell: distance, x, y (index offsets) and cell data."""
-        cell = self.own_cell(ray)
+        cell = self.own_cell(r0, c0)
         if cell is None:
             return None
-        (r0, c0), f, p, q = cell
+        f, p, q = cell
         best = None
         for x in (c0 - self.col0, c0 + 1 - self.col0):  # its column lines
             down = ray[0] * (q[2] + q[3] * x) - ray[1] * (p[2] + p[3] * x)
@@ -256,8 +257,12 @@ class Walker:
 
     def sharpen_first(self, points, ray):
         """Replace the first crossing by one worked from differences at the observer."""
-        found = self.own_exit(ray)
-        if not points or found is None or found[0] is None:
+        if not points:
+            return points
+        r0 = math.floor((self.row0 + points[0][1]) / 2)
+        c0 = math.floor((self.col0 + points[0][2]) / 2)
+        found = self.own_exit(ray, r0, c0)
+        if found is None or found[0] is None:
             return points
         (distance, x, y), f = found
         first = points[0]
@@ -282,7 +287,7 @@ class Walker:
         if np.isnan(box).any():
             return -math.inf, True
         if d1 == 0.0:
-            return self.own_section(ray), False
+            return self.own_section(ray, r, c), False
         if not (known1 and known2):
             return -math.inf, False
         twist = box[1, 1] - box[1, 0] - box[0, 1] + box[0, 0]
@@ -298,8 +303,9 @@ class Walker:
         s = (d1 + turn) / (top + d1)
         return (f1 + s * (f2 - f1) + bulge * s * (1 - s)) / top, False
 
-    def own_section(self, ray):
-        found = self.own_exit(ray)
+    def own_section(self, ray, r, c):
+        """The first section, from the observer to the way out of its cell."""
+        found = self.own_exit(ray, r, c)
         if found is None or found[0] is None:
             return -math.inf
         (distance, x, y), f = found

@@ -25,6 +25,8 @@ import numpy as np
 from viewshed._jit import inline, kernel
 
 BIG = 1e300
+#: A mixed difference of four heights that is rounding and no bulge [m].
+FLAT = 1e-11
 
 # Fields of the parameter vectors (module constants are frozen into the compiled code).
 # ints
@@ -651,7 +653,7 @@ def add_arcs(cell, is_own, ts, gs, own, env, n_env, low, high, slack, eps, arcs,
         gs[b] = other
     t1 = min(max(ts[0], low), high)
     g1 = gs[0]
-    if is_own or t1 != ts[0]:
+    if is_own or t1 != ts[0] or ts[1] == ts[0]:  # not at one corner alone
         g1 = closed_value(cell, 0, own, t1)
     for a in range(3):
         t0 = t1
@@ -660,7 +662,7 @@ def add_arcs(cell, is_own, ts, gs, own, env, n_env, low, high, slack, eps, arcs,
         if t1 <= t0:
             continue
         g1 = gs[3]
-        if is_own or a < 2 or t1 != ts[3]:
+        if is_own or a < 2 or t1 != ts[3] or ts[2] == ts[3]:
             g1 = closed_value(cell, 0, own, t1)
         rise = (g1 - g0) / (t1 - t0)
         level = g0 - rise * t0 + slack
@@ -679,16 +681,19 @@ def add_arcs(cell, is_own, ts, gs, own, env, n_env, low, high, slack, eps, arcs,
 
 
 @inline
-def may_bulge(c, t_low, t_high):
-    """False where g surely grows through the whole cell, so that it has no greatest inside."""
-    f00, f01, f10, f11 = c[0, 6], c[0, 9], c[0, 12], c[0, 15]
+def climbs(f00, f01, f10, f11, near, far, t_low, t_high):
+    """Whether g surely grows all through a cell, so that it has no greatest inside.
+
+    f: corners (near line, low row), (near, high), (far, low), (far, high); near, far: least u of
+    the near line and greatest of the far one.
+    """
     along = min(f10 - f00, f11 - f01)
     across = min(f01 - f00, f11 - f10)
     rise = along + (across * t_low if across > 0.0 else across * t_high)
     top = max(max(f00, f01), max(f10, f11))
-    reach = min(c[0, 4], c[0, 7]) if rise > 0.0 else max(c[0, 10], c[0, 13])
+    reach = rise * (near if rise > 0.0 else far)
     # the margin covers cells that are not quite square in (u, v)
-    return rise * reach - 0.02 * abs(rise * reach) < top + 0.02 * abs(top)
+    return reach - 0.02 * abs(reach) >= top + 0.02 * abs(top)
 
 
 @inline
@@ -762,11 +767,19 @@ def survey_line(env, n_env, first, count, t, low, high, at, least, most):
 
 
 @inline
-def wanted(ints, geo, piece, j, i, t, u, v):
-    """Whether a post is a question of this wedge: its own, within range and bearings."""
+def rising(pg, a, g, b, least, n_first, n_last):
+    """Whether a cell (posts a, a + 1 before, b, b + 1 here) may rise above the envelope."""
+    highest = max(max(pg[a], pg[a + 1]), max(g[b], g[b + 1]))
+    under = BIG
+    for m in range(b - 1, b + 3):
+        under = min(under, least[min(max(m, n_first), n_last - 1)])
+    return highest > under
+
+
+@inline
+def owned(ints, geo, piece, j, i, t):
+    """Whether a post belongs to this wedge: each post of the grid belongs to exactly one."""
     if t < piece[0] or t >= piece[1]:
-        return False
-    if geo[G20] * u * u + geo[G11] * u * v + geo[G02] * v * v > geo[RANGE2]:
         return False
     along = geo[X0] + j
     across = geo[Y0] + i
@@ -774,7 +787,19 @@ def wanted(ints, geo, piece, j, i, t, u, v):
         return False
     if across == along and ints[OWN_DIAGONAL] == 0:
         return False
-    if across == 0.0 and ints[OWN_AXIS] == 0:
+    return across != 0.0 or ints[OWN_AXIS] != 0
+
+
+@inline
+def distance2(geo, u, v):
+    """Squared ground distance [m2]."""
+    return geo[G20] * u * u + geo[G11] * u * v + geo[G02] * v * v
+
+
+@inline
+def asked(ints, geo, u, v):
+    """Whether a post is within range and bearings."""
+    if distance2(geo, u, v) > geo[RANGE2]:
         return False
     if ints[HAS_BEARINGS]:
         past_from = geo[B_FROM_U] * v - geo[B_FROM_V] * u >= -1e-12 * u
@@ -852,9 +877,7 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
 
     ts = corner[0]
     gs = corner[1]
-    heights, at, least, most, wants, goal = (
-        post[0], post[1], post[2], post[3], post[4], post[5],
-    )  # fmt: skip
+    heights, at, least, most, wants = post[0], post[1], post[2], post[3], post[4]
 
     which = 0
     env = envs[0]
@@ -887,6 +910,7 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
     directions(before[3], before[4], before[2], before[0], before[1], n_prev)
     planes_prev = False
     void_prev = True
+    stale = False
     top_prev = BIG
     first_prev = 0
     last_prev = 2
@@ -958,10 +982,10 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
         cell_hi = max(last, last_prev)
         shift = lo_prev - lo  # post a of the line before stands on the row of post a + shift
         top = greatest(g, cell_lo - lo, cell_hi + 2 - lo)
-        total = 0.0
+        unknown = 0
         for n in range(cell_lo - lo, cell_hi + 2 - lo):
-            total += f[n]
-        void = total != total
+            unknown |= f[n] != f[n]
+        void = unknown != 0
         if void or void_prev:
             n_gaps = add_strip_gaps(
                 pt, pf, t, f, shift, cell_lo - lo_prev, cell_hi - lo_prev, j, lo_prev, low, high,
@@ -971,56 +995,74 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                 return FULL
 
         # targets
+        nearest = -BIG
+        for n in (n_first, n_last):
+            nearest = max(nearest, distance2(geo, u[n], v[n]))
+        if nearest > geo[RANGE2]:
+            for n in range(n_first, n_last + 1):
+                nearest = min(nearest, distance2(geo, u[n], v[n]))
+            if nearest > geo[RANGE2]:
+                return DONE
+        w_lo = n_first
+        w_hi = n_last
+        while w_lo <= w_hi and not owned(ints, geo, piece, j, lo + w_lo, t[w_lo]):
+            w_lo += 1
+        while w_hi >= w_lo and not owned(ints, geo, piece, j, lo + w_hi, t[w_hi]):
+            w_hi -= 1
+        # distance along a line has no greatest between its ends
+        plain = ints[HAS_BEARINGS] == 0 and w_lo <= w_hi and (
+            asked(ints, geo, u[w_lo], v[w_lo]) and asked(ints, geo, u[w_hi], v[w_hi])
+        )
         top_goal = top
-        if target == 0.0:
-            for n in range(n_first, n_last + 1):
-                goal[n] = f[n]
-        else:
+        goal = f
+        if target != 0.0:
+            goal = post[5]
             flatten(heights, target, geo, u, v, goal, count)
-            top_goal = -BIG
-            for n in range(n_first, n_last + 1):
+            for n in range(w_lo, w_hi + 1):
                 if goal[n] > top_goal * u[n]:
                     top_goal = goal[n] / u[n]
-        nearest = BIG
-        for n in range(n_first, n_last + 1):
-            dist2 = geo[G20] * u[n] * u[n] + geo[G11] * u[n] * v[n] + geo[G02] * v[n] * v[n]
-            nearest = dist2 if dist2 < nearest else nearest
-        if nearest > geo[RANGE2]:
-            return DONE
 
-        if top_goal + 1e-12 < env_low and not want_clearance:
-            for n in range(n_first, n_last + 1):
-                if f[n] == f[n] and wanted(ints, geo, piece, j, lo + n, t[n], u[n], v[n]):
+        hidden = top_goal + 1e-12 < env_low and not want_clearance
+        rises = max(top, top_prev) > env_low
+        if rises or not hidden:
+            survey_line(env, n_env, n_first, n_last - n_first, t, low, high, at, least, most)
+        if hidden:
+            for n in range(w_lo, w_hi + 1):
+                if f[n] == f[n] and (plain or asked(ints, geo, u[n], v[n])):
                     k = minor + sign * n
                     if main_is_row:
                         state[main, k] = 0
                     else:
                         state[k, main] = 0
         else:
-            survey_line(env, n_env, n_first, n_last - n_first, t, low, high, at, least, most)
             # the questions, and what their own strip says
-            for n in range(n_first, n_last + 1):
-                i = lo + n
+            for n in range(w_lo, w_hi + 1):
                 wants[n] = 0.0
-                if not (f[n] == f[n] and wanted(ints, geo, piece, j, i, t[n], u[n], v[n])):
+                if not (f[n] == f[n] and (plain or asked(ints, geo, u[n], v[n]))):
                     continue
                 wants[n] = 1.0
                 if not want_clearance and goal[n] - at[n] * u[n] < 0.0:
                     continue
                 a = n - shift
                 if j > 2:
-                    highest = max(max(g[n - 1], g[n]), max(pg[a - 1], pg[a]))
                     if curved:
-                        for m in (-2, 1, 2):
+                        highest = -BIG
+                        for m in range(-2, 3):
                             highest = max(highest, max(g[n + m], pg[a + m]))
-                    elif f[n] - f[n - 1] - pf[a] + pf[a - 1] >= 0.0:
-                        continue  # the last cell is not concave along the sight line
+                    else:
+                        if f[n] - f[n - 1] - pf[a] + pf[a - 1] >= -FLAT:
+                            continue  # the last cell is not concave along the sight line
+                        if climbs(
+                            pf[a - 1], pf[a], f[n - 1], f[n], pu[a], u[n], t[n], t[n]
+                        ):
+                            continue
+                        highest = max(max(g[n - 1], g[n]), max(pg[a - 1], pg[a]))
                     if highest <= at[n]:
                         continue
                     if not want_clearance and goal[n] - highest * u[n] > 1e-9:
                         continue
                 strip = own_strip_horizon(
-                    pu, pv, pf, a, u, v, f, n, j, i, t[n], own, own_known, cell
+                    pu, pv, pf, a, u, v, f, n, j, lo + n, t[n], own, own_known, cell
                 )
                 at[n] = max(at[n], strip)
             # cells that may rise above the envelope
@@ -1028,12 +1070,12 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                 t0 = arcs[k, 0]
                 t1 = arcs[k, 1]
                 n = int(t0 * u_line - geo[Y0]) + 1 - lo
-                n = min(max(n, n_first), n_last)
-                while n > n_first and t[n - 1] >= t0:
+                n = min(max(n, w_lo), w_hi)
+                while n > w_lo and t[n - 1] >= t0:
                     n -= 1
-                while n <= n_last and t[n] < t0:
+                while n <= w_hi and t[n] < t0:
                     n += 1
-                while n <= n_last and t[n] <= t1:
+                while n <= w_hi and t[n] <= t1:
                     bound = arcs[k, 2] + arcs[k, 3] * t[n]
                     if wants[n] != 0.0 and bound > at[n]:
                         if want_clearance or (
@@ -1042,7 +1084,7 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                             at[n] = max(at[n], arc_value(arcs, k, own, t[n]))
                     n += 1
             # the answers
-            for n in range(n_first, n_last + 1):
+            for n in range(w_lo, w_hi + 1):
                 if wants[n] == 0.0:
                     continue
                 k = minor + sign * n
@@ -1065,21 +1107,18 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
 
         # merge this strip
         planes = False
-        if max(top, top_prev) > env_low:
-            if top_goal + 1e-12 < env_low and not want_clearance:
-                survey_line(env, n_env, n_first, n_last - n_first, t, low, high, at, least, most)
-            go_lo = cell_hi + 1
-            go_hi = cell_lo - 1
-            for i in range(cell_lo, cell_hi + 1):
-                a = i - lo_prev
-                b = i - lo
-                highest = max(max(pg[a], pg[a + 1]), max(g[b], g[b + 1]))
-                under = least[min(max(b, n_first), n_last - 1)]
-                for m in (b - 1, b + 1, b + 2):
-                    under = min(under, least[min(max(m, n_first), n_last - 1)])
-                if highest > under or j <= 2:
-                    go_lo = min(go_lo, i)
-                    go_hi = i
+        if rises:
+            go_lo = cell_lo
+            go_hi = cell_hi
+            if j > 2:
+                while go_lo <= go_hi and not rising(
+                    pg, go_lo - lo_prev, g, go_lo - lo, least, n_first, n_last
+                ):
+                    go_lo += 1
+                while go_hi > go_lo and not rising(
+                    pg, go_hi - lo_prev, g, go_hi - lo, least, n_first, n_last
+                ):
+                    go_hi -= 1
             if go_lo <= go_hi:
                 if not planes_prev:
                     edge_planes(pu, pv, pf, pa, pb, n_prev)
@@ -1107,9 +1146,12 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                     env = spare
                 # Edges between the last line and this, even and odd rows apart: neighbours may
                 # overlap where the map bends.
-                for parity in range(2):
+                bent = curved or j <= 2
+                step = 2 if bent else 1
+                for parity in range(step):
                     n_seg = 0
-                    for i in range(go_lo + ((go_lo + parity) & 1), go_hi + 2, 2):
+                    start = go_lo + ((go_lo + parity) & 1) if bent else go_lo
+                    for i in range(start, go_hi + 2, step):
                         a = i - lo_prev
                         b = i - lo
                         t0 = max(min(t[b], pt[a]), low)
@@ -1127,13 +1169,13 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                             if j > 2:
                                 # under an edge of this line or of the last, all along?
                                 m = b if t[b] <= pt[a] else b - 1
-                                if t[m] <= pt[a] <= t[m + 1] and (
-                                    pf[a] <= ea[m] * pu[a] + eb[m] * pv[a]
+                                if pf[a] <= ea[m] * pu[a] + eb[m] * pv[a] and (
+                                    not curved or t[m] <= pt[a] <= t[m + 1]
                                 ):
                                     continue
                                 m = a - 1 if t[b] <= pt[a] else a
-                                if pt[m] <= t[b] <= pt[m + 1] and (
-                                    f[b] <= pa[m] * u[b] + pb[m] * v[b]
+                                if f[b] <= pa[m] * u[b] + pb[m] * v[b] and (
+                                    not curved or pt[m] <= t[b] <= pt[m + 1]
                                 ):
                                     continue
                             det = pu[a] * v[b] - u[b] * pv[a]
@@ -1155,9 +1197,14 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                         changed = True
                         which = 1 - which
                         env = envs[which]
-                # bulges that are still above the envelope
-                k = 0
-                while changed and k < n_arcs:
+                # bulges that are still above the envelope: looked after now and then, since one
+                # kept too long costs time but no exactness
+                stale = stale or changed
+                k = n_arcs
+                if stale and ((j & 3) == 0 or n_arcs > 2 * (n_last - n_first)):
+                    k = 0
+                    stale = False
+                while k < n_arcs:
                     t0, t1 = above(
                         env, n_env, arcs[k, 2], arcs[k, 3], arcs[k, 0], arcs[k, 1], eps
                     )
@@ -1174,7 +1221,7 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                     a = i - lo_prev
                     b = i - lo
                     twist = f[b + 1] - f[b] - pf[a + 1] + pf[a]
-                    if not (twist < 0.0 or (twist > 0.0 and curved)):
+                    if not (twist < -FLAT or (twist > FLAT and curved)):
                         continue  # nowhere concave along a sight line, or unknown
                     is_own = j == 1 and i == 0
                     if is_own and not own_known:
@@ -1187,14 +1234,17 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                     t1 = min(max(max(ts[0], ts[1]), max(ts[2], ts[3])), high)
                     if t1 <= t0 or (twist > 0.0 and t0 > 0.3):
                         continue
+                    if j > 2 and climbs(
+                        pf[a], pf[a + 1], f[b], f[b + 1], min(pu[a], pu[a + 1]),
+                        max(u[b], u[b + 1]), t0, t1,
+                    ):  # fmt: skip
+                        continue
                     load_corners(pu, pv, pf, a, u, v, f, b, cell, 0)
                     gs[0] = pg[a]
                     gs[1] = pg[a + 1]
                     gs[2] = g[b]
                     gs[3] = g[b + 1]
                     if j > 2:
-                        if not may_bulge(cell, t0, t1):
-                            continue
                         highest = max(max(gs[0], gs[1]), max(gs[2], gs[3]))
                         q0, q1 = above(env, n_env, highest, 0.0, t0, t1, eps)
                         if q0 >= q1:
@@ -1203,7 +1253,12 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                         cell[0, 4] = -BIG
                         ts[0] = low
                         ts[1] = high
-                    slack = 1e-4 * abs(twist) / u[b] if curved else 0.0
+                    slack = 0.0
+                    if curved:  # a cell that is no parallelogram is convex only so far
+                        uneven = abs(u[b + 1] - u[b] - pu[a + 1] + pu[a])
+                        uneven += abs(v[b + 1] - v[b] - pv[a + 1] + pv[a])
+                        tall = max(max(abs(f[b]), abs(f[b + 1])), max(abs(pf[a]), abs(pf[a + 1])))
+                        slack = (8.0 * uneven * tall + 1e-6 * abs(twist)) / u[b]
                     n_arcs = add_arcs(
                         cell, is_own, ts, gs, own, env, n_env, low, high, slack, eps, arcs, n_arcs
                     )
