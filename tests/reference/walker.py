@@ -162,25 +162,32 @@ class Walker:
         on = np.argwhere(side == 0)
         for a, b in on:  # through a post
             r, c = r_lo + a, c_lo + b
-            found[(float(r), float(c))] = self.at_post(r, c)
+            along = ray[0] * self.p[r, c] + ray[1] * self.q[r, c]
+            found[(float(r), float(c))] = (*self.at_post(r, c), along)
         for axis in (0, 1):
             first = side[:-1] if axis == 0 else side[:, :-1]
             second = side[1:] if axis == 0 else side[:, 1:]
             for a, b in np.argwhere(first * second < 0):
                 r, c = r_lo + a, c_lo + b
                 r2, c2 = (r + 1, c) if axis == 0 else (r, c + 1)
-                ends = ((r, c), (r2, c2))
-                if (rt, ct) in ends or (self.row0, self.col0) in ends:
-                    continue  # an edge of the target or the observer is met at its end alone
-                part = first[a, b] / (first[a, b] - second[a, b])
+                if (rt, ct) in ((r, c), (r2, c2)):
+                    continue  # an edge of the target is met at its end alone
+                if r <= self.row0 <= r2 and c <= self.col0 <= c2:
+                    continue  # and one the observer stands on, where it stands
+                s0, s1 = first[a, b], second[a, b]
                 f0, f1 = self.f[r, c], self.f[r2, c2]
-                height = f0 + part * (f1 - f0)
+                height = (f0 * s1 - f1 * s0) / (s1 - s0)
+                # |A x B| / |s1 - s0| is the distance to the crossing of A B, sharp close by
+                spanned = self.p[r, c] * self.q[r2, c2] - self.p[r2, c2] * self.q[r, c]
+                distance = abs(spanned / (s1 - s0))
+                part = s0 / (s0 - s1)
                 where = (r + part, float(c)) if axis == 0 else (float(r), c + part)
-                found[where] = (height, not np.isnan(height))
+                x, y = self.place(*where)
+                if ray[0] * x + ray[1] * y < -1e-12:
+                    continue  # behind the observer
+                found[where] = (height, not np.isnan(height), distance)
         points = []
-        for (row, col), (height, known) in found.items():
-            x, y = self.place(row, col)
-            distance = ray[0] * x + ray[1] * y
+        for (row, col), (height, known, distance) in found.items():
             points.append((distance, row, col, height, known))
         points = [w for w in points if 0 < w[0] < length * (1 - 1e-13)
                   and (w[1], w[2]) not in ((rt, ct), (self.row0, self.col0))]

@@ -134,8 +134,9 @@ def own_exit(own, t):
     x = x1
     y = x1 * (t * own[O_UA] - own[O_VA]) / across
     edge = own[O_Y1]
-    if y > edge or y < own[O_Y0]:
-        if y < own[O_Y0]:
+    below = y < own[O_Y0] and own[O_Y0] < 0.0
+    if y > edge or below:
+        if below:
             edge = own[O_Y0]
         along = t * (own[O_UA] + own[O_UAB] * edge) - (own[O_VA] + own[O_VAB] * edge)
         x = edge * (own[O_VB] - t * own[O_UB]) / along
@@ -666,6 +667,9 @@ def add_arcs(cell, is_own, ts, gs, own, env, n_env, low, high, slack, eps, arcs,
             g1 = closed_value(cell, 0, own, t1)
         rise = (g1 - g0) / (t1 - t0)
         level = g0 - rise * t0 + slack
+        if min(g0, g1) <= -BIG:  # no bound to be had: always look
+            rise = 0.0
+            level = BIG
         first, last = above(env, n_env, level, rise, t0, t1, eps)
         if first < last:
             if n_arcs >= arcs.shape[0]:
@@ -1251,7 +1255,7 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                             continue
                     if is_own:
                         cell[0, 4] = -BIG
-                        ts[0] = low
+                        ts[0] = low if geo[Y0] < 0.0 else t[b]
                         ts[1] = high
                     slack = 0.0
                     if curved:  # a cell that is no parallelogram is convex only so far

@@ -1,0 +1,87 @@
+"""What can be seen from where: exact visibility over real terrain, a curved Earth and real air.
+
+>>> import viewshed
+>>> terrain = viewshed.open_terrain("sample_dem/elevation.tif")
+>>> lookout = viewshed.Observer(410385, 6204255, eye_height=1.7)
+>>> result = viewshed.map_visibility(terrain, lookout, range_m=3000, refraction=0.13)
+>>> result.visible.shape == result.grid.shape
+True
+
+Everything is loaded on first use, so importing the package costs nothing.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
+from viewshed._version import __version__
+
+if TYPE_CHECKING:
+    from viewshed.api import MapResult, map_visibility
+    from viewshed.atmosphere import Refraction, parse_refraction
+    from viewshed.errors import (
+        DataError,
+        InputError,
+        MemoryLimitError,
+        OutputError,
+        ViewshedError,
+        ViewshedWarning,
+    )
+    from viewshed.grid import Grid
+    from viewshed.io.elevation import Terrain, open_terrain
+    from viewshed.places import Observer, Sector, Target
+
+__all__ = [
+    "DataError",
+    "Grid",
+    "InputError",
+    "MapResult",
+    "MemoryLimitError",
+    "Observer",
+    "OutputError",
+    "Refraction",
+    "Sector",
+    "Target",
+    "Terrain",
+    "ViewshedError",
+    "ViewshedWarning",
+    "__version__",
+    "map_visibility",
+    "open_terrain",
+    "parse_refraction",
+]
+
+_HOME = {
+    "DataError": "errors",
+    "Grid": "grid",
+    "InputError": "errors",
+    "MapResult": "api",
+    "MemoryLimitError": "errors",
+    "Observer": "places",
+    "OutputError": "errors",
+    "Refraction": "atmosphere",
+    "Sector": "places",
+    "Target": "places",
+    "Terrain": "io.elevation",
+    "ViewshedError": "errors",
+    "ViewshedWarning": "errors",
+    "map_visibility": "api",
+    "open_terrain": "io.elevation",
+    "parse_refraction": "atmosphere",
+}
+
+
+def __getattr__(name: str) -> Any:
+    """Load a public name from its module on first use."""
+    if name not in _HOME:
+        msg = f"module 'viewshed' has no attribute {name!r}"
+        raise AttributeError(msg)
+    value = getattr(import_module(f"viewshed.{_HOME[name]}"), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__() -> list[str]:
+    """Names a reader can complete."""
+    return sorted(__all__)
