@@ -6,9 +6,13 @@ bit only if sums keep their order and products are not fused.
 
 from __future__ import annotations
 
+import logging
+import warnings
 from typing import TYPE_CHECKING, Any, TypeVar
 
 import numba
+
+from viewshed.errors import ViewshedWarning
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -24,15 +28,42 @@ OPTIONS: dict[str, Any] = {
     "_nrt": False,
 }
 
+_log = logging.getLogger("viewshed")
+
 
 def kernel(function: F) -> F:
     """Compile `function` on first use, cached on disk where the cache folder can be written."""
     try:
         return numba.njit(cache=True, **OPTIONS)(function)  # type: ignore[no-any-return]
     except RuntimeError:  # no writable place for the cache
+        warnings.warn(
+            "no folder for compiled kernels can be written, so they are compiled anew each time; "
+            "set NUMBA_CACHE_DIR to one that can",
+            ViewshedWarning,
+            stacklevel=2,
+        )
         return numba.njit(**OPTIONS)(function)  # type: ignore[no-any-return]
 
 
 def inline(function: F) -> F:
     """Compile `function` for use inside a kernel of the same file."""
     return numba.njit(inline="never", **OPTIONS)(function)  # type: ignore[no-any-return]
+
+
+def announce(dispatcher: Any) -> None:
+    """Say so, once, when the next call of a kernel will have to compile it."""
+    if dispatcher.overloads or _is_cached(dispatcher):
+        return
+    _log.warning(
+        "compiling the kernels: this takes about half a minute and is kept for the next run"
+    )
+
+
+def _is_cached(dispatcher: Any) -> bool:
+    """Whether the disk holds this kernel for this source, numba and processor."""
+    try:
+        index = dispatcher._cache._cache_file._load_index()
+        machine = dispatcher.targetctx.codegen().magic_tuple()
+    except (AttributeError, OSError):
+        return False
+    return any(machine in key for key in index)

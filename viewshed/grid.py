@@ -6,7 +6,7 @@ seen from one observer, and `CellAreas` the true size of each cell. All three ho
 they are made from exact geodesic values by `viewshed.geodesy`.
 """
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, replace, field
 from math import isfinite
 
 import numpy as np
@@ -209,6 +209,10 @@ class PostMap:
         """Keep private read-only copies of the arrays."""
         for name in ("jacobian", "cp", "cq"):
             object.__setattr__(self, name, _frozen(getattr(self, name)))
+
+    def moved(self, row_off: int, col_off: int) -> "PostMap":
+        """Give the same map for a window that begins at another post."""
+        return replace(self, row0=self.row0 - row_off, col0=self.col0 - col_off)
 
     @property
     def degree(self) -> int:

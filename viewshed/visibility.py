@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from viewshed._jit import announce
 from viewshed.constants import HIDDEN, NODATA, UNRESOLVED, VISIBLE
 from viewshed.errors import InputError, ViewshedError
 from viewshed.kernels import sweep as k
@@ -208,11 +209,9 @@ def _own_cell(
     own = np.zeros(k.N_OWN)
     own[k.O_U : k.O_U + 4], own[k.O_V : k.O_V + 4] = u.ravel(), v.ravel()
     own[k.O_F : k.O_F + 4] = f.ravel()
-    for field, values in ((k.O_F0, f), (k.O_UA - 1, u), (k.O_VA - 1, v)):
-        at, along, across, twist = _bilinear(values, -x0, -y0)
-        own[field + 1 : field + 4] = along, across, twist
-        if values is f:
-            own[field] = at
+    own[k.O_F0 : k.O_F0 + 4] = _bilinear(f, -x0, -y0)
+    own[k.O_UA : k.O_UA + 3] = _bilinear(u, -x0, -y0)[1:]
+    own[k.O_VA : k.O_VA + 3] = _bilinear(v, -x0, -y0)[1:]
     if scene.affine:
         own[k.O_UA : k.O_UA + 3] = 1.0, 0.0, 0.0
         own[k.O_VA : k.O_VA + 3] = 0.0, 1.0, 0.0
@@ -280,7 +279,7 @@ def _octant(scene: _Scene, by_row: bool, signs: tuple[int, int], clearance: bool
     geo[k.D20] = radii[0] * n[0] ** 2 + radii[1] * e[0] ** 2
     geo[k.D11] = 2.0 * (radii[0] * n[0] * n[1] + radii[1] * e[0] * e[1])
     geo[k.D02] = radii[0] * n[1] ** 2 + radii[1] * e[1] ** 2
-    geo[k.G20], geo[k.G11], geo[k.G02] = e[0] ** 2 + n[0] ** 2, 2 * e @ (0, 0), 0.0
+    geo[k.G20] = e[0] ** 2 + n[0] ** 2
     geo[k.G11] = 2.0 * (e[0] * e[1] + n[0] * n[1])
     geo[k.G02] = e[1] ** 2 + n[1] ** 2
     geo[k.EPS] = 1e-10 / max(rows, cols, 100)
@@ -575,7 +574,7 @@ def compute(
     if not (math.isfinite(eye_height) and math.isfinite(target_height)):
         msg = f"eye height {eye_height} and target height {target_height} must be finite numbers"
         raise InputError(msg)
-    elevation = np.ascontiguousarray(elevation, dtype=np.float32)
+    elevation = np.require(elevation, dtype=np.float32, requirements=["C", "W"])
     ground = ground_at(elevation, post_map.row0, post_map.col0)
     if eye_height < 0.0:
         msg = (
@@ -604,6 +603,7 @@ def compute(
     def sweep_task(piece: _Piece) -> Callable[[], None]:
         return lambda: _sweep_piece(scene, state, clear, piece, workers)
 
+    announce(k.sweep)
     for octant in axes:
         k.axis(elevation, state, clear, octant.ints, octant.geo, octant.own)
     _run([sweep_task(piece) for piece in pieces], n_threads, progress)

@@ -25,7 +25,7 @@ from rasterio.errors import CRSError, RasterioError
 from rasterio.windows import Window
 
 from viewshed import geodesy
-from viewshed.errors import OutputError
+from viewshed.errors import InputError, OutputError
 from viewshed.grid import Grid
 from viewshed.io._atomic import file_sha256
 
@@ -106,6 +106,7 @@ def write_cog(
     unit: str,
     tags: Mapping[str, str],
     overview: str = "nearest",
+    creation_options: Mapping[str, str] | None = None,
 ) -> dict[str, str]:
     """Write an array as a Cloud Optimized GeoTIFF and prove that it is whole.
 
@@ -127,6 +128,8 @@ def write_cog(
         Tags of the file; ``VIEWSHED_`` is put before a name that lacks it.
     overview : {"nearest", "mode"}, optional
         How the coarser copies for display are made.
+    creation_options : mapping of str to str, optional
+        Options of the COG driver that replace ours, one of `CREATION_OPTIONS`.
 
     Returns
     -------
@@ -137,7 +140,10 @@ def write_cog(
     ------
     OutputError
         If the file cannot be written, or does not read back as it should. Nothing is left behind.
+    InputError
+        If a creation option is not one that may be set.
     """
+    chosen = _checked_options(creation_options or {})
     final = Path(path)
     if array.shape != grid.shape:
         msg = f"array of shape {array.shape} does not fit the grid of shape {grid.shape}"
@@ -148,7 +154,7 @@ def write_cog(
     try:
         with _quiet_stderr(), gdal_env():
             _write_draft(draft, array, grid, facts)
-            _copy(draft, made, overview=overview, is_float=array.dtype.kind == "f")
+            _copy(draft, made, _cog_options(overview, array.dtype.kind == "f") | chosen)
             draft.unlink()
             _sync(made)
             pixels = _read_back(made, array, grid, facts)
@@ -215,13 +221,30 @@ def _write_draft(path: Path, array: NDArray[Any], grid: Grid, facts: _Facts) -> 
             file.write(np.ascontiguousarray(array[first : first + count]), 1, window=window)
 
 
-def _copy(draft: Path, made: Path, *, overview: str, is_float: bool) -> None:
-    """Make the COG in one call of the library, which Ctrl-C still ends at once.
+#: Options of the COG driver that a caller may set.
+CREATION_OPTIONS = (
+    "BIGTIFF",
+    "BLOCKSIZE",
+    "COMPRESS",
+    "LEVEL",
+    "NUM_THREADS",
+    "OVERVIEWS",
+    "OVERVIEW_COMPRESS",
+    "PREDICTOR",
+    "STATISTICS",
+)
 
-    The call runs in a thread of its own; taking its source away makes it fail soon.
-    """
-    options = {
-        "driver": "COG",
+
+def _checked_options(options: Mapping[str, str]) -> dict[str, Any]:
+    for name in options:
+        if name.upper() not in CREATION_OPTIONS:
+            msg = f"creation option {name!r} is unknown: choose from {', '.join(CREATION_OPTIONS)}"
+            raise InputError(msg)
+    return {name.lower(): value for name, value in options.items()}
+
+
+def _cog_options(overview: str, is_float: bool) -> dict[str, Any]:
+    return {
         "blocksize": BLOCK,
         "compress": "DEFLATE",
         "level": 6,
@@ -230,12 +253,19 @@ def _copy(draft: Path, made: Path, *, overview: str, is_float: bool) -> None:
         "bigtiff": "IF_SAFER",
         "num_threads": _threads(),
     }
+
+
+def _copy(draft: Path, made: Path, options: Mapping[str, Any]) -> None:
+    """Make the COG in one call of the library, which Ctrl-C still ends at once.
+
+    The call runs in a thread of its own; taking its source away makes it fail soon.
+    """
     failed: list[BaseException] = []
 
     def run() -> None:
         try:
             with gdal_env():
-                rasterio.shutil.copy(draft, made, **options)
+                rasterio.shutil.copy(draft, made, driver="COG", **options)
         except BaseException as error:
             failed.append(error)
 
