@@ -161,7 +161,9 @@ class MapResult:
             told = f"{_length(far['distance_m'])} off at {far['bearing_deg']:.1f} degrees"
             rows.append(("Farthest visible", told))
         rows.append(("Refraction", self.refraction.describe()))
-        rows.append(("Position error", f"up to {self.post_map.error_m:.2g} m"))
+        error = self.post_map.error_m
+        told = f"up to {error:.2g} m" if error >= 1e-3 else "under 1 mm"
+        rows.append(("Position error of the map", told))
         return rows
 
     @cached_property

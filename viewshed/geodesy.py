@@ -82,6 +82,57 @@ def _base(crs: CRS) -> CRS:
     return _horizontal(crs.geodetic_crs)
 
 
+def horizontal_unit_factor(crs: CRS) -> float | None:
+    """Give the metres in one unit of x and y.
+
+    Parameters
+    ----------
+    crs : pyproj.CRS
+        Projected or geographic, with or without a vertical part.
+
+    Returns
+    -------
+    float or None
+        Metres per unit [m]; None for a geographic CRS, whose unit is an angle.
+    """
+    flat = _horizontal(crs)
+    if flat.is_geographic:
+        return None
+    return float(flat.axis_info[0].unit_conversion_factor)
+
+
+def vertical_unit_factor(crs: CRS) -> float | None:
+    """Give the metres in one unit of height.
+
+    Parameters
+    ----------
+    crs : pyproj.CRS
+        Any CRS that `crs_from_user` lets pass.
+
+    Returns
+    -------
+    float or None
+        Metres per unit [m]; None where the CRS has no vertical axis and so does not say.
+
+    Raises
+    ------
+    InputError
+        If the vertical axis counts downwards.
+    """
+    whole = crs.source_crs if crs.is_bound and crs.source_crs is not None else crs
+    parts = whole.sub_crs_list[1:] if whole.is_compound else []
+    axes = [axis for part in parts for axis in part.axis_info] or list(whole.axis_info[2:3])
+    if not axes:
+        return None
+    if axes[0].direction.lower() == "down":
+        msg = f"heights of CRS {crs.name!r} count downwards; convert them to count upwards"
+        raise InputError(msg)
+    return float(axes[0].unit_conversion_factor)
+
+
+# --- from coordinates to geodesics --------------------------------------------------------------
+
+
 class Frame(NamedTuple):
     """The way between the coordinates of one CRS and geodesics on its own datum.
 
@@ -168,17 +219,12 @@ def _frame_of_wkt(wkt: str) -> Frame:
 
 
 def frame_of(crs: CRS | str) -> Frame:
-    """Give the frame of a CRS.
-
-    Parameters
-    ----------
-    crs : pyproj.CRS or str
-        Projected or geographic; as text, its WKT.
+    """Give the frame of a CRS, which may be its WKT.
 
     Returns
     -------
     Frame
-        The way to its own geodesics.
+        The way between its coordinates and its own geodesics.
 
     Raises
     ------
@@ -186,54 +232,6 @@ def frame_of(crs: CRS | str) -> Frame:
         If it is no such CRS or has no ellipsoid.
     """
     return _frame_of_wkt(crs if isinstance(crs, str) else crs.to_wkt())
-
-
-def horizontal_unit_factor(crs: CRS) -> float | None:
-    """Give the metres in one unit of x and y.
-
-    Parameters
-    ----------
-    crs : pyproj.CRS
-        Projected or geographic, with or without a vertical part.
-
-    Returns
-    -------
-    float or None
-        Metres per unit [m]; None for a geographic CRS, whose unit is an angle.
-    """
-    flat = _horizontal(crs)
-    if flat.is_geographic:
-        return None
-    return float(flat.axis_info[0].unit_conversion_factor)
-
-
-def vertical_unit_factor(crs: CRS) -> float | None:
-    """Give the metres in one unit of height.
-
-    Parameters
-    ----------
-    crs : pyproj.CRS
-        Any CRS that `crs_from_user` lets pass.
-
-    Returns
-    -------
-    float or None
-        Metres per unit [m]; None where the CRS has no vertical axis and so does not say.
-
-    Raises
-    ------
-    InputError
-        If the vertical axis counts downwards.
-    """
-    whole = crs.source_crs if crs.is_bound and crs.source_crs is not None else crs
-    parts = whole.sub_crs_list[1:] if whole.is_compound else []
-    axes = [axis for part in parts for axis in part.axis_info] or list(whole.axis_info[2:3])
-    if not axes:
-        return None
-    if axes[0].direction.lower() == "down":
-        msg = f"heights of CRS {crs.name!r} count downwards; convert them to count upwards"
-        raise InputError(msg)
-    return float(axes[0].unit_conversion_factor)
 
 
 # --- points, distances, bearings ----------------------------------------------------------------

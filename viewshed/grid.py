@@ -3,10 +3,10 @@
 A `Grid` says where cells are. A *post* is the centre of a cell; index coordinates ``(row, col)``
 count posts, so whole numbers are cell centres. A `PostMap` gives the true place of each post as
 seen from one observer, and `CellAreas` the true size of each cell. All three hold numbers only:
-they are made from exact geodesic values by `viewshed.geodesy`.
+the latter two are made from exact geodesic values by `viewshed.postmap` and `viewshed.areas`.
 """
 
-from dataclasses import dataclass, replace, field
+from dataclasses import dataclass, field, replace
 from math import isfinite
 
 import numpy as np

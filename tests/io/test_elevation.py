@@ -265,7 +265,7 @@ def test_mosaic(make_dem):
     expected[:20, 25:] = np.nan
     np.testing.assert_array_equal(terrain.read(0, 0, 40, 50), expected)
     np.testing.assert_array_equal(terrain.read(15, 20, 9, 11), expected[15:24, 20:31])
-    with pytest.raises(DataError, match=r"no height is known in the 5 x 5 cells from row 2"):
+    with pytest.raises(DataError, match=r"only voids in the 5 x 5 cells from row 2"):
         terrain.read(2, 30, 5, 5)
 
 
@@ -373,7 +373,7 @@ def test_all_void(make_dem):
     array = PLAIN.copy()
     array[:6] = -9999
     terrain = open_terrain(make_dem(array=array, nodata=-9999))
-    with pytest.raises(DataError, match=r"dem\.tif: no height is known in the 6 x 10 cells"):
+    with pytest.raises(DataError, match=r"dem\.tif: only voids in the 6 x 10 cells"):
         terrain.read(0, 0, 6, 10)
     assert np.isnan(terrain.read(*ALL)).sum() == 60
 

@@ -2,6 +2,7 @@
 
 import struct
 import zlib
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -9,7 +10,7 @@ from affine import Affine
 
 from viewshed.constants import CAUTIONS
 from viewshed.grid import Grid, PostMap
-from viewshed.io import picture
+from viewshed.io import _ground, _page, picture
 from viewshed.places import Sector
 
 WORDS = picture.Words(
@@ -51,14 +52,14 @@ def scene(rows=120, cols=120, *, visible=None, elevation=None, jacobian=None, **
 
 def colours_at(drawn, places, size=(400, 400)):
     """Colours of a scene at local places east, north [m]."""
-    view = picture.view_of(drawn, *size)
-    rgb, found = picture.paint(drawn, view)
+    view = _ground.view_of(drawn, *size)
+    rgb, found = _ground.paint(drawn, view)
     pixels = [view.place(east, north) for east, north in places]
     return np.array([rgb[int(y), int(x)] for x, y in pixels]), found, view
 
 
 def is_plum(rgb):
-    return np.abs(rgb / rgb.max() - np.array(picture.PLUM) / max(picture.PLUM)).max() < 0.05
+    return np.abs(rgb / rgb.max() - np.array(_ground.PLUM) / max(_ground.PLUM)).max() < 0.05
 
 
 def grey(rgb):
@@ -71,8 +72,8 @@ def test_the_classes_tell_apart_in_colour_and_in_grey():
     visible[60:, :60] = 2  # south-west
     visible[60:, 60:] = 255  # south-east, void
     elevation = np.where(visible == 255, np.nan, 0).astype(np.float32)
-    view = picture.view_of(scene(), 400, 400)
-    rgb, found = picture.paint(scene(visible=visible, elevation=elevation), view)
+    view = _ground.view_of(scene(), 400, 400)
+    rgb, found = _ground.paint(scene(visible=visible, elevation=elevation), view)
     seen, hidden = rgb[100, 300], rgb[100, 100]
     unsure, void = rgb[250:350, 60:150].reshape(-1, 3), rgb[250:350, 250:340].reshape(-1, 3)
     assert is_plum(seen)
@@ -111,8 +112,8 @@ def test_a_strip_one_cell_wide_stays_on_the_page(n, across):
     line = n // 3
     visible[(slice(None), line) if across else line] = 1
     drawn = scene(n, n, visible=visible, jacobian=[[cell, 0.0], [0.0, -cell]])
-    view = picture.view_of(drawn, 500, 500)
-    rgb, found = picture.paint(drawn, view)
+    view = _ground.view_of(drawn, 500, 500)
+    rgb, found = _ground.paint(drawn, view)
     purple = rgb[..., 2] - rgb[..., 1] > 0.08
     along = purple.any(axis=1 if across else 0)
     middle = slice(len(along) // 4, 3 * len(along) // 4)
@@ -124,20 +125,20 @@ def test_scattered_single_cells_do_not_look_solid():
     visible = np.zeros((4000, 4000), np.uint8)
     visible[::8, ::8] = 1
     drawn = scene(4000, 4000, visible=visible, jacobian=[[3.0, 0.0], [0.0, -3.0]])
-    rgb, _ = picture.paint(drawn, picture.view_of(drawn, 500, 500))
-    bare, _ = picture.paint(scene(), picture.view_of(scene(), 500, 500))
+    rgb, _ = _ground.paint(drawn, _ground.view_of(drawn, 500, 500))
+    bare, _ = _ground.paint(scene(), _ground.view_of(scene(), 500, 500))
     part = grey(bare[200:300, 200:300].mean((0, 1))) - grey(rgb[200:300, 200:300].mean((0, 1)))
     assert 0.01 < part < 0.25
 
 
 def test_shares_and_heights_of_blocks(monkeypatch):
-    monkeypatch.setattr(picture, "STRIP_CELLS", 50)
+    monkeypatch.setattr(_ground, "STRIP_CELLS", 50)
     rng = np.random.default_rng(5)
     visible = rng.choice(np.array([0, 1, 2, 255], np.uint8), (23, 31))
     elevation = rng.random((23, 31), dtype=np.float32)
     elevation[(visible == 255) & (rng.random((23, 31)) < 0.5)] = np.nan
     for by, bx in [(1, 1), (4, 3), (1, 5), (7, 1), (40, 40)]:
-        shares, heights = picture._blocks(visible, elevation, by, bx)
+        shares, heights = _ground.blocks(visible, elevation, by, bx)
         for i in range(shares.shape[0]):
             for j in range(shares.shape[1]):
                 cut = np.s_[i * by : (i + 1) * by, j * bx : (j + 1) * bx]
@@ -168,7 +169,7 @@ def test_curved_grid_places_are_found_again():
     fields = {**vars(post_map), "cp": bent[..., 0], "cq": bent[..., 1]}
     drawn = scene(post_map=PostMap(**fields))
     rows, cols = np.mgrid[0:120:7, 0:120:7].astype(float)
-    found = picture.index_of(drawn, *drawn.post_map.en(rows, cols))
+    found = _ground.index_of(drawn, *drawn.post_map.en(rows, cols))
     np.testing.assert_allclose(found[0], rows, atol=1e-3)
     np.testing.assert_allclose(found[1], cols, atol=1e-3)
 
@@ -206,7 +207,7 @@ def test_same_input_same_bytes_and_no_date(tmp_path):
 def boxes(monkeypatch):
     """Boxes of all texts of the page that is drawn, in pixels from the bottom left."""
     kept = []
-    compose = picture.Page.compose
+    compose = _page.Page.compose
 
     def and_look(page, *args):
         compose(page, *args)
@@ -216,7 +217,7 @@ def boxes(monkeypatch):
             kept.append((text.get_text(), *box.extents))
         kept.append((None, 0, 0, page.width, page.height))
 
-    monkeypatch.setattr(picture.Page, "compose", and_look)
+    monkeypatch.setattr(_page.Page, "compose", and_look)
     return kept
 
 
@@ -252,7 +253,7 @@ LONG = picture.Words(
 def test_no_text_is_cut_off_or_written_over_another(tmp_path, boxes, changes, words):
     drawn = scene(**changes)
     x, y, _ = drawn.observers[0]
-    named = picture.replace(drawn, observers=[(x, y, "A lookout with quite a long name")])
+    named = replace(drawn, observers=[(x, y, "A lookout with quite a long name")])
     picture.draw_map(tmp_path / "page.png", named, words, dpi=100)
     *texts, (_, _, _, width, height) = boxes
     assert len(texts) > 12
@@ -272,7 +273,7 @@ def test_no_text_is_cut_off_or_written_over_another(tmp_path, boxes, changes, wo
 def test_odd_characters_are_written_as_they_are_or_as_boxes(tmp_path, boxes):
     drawn = scene()
     x, y, _ = drawn.observers[0]
-    odd = picture.replace(drawn, observers=[(x, y, "Übersicht $x^2$ \t東")])
+    odd = replace(drawn, observers=[(x, y, "Übersicht $x^2$ \t東")])
     picture.draw_map(tmp_path / "page.png", odd, WORDS, dpi=80)
     assert "Übersicht $x^2$  □" in [text for text, *_ in boxes]
 
@@ -293,9 +294,9 @@ def test_a_folder_that_is_not_there_is_an_os_error(tmp_path):
     ],
 )
 def test_rings_are_round_and_the_range_is_the_last(range_m, rings):
-    assert picture.ring_distances(range_m) == rings
+    assert _page.ring_distances(range_m) == rings
 
 
 @pytest.mark.parametrize(("room", "length"), [(7_300.0, 5_000.0), (10.0, 10.0), (0.19, 0.1)])
 def test_scale_bar_has_a_round_length(room, length):
-    assert picture.round_down(room) == length
+    assert _page.round_down(room) == length

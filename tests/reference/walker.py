@@ -4,6 +4,7 @@ It is the meaning of the result, spelled out. Nothing here is shared with the fa
 elevations, the post coordinates and the constants.
 """
 
+import itertools
 import math
 
 import numpy as np
@@ -18,12 +19,31 @@ class Walker:
         Elevation, NaN where void.
     post_map : PostMap
         Post coordinates p, q (sight lines are straight in them) and the metres they stand for.
-    eye_height, k, range_m, sector
+    eye_height, target_height, k, range_m, sector
         As for `viewshed.visibility.compute`.
+    without : set of str
+        Bulges left out, to show that they matter: "own" in the observer's cell, "last" in the
+        target's, "between" in the others.
+
+    Attributes
+    ----------
+    margin : (rows, cols) float64
+        Clearance also where the answer is unresolved, after `answer` [m].
     """
 
-    def __init__(self, z, post_map, *, eye_height, target_height=0.0, k=0.13, range_m=math.inf,
-                 sector=None):
+    def __init__(
+        self,
+        z,
+        post_map,
+        *,
+        eye_height,
+        target_height=0.0,
+        k=0.13,
+        range_m=math.inf,
+        sector=None,
+        without=(),
+    ):
+        self.without = without
         self.z = z.astype(np.float64)
         self.row0, self.col0 = post_map.row0, post_map.col0
         self.target_height, self.range_m, self.sector = target_height, range_m, sector
@@ -64,11 +84,10 @@ class Walker:
         rows, cols = self.z.shape
         near_r = {math.floor(self.row0) + d for d in (-1, 0, 1)} | {math.ceil(self.row0) + 1}
         near_c = {math.floor(self.col0) + d for d in (-1, 0, 1)} | {math.ceil(self.col0) + 1}
-        for r in near_r:
-            for c in near_c:
-                if (abs(r - self.row0) <= 1 and abs(c - self.col0) <= 1
-                        and 0 <= r < rows and 0 <= c < cols):
-                    yield r, c
+        for r, c in itertools.product(near_r, near_c):
+            touches = abs(r - self.row0) <= 1 and abs(c - self.col0) <= 1
+            if touches and 0 <= r < rows and 0 <= c < cols:
+                yield r, c
 
     def bent_radius(self):
         return math.sqrt(self.M * self.P) / (1 - self.k)
@@ -90,32 +109,28 @@ class Walker:
         rows, cols = self.z.shape
         state = np.full((rows, cols), 255, np.uint8)
         clearance = np.full((rows, cols), np.nan)
+        self.margin = np.full((rows, cols), np.nan)
         east, north = self.metres()
         distance = np.hypot(east, north)
         bearing = np.degrees(np.arctan2(east, north))
         target = self.flat_height(self.z + self.target_height)
-        for r in range(rows):
-            for c in range(cols):
-                if np.isnan(self.z[r, c]) or distance[r, c] > self.range_m * (1 + 1e-12):
-                    continue
-                if self.sector is not None and not self.sector.contains(bearing[r, c]):
-                    continue
-                if (r, c) == (self.row0, self.col0):
-                    state[r, c] = 1
-                    clearance[r, c] = self.eye_height + self.target_height
-                    continue
+        for r, c in itertools.product(range(rows), range(cols)):
+            if np.isnan(self.z[r, c]) or distance[r, c] > self.range_m * (1 + 1e-12):
+                continue
+            if self.sector is not None and not self.sector.contains(bearing[r, c]):
+                continue
+            horizon, unknown, length = -math.inf, False, 1.0  # at the observer's own place
+            if (r, c) != (self.row0, self.col0):
                 horizon, unknown, length = self.walk(r, c)
-                clear = target[r, c] - horizon * length
-                if clear < 0:
-                    state[r, c] = 0
-                elif unknown:
-                    state[r, c] = 2
-                    clear = np.nan
-                else:
-                    state[r, c] = 1
-                if clear == np.inf:
-                    clear = self.eye_height + self.target_height
-                clearance[r, c] = clear
+            clear = target[r, c] - horizon * length
+            if clear == math.inf:  # nothing stands between
+                clear = self.eye_height + self.target_height
+            self.margin[r, c] = clear
+            if clear < 0:
+                state[r, c] = 0
+            else:
+                state[r, c] = 2 if unknown else 1
+            clearance[r, c] = clear if state[r, c] < 2 else math.nan
         return state, clearance
 
     def walk(self, rt, ct):
@@ -127,19 +142,21 @@ class Walker:
         ray = (self.p[rt, ct] / length, self.q[rt, ct] / length)
         points = self.crossings(rt, ct, ray, length)
         horizon, unknown = -math.inf, False
-        for distance, row, col, height, known in points:
-            if not known:
-                unknown = True
-            else:
+        for distance, _, _, height, known in points:
+            if known:
                 horizon = max(horizon, height / distance)
+            else:
+                unknown = True
         # sections: from the observer, crossing to crossing, to the target
         observer = (0.0, self.row0, self.col0, None, True)
         goal = (length, float(rt), float(ct), self.f[rt, ct], True)
         stops = [observer, *points, goal]
-        for start, end in zip(stops, stops[1:], strict=False):
+        for start, end in itertools.pairwise(stops):
             peak, inside_unknown = self.section(start, end, ray)
-            horizon = max(horizon, peak)
             unknown = unknown or inside_unknown
+            where = "own" if start is observer else "last" if end is goal else "between"
+            if where not in self.without:
+                horizon = max(horizon, peak)
         return horizon, unknown, length
 
     def crossings(self, rt, ct, ray, length):
@@ -187,10 +204,10 @@ class Walker:
                     continue  # behind the observer
                 found[where] = (height, not np.isnan(height), distance)
         points = []
-        for (row, col), (height, known, distance) in found.items():
-            points.append((distance, row, col, height, known))
-        points = [w for w in points if 0 < w[0] < length * (1 - 1e-13)
-                  and (w[1], w[2]) not in ((rt, ct), (self.row0, self.col0))]
+        for where, (height, known, distance) in found.items():
+            between = 0 < distance < length * (1 - 1e-13)
+            if between and where not in ((rt, ct), (self.row0, self.col0)):
+                points.append((distance, *where, height, known))
         points.sort()
         return self.sharpen_first(points, ray)
 
@@ -199,9 +216,9 @@ class Walker:
         rows, cols = self.z.shape
         known = not np.isnan(self.f[r, c])
         around = [(r - 1, c), (r + 1, c), (r, c - 1), (r, c + 1)]
-        edges = [at for at in around
-                 if 0 <= at[0] < rows and 0 <= at[1] < cols and not np.isnan(self.f[at])]
-        return (self.f[r, c] if edges or not known else -math.inf), known
+        inside = [at for at in around if 0 <= at[0] < rows and 0 <= at[1] < cols]
+        has_edge = not all(np.isnan(self.f[at]) for at in inside)
+        return (self.f[r, c] if has_edge or not known else -math.inf), known
 
     def place(self, row, col):
         """p and q of a place on a grid line, straight between its two posts."""
@@ -217,14 +234,14 @@ class Walker:
         rows, cols = self.z.shape
         if not (0 <= r0 < rows - 1 and 0 <= c0 < cols - 1):
             return None
-        box = np.s_[r0:r0 + 2, c0:c0 + 2]
+        box = np.s_[r0 : r0 + 2, c0 : c0 + 2]
         if np.isnan(self.f[box]).any():
             return None
         a, b = self.row0 - r0, self.col0 - c0
 
         def differences(v):
-            at = ((v[0, 0] * (1 - b) + v[0, 1] * b) * (1 - a)
-                  + (v[1, 0] * (1 - b) + v[1, 1] * b) * a)
+            first, second = v[0, 0] * (1 - b) + v[0, 1] * b, v[1, 0] * (1 - b) + v[1, 1] * b
+            at = first * (1 - a) + second * a
             by_col = (v[0, 1] - v[0, 0]) * (1 - a) + (v[1, 1] - v[1, 0]) * a
             by_row = (v[1, 0] - v[0, 0]) * (1 - b) + (v[1, 1] - v[0, 1]) * b
             return at, by_col, by_row, v[1, 1] - v[1, 0] - v[0, 1] + v[0, 0]
@@ -232,35 +249,36 @@ class Walker:
         return differences(self.f[box]), differences(self.p[box]), differences(self.q[box])
 
     def own_exit(self, ray, r0, c0):
-        """First crossing, out of the own cell: distance, x, y (index offsets) and cell data."""
+        """Way out of the own cell: (distance, x, y), x and y as index offsets, and its f."""
         cell = self.own_cell(r0, c0)
         if cell is None:
             return None
         f, p, q = cell
-        best = None
+        ends = []
         for x in (c0 - self.col0, c0 + 1 - self.col0):  # its column lines
             down = ray[0] * (q[2] + q[3] * x) - ray[1] * (p[2] + p[3] * x)
             if x == 0 or down == 0:
                 continue
-            best = self.nearer(best, x, x * (ray[1] * p[1] - ray[0] * q[1]) / down, p, q, ray, r0, c0)
+            ends.append((x, x * (ray[1] * p[1] - ray[0] * q[1]) / down))
         for y in (r0 - self.row0, r0 + 1 - self.row0):  # its row lines
             along = ray[1] * (p[1] + p[3] * y) - ray[0] * (q[1] + q[3] * y)
             if y == 0 or along == 0:
                 continue
-            best = self.nearer(best, y * (ray[0] * q[2] - ray[1] * p[2]) / along, y, p, q, ray, r0, c0)
-        return best, f
-
-    def nearer(self, best, x, y, p, q, ray, r0, c0):
-        slack = 1e-12
-        if not (c0 - self.col0 - slack <= x <= c0 + 1 - self.col0 + slack
-                and r0 - self.row0 - slack <= y <= r0 + 1 - self.row0 + slack):
-            return best
-        px = p[1] * x + p[2] * y + p[3] * x * y
-        qx = q[1] * x + q[2] * y + q[3] * x * y
-        distance = ray[0] * px + ray[1] * qx
-        if distance <= 0:
-            return best
-        return (distance, x, y) if best is None or distance < best[0] else best
+            ends.append((y * (ray[0] * q[2] - ray[1] * p[2]) / along, y))
+        ways = []
+        for x, y in ends:
+            if abs(x + self.col0 - c0 - 0.5) > 0.5 + 1e-12:
+                continue
+            if abs(y + self.row0 - r0 - 0.5) > 0.5 + 1e-12:
+                continue
+            px = p[1] * x + p[2] * y + p[3] * x * y
+            qx = q[1] * x + q[2] * y + q[3] * x * y
+            distance = ray[0] * px + ray[1] * qx
+            if distance > 0:
+                ways.append((distance, x, y))
+        if not ways:
+            return None
+        return min(ways, key=lambda way: way[0]), f
 
     def sharpen_first(self, points, ray):
         """Replace the first crossing by one worked from differences at the observer."""
@@ -269,51 +287,55 @@ class Walker:
         r0 = math.floor((self.row0 + points[0][1]) / 2)
         c0 = math.floor((self.col0 + points[0][2]) / 2)
         found = self.own_exit(ray, r0, c0)
-        if found is None or found[0] is None:
+        if found is None:
             return points
         (distance, x, y), f = found
         first = points[0]
         if abs(first[0] - distance) > 1e-6 or not first[4]:
             return points
         height = f[0] + f[1] * x + f[2] * y + f[3] * x * y
-        # as a slope it is f0 / distance + a direction's rise: keep it as height over distance
         return [(distance, first[1], first[2], height, True), *points[1:]]
 
     def section(self, start, end, ray):
         """Greatest slope strictly inside one cell, and whether the cell is unknown."""
-        d1, r1, c1, f1, known1 = start
-        d2, r2, c2, f2, known2 = end
-        r, c = math.floor((r1 + r2) / 2), math.floor((c1 + c2) / 2)
+        _, r1, c1, _, known1 = start
+        _, r2, c2, _, known2 = end
         along_line = (r1 == r2 == math.floor(r1)) or (c1 == c2 == math.floor(c1))
-        rows, cols = self.z.shape
         if along_line:
             return -math.inf, False
-        if not (0 <= r < rows - 1 and 0 <= c < cols - 1):
+        r, c = math.floor((r1 + r2) / 2), math.floor((c1 + c2) / 2)
+        rows, cols = self.z.shape
+        inside = 0 <= r < rows - 1 and 0 <= c < cols - 1
+        if not inside or np.isnan(self.f[r : r + 2, c : c + 2]).any():
             return -math.inf, True
-        box = self.f[r:r + 2, c:c + 2]
-        if np.isnan(box).any():
-            return -math.inf, True
-        if d1 == 0.0:
+        if start[0] == 0.0:
             return self.own_section(ray, r, c), False
         if not (known1 and known2):
             return -math.inf, False
+        return self.peak(start, end, self.f[r : r + 2, c : c + 2]), False
+
+    @staticmethod
+    def peak(start, end, box):
+        """Greatest slope between two crossings, strictly inside their cell; -inf without one."""
+        d1, r1, c1, f1, _ = start
+        d2, r2, c2, f2, _ = end
         twist = box[1, 1] - box[1, 0] - box[0, 1] + box[0, 0]
         bulge = -twist * (r2 - r1) * (c2 - c1)  # f rises bulge * s * (1 - s) above its chord
-        if bulge <= 0 or d2 <= d1:
-            return -math.inf, False
         span = d2 - d1
-        # slope of the ray to the surface grows at the start and falls at the end?
+        if bulge <= 0 or span <= 0:
+            return -math.inf
+        # the slope to the surface grows at the start and falls at the end, or has no top inside
         if (f2 - f1 + bulge) * d1 <= f1 * span or (f2 - f1 - bulge) * d2 >= f2 * span:
-            return -math.inf, False
+            return -math.inf
         turn = (d1 * f2 - d2 * f1) / bulge
         top = math.sqrt(d1 * d2 + span * turn)
         s = (d1 + turn) / (top + d1)
-        return (f1 + s * (f2 - f1) + bulge * s * (1 - s)) / top, False
+        return (f1 + s * (f2 - f1) + bulge * s * (1 - s)) / top
 
     def own_section(self, ray, r, c):
         """The first section, from the observer to the way out of its cell."""
         found = self.own_exit(ray, r, c)
-        if found is None or found[0] is None:
+        if found is None:
             return -math.inf
         (distance, x, y), f = found
         bulge = -f[3] * x * y

@@ -9,13 +9,12 @@ import os
 import warnings
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field, replace
-from math import atan2, degrees, isfinite, isinf, isnan
+from math import isfinite, isinf, isnan
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import rasterio
-from affine import Affine
 from numpy.typing import NDArray
 from rasterio.enums import MaskFlags
 from rasterio.errors import NotGeoreferencedWarning
@@ -25,9 +24,9 @@ from viewshed import geodesy
 from viewshed.errors import DataError, InputError, ViewshedWarning
 from viewshed.grid import Grid
 from viewshed.io._atomic import file_sha256
+from viewshed.io.mosaic import Heights, Tile, fit_together, overlaps
 from viewshed.io.raster import GDAL_ERRORS, gdal_env, gdal_message
 
-Heights = NDArray[np.float32]
 PathLike = str | os.PathLike[str]
 
 #: Metres in one unit of height, by the name of the unit that the user states.
@@ -45,8 +44,6 @@ _UNIT_NAMES = {
     0.1: ("dm", "decimetre", "decimetres", "decimeter", "decimeters"),
     1000.0: ("km", "kilometre", "kilometres", "kilometer", "kilometers"),
 }
-#: Farthest that the cells of two tiles may lie off each other [cells].
-_MISFIT = 0.01
 #: Most cells of a strip that is read at a time.
 _STRIP_CELLS = 1 << 22
 #: Values that mean a void by habit, also where a file forgets to declare them.
@@ -57,28 +54,6 @@ _HUGE = 1e30
 _SIDE_SUFFIXES = {".ovr"}
 #: How the WKT of a CRS begins that is tied to no place.
 _LOCAL_CRS = ("LOCAL_CS", "ENGCRS", "ENGINEERINGCRS")
-
-
-@dataclass(frozen=True)
-class Tile:
-    """What one raster says about itself, and where in the mosaic it lies."""
-
-    path: Path
-    shape: tuple[int, int]
-    transform: Affine
-    crs_wkt: str
-    dtype: str
-    block: tuple[int, int]
-    nodata: float | None
-    is_masked: bool
-    scale: float
-    offset: float
-    unit: str
-    files: tuple[Path, ...]
-    height_factor: float = 1.0
-    height_unit_origin: str = ""
-    row0: int = 0
-    col0: int = 0
 
 
 @dataclass(frozen=True)
@@ -147,17 +122,12 @@ class Terrain:
         out = np.full((rows, cols), np.nan, dtype=np.float32)
         known = False
         with gdal_env():
-            for tile in self.tiles:
-                first, left = max(row_off, tile.row0), max(col_off, tile.col0)
-                last = min(row_off + rows, tile.row0 + tile.shape[0])
-                right = min(col_off + cols, tile.col0 + tile.shape[1])
-                if first < last and left < right:
-                    part = out[first - row_off : last - row_off, left - col_off : right - col_off]
-                    known |= _read_tile(tile, first - tile.row0, left - tile.col0, part)
+            for tile, row, col, part in overlaps(self.tiles, row_off, col_off, out):
+                known |= _read_tile(tile, row, col, part)
         if not known:
             names = ", ".join(str(path) for path in self.paths[:3])
             msg = (
-                f"{names}: no height is known in the {rows} x {cols} cells from row {row_off}, "
+                f"{names}: only voids in the {rows} x {cols} cells from row {row_off}, "
                 f"column {col_off}; move the observer or use another elevation grid"
             )
             raise DataError(msg)
@@ -235,7 +205,7 @@ def open_terrain(
     files = dict.fromkeys(Path(name) for name in names)
     with gdal_env():
         tiles = [_height_unit(_describe(file, stated), height_unit) for file in files]
-    grid, tiles = _fit_together(tiles)
+    grid, tiles = fit_together(tiles)
     return Terrain(
         grid=grid,
         height_factor=tiles[0].height_factor,
@@ -424,7 +394,8 @@ def _read_tile(tile: Tile, row: int, col: int, out: Heights) -> bool:
     if missing:
         msg = (
             f"{tile.path}: {missing} blocks of cells are missing in the file and count as height "
-            f"{tile.offset * tile.height_factor:g} m; if it was not written to its end, get it again"
+            f"{tile.offset * tile.height_factor:g} m; if it was not written to its end, get it "
+            "again"
         )
         warnings.warn(msg, ViewshedWarning, stacklevel=3)
     _warn_of_habitual_voids(tile, lowest)
@@ -516,64 +487,3 @@ def _warn_of_habitual_voids(tile: Tile, lowest: float) -> None:
                 "nodata and count as ground; declare them in the file"
             )
             warnings.warn(msg, ViewshedWarning, stacklevel=4)
-
-
-# --- several files ------------------------------------------------------------------------------
-
-
-def _fit_together(tiles: list[Tile]) -> tuple[Grid, list[Tile]]:
-    """Place tiles in one grid, or say which two do not fit and how they differ."""
-    first = tiles[0]
-    placed = []
-    for tile in tiles:
-        problem = _misfit(first, tile)
-        if problem:
-            msg = f"{first.path} and {tile.path} do not fit together: {problem}"
-            raise DataError(msg)
-        col, row = _offset(first, tile)
-        placed.append(replace(tile, row0=round(row), col0=round(col)))
-    top, left = min(t.row0 for t in placed), min(t.col0 for t in placed)
-    rows = max(t.row0 + t.shape[0] for t in placed) - top
-    cols = max(t.col0 + t.shape[1] for t in placed) - left
-    t = first.transform
-    x, y = Grid(first.shape, t, first.crs_wkt).xy(top - 0.5, left - 0.5)
-    transform = Affine(t.a, t.b, float(x), t.d, t.e, float(y))
-    placed = [replace(t, row0=t.row0 - top, col0=t.col0 - left) for t in placed]
-    return Grid((rows, cols), transform, first.crs_wkt), placed
-
-
-def _offset(first: Tile, tile: Tile) -> tuple[float, float]:
-    """Give the column and row of the corner of a tile in the cells of the first one."""
-    row, col = Grid(first.shape, first.transform, "").rowcol(tile.transform.c, tile.transform.f)
-    return float(col) + 0.5, float(row) + 0.5
-
-
-def _misfit(first: Tile, tile: Tile) -> str | None:
-    """Say how two tiles differ, None where they fit."""
-    if tile.crs_wkt != first.crs_wkt:
-        one, other = geodesy.crs_from_user(first.crs_wkt), geodesy.crs_from_user(tile.crs_wkt)
-        if not one.equals(other, ignore_axis_order=True):
-            return f"CRS {one.name!r} against {other.name!r}; warp one to the CRS of the other"
-    a, b = first.transform, tile.transform
-    size = max(tile.shape)
-    cell = max(abs(a.a), abs(a.b), abs(a.d), abs(a.e))
-    terms = zip((a.a, a.b, a.d, a.e), (b.a, b.b, b.d, b.e), strict=True)
-    if any(abs(p - q) * size > _MISFIT * cell for p, q in terms):
-        sizes = f"{_cell(a)} against {_cell(b)}"
-        return f"cell size {sizes}; resample one to the grid of the other"
-    col, row = _offset(first, tile)
-    across, down = abs(col - round(col)), abs(row - round(row))
-    if max(across, down) > _MISFIT:
-        return (
-            f"the cells of the second are shifted by {across:.2f} of a cell across and {down:.2f} "
-            "down; resample one to the grid of the other"
-        )
-    if first.height_factor != tile.height_factor:
-        factors = f"{first.height_factor:.7g} m against {tile.height_factor:.7g} m"
-        return f"a unit of height is {factors}; convert one of them"
-    return None
-
-
-def _cell(t: Affine) -> str:
-    turned = "" if t.b == t.d == 0.0 else f" (turned {degrees(atan2(t.d, t.a)):.4g} degrees)"
-    return f"{t.a:.10g} x {t.e:.10g}{turned}"
