@@ -158,12 +158,13 @@ class MapResult:
             rows.append((name.capitalize(), f"{area / 1e6:,.2f} km2{share}"))
         far = self.farthest_visible
         if far is not None:
-            told = f"{_length(far['distance_m'])} off at {far['bearing_deg']:.1f} degrees"
+            distance = f"{far['distance_m'] / 1000:.1f} km"
+            told = f"{distance} off at {far['bearing_deg']:.0f} degrees"
             rows.append(("Farthest visible", told))
         rows.append(("Refraction", self.refraction.describe()))
         error = self.post_map.error_m
         told = f"up to {error:.2g} m" if error >= 1e-3 else "under 1 mm"
-        rows.append(("Position error of the map", told))
+        rows.append(("Map position error", told))
         return rows
 
     @cached_property
@@ -359,13 +360,16 @@ def _place(terrain: Terrain, observer: Observer) -> tuple[float, float, float, f
     grid = terrain.grid
     x, y = observer.x, observer.y
     if observer.crs is not None:
-        x, y = geodesy.transform_point(x, y, observer.crs, grid.crs_wkt)
+        given, own = (geodesy.crs_from_user(crs) for crs in (observer.crs, grid.crs_wkt))
+        x, y = geodesy.transform_point(x, y, given, own)
     row, col = geodesy.post_position(grid, x, y)
     # a position given in decimal digits on a grid of cells is on a post if it is within rounding
     row, col = (round(v) if abs(v - round(v)) < 1e-9 else v for v in (row, col))
     if 0 <= row <= grid.rows - 1 and 0 <= col <= grid.cols - 1:
         return float(row), float(col), x, y
     told = f"the observer {_number(observer.x)},{_number(observer.y)}"
+    if observer.crs is not None:
+        told += f" (here x {_number(x)}, y {_number(y)})"
     if -0.5 <= row <= grid.rows - 0.5 and -0.5 <= col <= grid.cols - 0.5:
         msg = (
             f"{told} is in the rim of the elevation grid, less than half a cell from its edge, "
