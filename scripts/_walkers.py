@@ -88,40 +88,23 @@ def own_cell_blocks(z, start, main, minor, ray, last):
 
 
 @numba.njit(**OPTIONS)
-def strip_blocks(z, start, main, minor, ray, j, last, row):
-    """Whether the surface stands above the sight line from line j on to line j + 1.
+def strip_blocks(z, here, main, minor, u, y, i, side, ray):
+    """Whether the surface stands above the sight line from one line of posts on to the next.
 
-    The crossing of line j is looked at, that of line j + 1 belongs to the next strip.
+    `here` is the post of row i on the near line, whose crossing is looked at; that of the far
+    line belongs to the next strip. `side` tells that the sight line changes rows on the way.
     """
-    u = ray[X0] + j
-    y = ray[T] * u - ray[Y0]
-    y_end = y + ray[T]
-    i = min(int(y), row - 1)
-    i_end = min(int(y_end), row - 1)
-    here = start + j * main + i * minor
-    a = z[here]
-    b = z[here + minor]
-    c = z[here + main]
-    d = z[here + main + minor]
-    top = max(max(a, b), max(c, d))
-    side = i_end > i
-    if side:
-        e = z[here + 2 * minor]
-        f = z[here + main + 2 * minor]
-        top = max(top, max(e, f))
-    if top < ray[LEVEL] + (ray[RISE] + ray[BEND] * u) * u:
-        return False
     v = ray[Y0] + i
-    da = excess(np.float64(a), u, v, ray)
-    db = excess(np.float64(b), u, v + 1.0, ray)
-    dc = excess(np.float64(c), u + 1.0, v, ray)
-    dd = excess(np.float64(d), u + 1.0, v + 1.0, ray)
+    da = excess(np.float64(z[np.uint64(here)]), u, v, ray)
+    db = excess(np.float64(z[np.uint64(here + minor)]), u, v + 1.0, ray)
     w = y - i
     begin = da + w * (db - da)
     if begin > 0.0:
         return True
+    dc = excess(np.float64(z[np.uint64(here + main)]), u + 1.0, v, ray)
+    dd = excess(np.float64(z[np.uint64(here + main + minor)]), u + 1.0, v + 1.0, ray)
     if not side:
-        w_end = y_end - i
+        w_end = w + ray[T]
         end = dc + w_end * (dd - dc)
         kappa = -(dd - dc - db + da) * (w_end - w)
         return kappa > 0.0 and bulges(begin, end, kappa)
@@ -132,12 +115,47 @@ def strip_blocks(z, start, main, minor, ray, j, last, row):
     kappa = -(dd - dc - db + da) * x * (1.0 - w)
     if kappa > 0.0 and bulges(begin, middle, kappa):
         return True
-    de = excess(np.float64(e), u, v + 2.0, ray)
-    df = excess(np.float64(f), u + 1.0, v + 2.0, ray)
-    w_end = y_end - i_end
+    de = excess(np.float64(z[np.uint64(here + 2 * minor)]), u, v + 2.0, ray)
+    df = excess(np.float64(z[np.uint64(here + main + 2 * minor)]), u + 1.0, v + 2.0, ray)
+    w_end = w + ray[T] - 1.0
     end = dd + w_end * (df - dd)
     kappa = -(df - dd - de + db) * (1.0 - x) * w_end
     return kappa > 0.0 and bulges(middle, end, kappa)
+
+
+@numba.njit(**OPTIONS)
+def strips_block(z, start, main, minor, ray, last, row, outward, bounded):
+    """Whether the surface stands above the sight line between line 1 and the target.
+
+    Each strip between two lines is first asked with one comparison: its posts around the sight
+    line (the third of a line is the second again where no row is crossed) against the bound.
+    """
+    t = ray[T]
+    x0 = ray[X0]
+    y0 = ray[Y0]
+    level = ray[LEVEL]
+    rise = ray[RISE]
+    bend = ray[BEND]
+    j = 1 if outward else last - 1
+    step = 1 if outward else -1
+    for _ in range(1, last):
+        u = x0 + j
+        y = t * u - y0
+        i = min(int(y), row - 1)
+        i_end = min(int(y + t), row - 1)
+        here = start + j * main + i * minor
+        if bounded:
+            third = here + (i_end + 1 - i) * minor
+            low = max(z[np.uint64(here)], z[np.uint64(here + main)])
+            mid = max(z[np.uint64(here + minor)], z[np.uint64(here + minor + main)])
+            top = max(z[np.uint64(third)], z[np.uint64(third + main)])
+            skip = max(max(low, mid), top) < level + (rise + bend * u) * u
+        else:
+            skip = False
+        if not skip and strip_blocks(z, here, main, minor, u, y, i, i_end > i, ray):
+            return True
+        j += step
+    return False
 
 
 @numba.njit(**OPTIONS)
@@ -150,7 +168,7 @@ def axis_blocks(z, start, main, ray, last):
 
 
 @numba.njit(**OPTIONS)
-def target_visible(z, cols, row0, col0, r, c, height, air, outward):
+def target_visible(z, cols, row0, col0, r, c, height, air, outward, bounded):
     """Whether a target `height` above post (r, c) is seen; z is the elevation, flattened."""
     dx = c - col0
     dy = r - row0
@@ -195,20 +213,18 @@ def target_visible(z, cols, row0, col0, r, c, height, air, outward):
     if vt == 0.0:
         return not axis_blocks(z, start, main, ray, last)
     if outward:
-        if own_cell_blocks(z, start, main, minor, ray, last):
-            return False
-        for j in range(1, last):
-            if strip_blocks(z, start, main, minor, ray, j, last, row):
-                return False
-        return True
-    for j in range(last - 1, 0, -1):
-        if strip_blocks(z, start, main, minor, ray, j, last, row):
-            return False
-    return not own_cell_blocks(z, start, main, minor, ray, last)
+        return not (
+            own_cell_blocks(z, start, main, minor, ray, last)
+            or strips_block(z, start, main, minor, ray, last, row, True, bounded)
+        )
+    return not (
+        strips_block(z, start, main, minor, ray, last, row, False, bounded)
+        or own_cell_blocks(z, start, main, minor, ray, last)
+    )
 
 
 @numba.njit(parallel=True, **OPTIONS)
-def walk_rows(z, rows, row0, col0, height, range2, metres, air, outward, state):
+def walk_rows(z, rows, row0, col0, height, range2, metres, air, outward, bounded, state):
     """Answer the targets of some rows: parallel over the rows.
 
     Parameters
@@ -243,7 +259,7 @@ def walk_rows(z, rows, row0, col0, height, range2, metres, air, outward, state):
             if metres[0] * dx * dx + metres[1] * dx * dy + metres[2] * dy * dy <= range2:
                 if dx == 0.0 and dy == 0.0:
                     answer = VISIBLE
-                elif target_visible(flat, cols, row0, col0, r, c, height, air, outward):
+                elif target_visible(flat, cols, row0, col0, r, c, height, air, outward, bounded):
                     answer = VISIBLE
                 else:
                     answer = HIDDEN
@@ -280,13 +296,13 @@ class Walkers:
             float(half * (ny * ny / meridian + ey * ey / prime)),
         )
 
-    def answer(self, rows, *, outward):
+    def answer(self, rows, *, outward, bounded=False):
         """State of some rows; those that lie side by side go to different threads."""
         order = np.concatenate([rows[0::2], rows[1::2]]).astype(np.int64)
         state = np.empty((order.size, self.z.shape[1]), dtype=np.uint8)
         walk_rows(
             self.z, order, self.row0, self.col0, 0.0, self.range2, self.metres, self.air, outward,
-            state,
+            bounded, state,
         )  # fmt: skip
         back = np.empty_like(state)
         half = (rows.size + 1) // 2

@@ -24,6 +24,7 @@ LAYERS = {
     "places": 2,
     "postmap": 2,
     "kernels": 3,
+    "wedges": 4,
     "visibility": 4,
     "io": 5,
     "api": 6,

@@ -384,7 +384,9 @@ def _place(terrain: Terrain, observer: Observer) -> tuple[float, float, float, f
     raise InputError(msg)
 
 
-def _check_memory(window: tuple[int, int, int, int], layers: tuple[str, ...], range_m: float) -> None:
+def _check_memory(
+    window: tuple[int, int, int, int], layers: tuple[str, ...], range_m: float
+) -> None:
     from viewshed.io._memory import available_memory, check_memory
 
     cells = window[2] * window[3]
@@ -438,7 +440,7 @@ def _eye_height(observer: Observer, ground: float) -> float:
     return height
 
 
-def map_visibility(
+def map_visibility(  # noqa: PLR0913 - one name for each thing a question is made of
     terrain: Terrain,
     observer: Observer,
     *,
@@ -521,9 +523,9 @@ def map_visibility(
     eye_height = _eye_height(observer, ground_at(elevation, *at))
     if goal.height > _TALL_TARGET and eye_height < _LOW_EYE:
         notes.append(
-            f"a target {goal.height:g} m tall seen from an eye at {eye_height:g} m: this maps where "
-            "such a thing could be seen from here, not where one such thing is seen from; for the "
-            "zone of visibility of a structure make its top the observer"
+            f"a target {goal.height:g} m tall seen from an eye at {eye_height:g} m: this maps "
+            "where such a thing could be seen from here, not where one such thing is seen from; "
+            "for the zone of visibility of a structure make its top the observer"
         )
     for note in notes:
         warnings.warn(note, ViewshedWarning, stacklevel=2)

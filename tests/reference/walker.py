@@ -117,10 +117,10 @@ class Walker:
         for r, c in itertools.product(range(rows), range(cols)):
             if np.isnan(self.z[r, c]) or distance[r, c] > self.range_m * (1 + 1e-12):
                 continue
-            if self.sector is not None and not self.sector.contains(bearing[r, c]):
-                continue
-            horizon, unknown, length = -math.inf, False, 1.0  # at the observer's own place
-            if (r, c) != (self.row0, self.col0):
+            horizon, unknown, length = -math.inf, False, 1.0
+            if (r, c) != (self.row0, self.col0):  # the own place lies in every sector
+                if self.sector is not None and not self.sector.contains(bearing[r, c]):
+                    continue
                 horizon, unknown, length = self.walk(r, c)
             clear = target[r, c] - horizon * length
             if clear == math.inf:  # nothing stands between
@@ -284,8 +284,8 @@ class Walker:
         """Replace the first crossing by one worked from differences at the observer."""
         if not points:
             return points
-        r0 = math.floor((self.row0 + points[0][1]) / 2)
-        c0 = math.floor((self.col0 + points[0][2]) / 2)
+        r0 = math.floor(min(self.row0, points[0][1]))
+        c0 = math.floor(min(self.col0, points[0][2]))
         found = self.own_exit(ray, r0, c0)
         if found is None:
             return points
@@ -300,10 +300,12 @@ class Walker:
         """Greatest slope strictly inside one cell, and whether the cell is unknown."""
         _, r1, c1, _, known1 = start
         _, r2, c2, _, known2 = end
-        along_line = (r1 == r2 == math.floor(r1)) or (c1 == c2 == math.floor(c1))
-        if along_line:
-            return -math.inf, False
-        r, c = math.floor((r1 + r2) / 2), math.floor((c1 + c2) / 2)
+        r, c = math.floor(min(r1, r2)), math.floor(min(c1, c2))
+        if (r1 == r2 == math.floor(r1)) or (c1 == c2 == math.floor(c1)):
+            # both ends on one grid line: along one of its edges, or past the border where it bends
+            along_edge = max(r1, r2) <= r + 1 and max(c1, c2) <= c + 1
+            along_edge = along_edge and min(r1, r2) >= r and min(c1, c2) >= c
+            return -math.inf, not along_edge
         rows, cols = self.z.shape
         inside = 0 <= r < rows - 1 and 0 <= c < cols - 1
         if not inside or np.isnan(self.f[r : r + 2, c : c + 2]).any():

@@ -96,7 +96,7 @@ def _strip(array: NDArray[Any], first: int) -> NDArray[np.uint8]:
     return np.ascontiguousarray(part, dtype=array.dtype.newbyteorder("<")).view(np.uint8)
 
 
-def write_cog(
+def write_cog(  # noqa: PLR0913 - path, cells, place, and what the file says of them
     path: str | os.PathLike[str],
     array: NDArray[Any],
     grid: Grid,

@@ -535,7 +535,8 @@ def flatten(heights, raise_by, geo, u, v, f, n):
     d02 = geo[D02]
     for m in range(n):
         h = heights[m] + raise_by
-        f[m] = (h - ze) * (1.0 - h * inv_r) - (d20 * u[m] * u[m] + d11 * u[m] * v[m] + d02 * v[m] * v[m])
+        drop = d20 * u[m] * u[m] + d11 * u[m] * v[m] + d02 * v[m] * v[m]
+        f[m] = (h - ze) * (1.0 - h * inv_r) - drop
 
 
 @inline
@@ -816,7 +817,7 @@ def asked(ints, geo, u, v):
 
 @inline
 def own_plane(own, far, edge):
-    """A and B for an edge of the own cell: the far one (x = x1) or a side (y = edge)."""
+    """Give A and B of an edge of the own cell: the far one (x = x1) or a side (y = edge)."""
     if far:
         x1 = own[O_X1]
         p11 = own[O_UA]
@@ -834,6 +835,274 @@ def own_plane(own, far, edge):
         r2 = own[O_F0] / edge + own[O_FB]
     det = p11 * p22 - p12 * p21
     return (r1 * p22 - r2 * p12) / det, (p11 * r2 - p21 * r1) / det
+
+
+@inline
+def load_line(z, ints, geo, own, j, lo, n, poly, heights, line):
+    """Fill t, g, f, u, v of the n posts of line j from row lo on."""
+    t, g, f, u, v = line[0], line[1], line[2], line[3], line[4]
+    sign = ints[SIGN_MINOR]
+    main = ints[BASE_MAIN] + ints[SIGN_MAIN] * j
+    fetch(z, ints[MAIN_IS_ROW] != 0, main, ints[BASE_MINOR] + sign * lo, sign, heights, n)
+    place(ints[DEGREE], geo[Y0], lo, geo[X0] + j, geo[SCALE], poly, u, v, n)
+    flatten(heights, 0.0, geo, u, v, f, n)
+    if j <= 1:  # the corners of the own cell, sharp however near the observer
+        for i in range(2):
+            if 0 <= i - lo < n:
+                f[i - lo] = own[O_F + 2 * j + i]
+                u[i - lo] = own[O_U + 2 * j + i]
+                v[i - lo] = own[O_V + 2 * j + i]
+    directions(u, v, f, t, g, n)
+
+
+@inline
+def open_first_strip(geo, own_known, before, lo_prev, n_prev, here, lo, n):
+    """Set the directions of line 0 as seen ahead of the observer.
+
+    Edges of the first strip begin behind the observer: ahead of it they come from straight left
+    or right, whichever side of the observer they pass.
+    """
+    pt, pu, pv = before[0], before[3], before[4]
+    t, u, v = here[0], here[3], here[4]
+    for i in range(max(lo, lo_prev), min(lo + n, lo_prev + n_prev)):
+        a = i - lo_prev
+        b = i - lo
+        if pu[a] <= 0.0 and u[b] > 0.0:
+            passes = pv[a] * u[b] - v[b] * pu[a]
+            pt[a] = BIG if passes > 0.0 else -BIG
+    if geo[Y0] == 0.0:
+        pt[0 - lo_prev] = t[0 - lo]
+    elif own_known:
+        pt[0 - lo_prev] = -BIG
+        pt[1 - lo_prev] = BIG
+
+
+@inline
+def answer(
+    state, clearance, ints, geo, own, before, here, goal, at, wants, j, lo, shift, w_lo, w_hi,
+    plain, main, minor, arcs, n_arcs, gaps, n_gaps, cell,
+):  # fmt: skip
+    """Answer the posts w_lo .. w_hi of a line, the envelope at them being known."""
+    curved = ints[DEGREE] > 1
+    own_known = ints[OWN_KNOWN] != 0
+    want_clearance = ints[WANT_CLEARANCE] != 0
+    main_is_row = ints[MAIN_IS_ROW] != 0
+    sign = ints[SIGN_MINOR]
+    u_line = geo[X0] + j
+    pg, pf, pu, pv = before[1], before[2], before[3], before[4]
+    t, g, f, u, v = here[0], here[1], here[2], here[3], here[4]
+    # the questions, and what their own strip says
+    for n in range(w_lo, w_hi + 1):
+        wants[n] = 0.0
+        if not (f[n] == f[n] and (plain or asked(ints, geo, u[n], v[n]))):
+            continue
+        wants[n] = 1.0
+        if not want_clearance and goal[n] - at[n] * u[n] < 0.0:
+            continue
+        a = n - shift
+        if j > 2:
+            if curved:
+                highest = -BIG
+                for m in range(-2, 3):
+                    highest = max(highest, max(g[n + m], pg[a + m]))
+            else:
+                if f[n] - f[n - 1] - pf[a] + pf[a - 1] >= -FLAT:
+                    continue  # the last cell is not concave along the sight line
+                if climbs(
+                    pf[a - 1], pf[a], f[n - 1], f[n], pu[a], u[n], t[n], t[n]
+                ):
+                    continue
+                highest = max(max(g[n - 1], g[n]), max(pg[a - 1], pg[a]))
+            if highest <= at[n]:
+                continue
+            if not want_clearance and goal[n] - highest * u[n] > 1e-9:
+                continue
+        strip = own_strip_horizon(
+            pu, pv, pf, a, u, v, f, n, j, lo + n, t[n], own, own_known, cell
+        )
+        at[n] = max(at[n], strip)
+    # cells that may rise above the envelope
+    for k in range(n_arcs):
+        t0 = arcs[k, 0]
+        t1 = arcs[k, 1]
+        n = int(t0 * u_line - geo[Y0]) + 1 - lo
+        n = min(max(n, w_lo), w_hi)
+        while n > w_lo and t[n - 1] >= t0:
+            n -= 1
+        while n <= w_hi and t[n] < t0:
+            n += 1
+        while n <= w_hi and t[n] <= t1:
+            bound = arcs[k, 2] + arcs[k, 3] * t[n]
+            is_open = want_clearance or (
+                goal[n] - at[n] * u[n] >= 0.0 and goal[n] - bound * u[n] < 1e-9
+            )
+            if wants[n] != 0.0 and bound > at[n] and is_open:
+                at[n] = max(at[n], arc_value(arcs, k, own, t[n]))
+            n += 1
+    # the answers
+    for n in range(w_lo, w_hi + 1):
+        if wants[n] == 0.0:
+            continue
+        k = minor + sign * n
+        r = main if main_is_row else k
+        c = k if main_is_row else main
+        clear = goal[n] - at[n] * u[n]
+        answer = 0
+        if clear >= 0.0:
+            answer = 1
+            if n_gaps > 0 and in_gap(gaps, n_gaps, t[n]):
+                answer = 2
+        state[r, c] = answer
+        if want_clearance:
+            if answer == 2:
+                clearance[r, c] = np.nan
+            elif at[n] <= -BIG:
+                clearance[r, c] = np.inf
+            else:
+                clearance[r, c] = clear
+
+
+@inline
+def add_cross_edges(
+    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, envs, which, n_env,
+    env_low, seg,
+):  # fmt: skip
+    """Merge the edges between two lines; returns pieces (0: no room), envelope and least value."""
+    curved = ints[DEGREE] > 1
+    own_known = ints[OWN_KNOWN] != 0
+    eps = geo[EPS]
+    pt, pf, pu, pv, pa, pb = before[0], before[2], before[3], before[4], before[5], before[6]
+    t, f, u, v, ea, eb = here[0], here[2], here[3], here[4], here[5], here[6]
+    # Edges between the last line and this, even and odd rows apart: neighbours may
+    # overlap where the map bends.
+    bent = curved or j <= 2
+    step = 2 if bent else 1
+    for parity in range(step):
+        n_seg = 0
+        start = go_lo + ((go_lo + parity) & 1) if bent else go_lo
+        for i in range(start, go_hi + 2, step):
+            a = i - lo_prev
+            b = i - lo
+            t0 = max(min(t[b], pt[a]), low)
+            t1 = min(max(t[b], pt[a]), high)
+            both = f[b] + pf[a]
+            if t1 <= t0 or not (both == both):
+                continue
+            if j == 1 and own_known and (i == 1 or i == 0):
+                if i == 0 and geo[Y0] == 0.0:
+                    continue  # the observer stands on it
+                sa, sb = own_plane(own, False, geo[Y0] + i)
+            elif j == 1 and pu[a] == 0.0 and pv[a] == 0.0:
+                continue  # it starts at the observer
+            else:
+                if j > 2:
+                    # under an edge of this line or of the last, all along?
+                    m = b if t[b] <= pt[a] else b - 1
+                    if pf[a] <= ea[m] * pu[a] + eb[m] * pv[a] and (
+                        not curved or t[m] <= pt[a] <= t[m + 1]
+                    ):
+                        continue
+                    m = a - 1 if t[b] <= pt[a] else a
+                    if f[b] <= pa[m] * u[b] + pb[m] * v[b] and (
+                        not curved or pt[m] <= t[b] <= pt[m + 1]
+                    ):
+                        continue
+                det = pu[a] * v[b] - u[b] * pv[a]
+                sa = (pf[a] * v[b] - f[b] * pv[a]) / det
+                sb = (pu[a] * f[b] - u[b] * pf[a]) / det
+                if not (sa - sa == 0.0):
+                    continue  # seen end on
+            q0, q1 = above(envs[which], n_env, sa, sb, t0, t1, eps)
+            if q0 < q1:
+                seg[0, n_seg] = t0
+                seg[1, n_seg] = t1
+                seg[2, n_seg] = sa
+                seg[3, n_seg] = sb
+                n_seg += 1
+        if n_seg > 0:
+            n_env, env_low = merge_edges(envs[which], n_env, seg, n_seg, eps, envs[1 - which])
+            if n_env == 0:
+                return 0, which, env_low
+            which = 1 - which
+    return n_env, which, env_low
+
+
+@inline
+def drop_arcs(env, n_env, eps, arcs, n_arcs):
+    """Keep what still stands above the envelope; returns how many."""
+    k = 0
+    while k < n_arcs:
+        t0, t1 = above(env, n_env, arcs[k, 2], arcs[k, 3], arcs[k, 0], arcs[k, 1], eps)
+        if t0 < t1:
+            arcs[k, 0] = t0
+            arcs[k, 1] = t1
+            k += 1
+        else:
+            n_arcs -= 1
+            for m in range(16):
+                arcs[k, m] = arcs[n_arcs, m]
+    return n_arcs
+
+
+@inline
+def add_strip_arcs(
+    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, env, n_env, arcs,
+    n_arcs, cell, ts, gs,
+):  # fmt: skip
+    """Add the cells of a strip that bulge above the envelope; -1 if there is no room."""
+    curved = ints[DEGREE] > 1
+    own_known = ints[OWN_KNOWN] != 0
+    eps = geo[EPS]
+    pt, pg, pf, pu, pv = before[0], before[1], before[2], before[3], before[4]
+    t, g, f, u, v = here[0], here[1], here[2], here[3], here[4]
+    for i in range(go_lo, go_hi + 1):
+        a = i - lo_prev
+        b = i - lo
+        twist = f[b + 1] - f[b] - pf[a + 1] + pf[a]
+        if not (twist < -FLAT or (twist > FLAT and curved)):
+            continue  # nowhere concave along a sight line, or unknown
+        is_own = j == 1 and i == 0
+        if is_own and not own_known:
+            continue
+        ts[0] = pt[a]
+        ts[1] = pt[a + 1]
+        ts[2] = t[b]
+        ts[3] = t[b + 1]
+        t0 = max(min(min(ts[0], ts[1]), min(ts[2], ts[3])), low)
+        t1 = min(max(max(ts[0], ts[1]), max(ts[2], ts[3])), high)
+        if t1 <= t0 or (twist > 0.0 and t0 > 0.3):
+            continue
+        if j > 2 and climbs(
+            pf[a], pf[a + 1], f[b], f[b + 1], min(pu[a], pu[a + 1]),
+            max(u[b], u[b + 1]), t0, t1,
+        ):  # fmt: skip
+            continue
+        load_corners(pu, pv, pf, a, u, v, f, b, cell, 0)
+        gs[0] = pg[a]
+        gs[1] = pg[a + 1]
+        gs[2] = g[b]
+        gs[3] = g[b + 1]
+        if j > 2:
+            highest = max(max(gs[0], gs[1]), max(gs[2], gs[3]))
+            q0, q1 = above(env, n_env, highest, 0.0, t0, t1, eps)
+            if q0 >= q1:
+                continue
+        if is_own:
+            cell[0, 4] = -BIG
+            ts[0] = low if geo[Y0] < 0.0 else t[b]
+            ts[1] = high
+        slack = 0.0
+        if curved:  # a cell that is no parallelogram is convex only so far
+            uneven = abs(u[b + 1] - u[b] - pu[a + 1] + pu[a])
+            uneven += abs(v[b + 1] - v[b] - pv[a + 1] + pv[a])
+            tall = max(max(abs(f[b]), abs(f[b + 1])), max(abs(pf[a]), abs(pf[a + 1])))
+            slack = (8.0 * uneven * tall + 1e-6 * abs(twist)) / u[b]
+        n_arcs = add_arcs(
+            cell, is_own, ts, gs, own, env, n_env, low, high, slack, eps, arcs, n_arcs
+        )
+        if n_arcs < 0:
+            return -1
+    return n_arcs
 
 
 @kernel
@@ -904,14 +1173,7 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
         line_coefficients(coef_u, degree, x, poly[0])
         line_coefficients(coef_v, degree, x, poly[1])
     before = lines[0]
-    fetch(z, main_is_row, ints[BASE_MAIN], ints[BASE_MINOR] + sign * lo_prev, sign, heights, n_prev)
-    place(degree, geo[Y0], lo_prev, geo[X0], geo[SCALE], poly, before[3], before[4], n_prev)
-    flatten(heights, 0.0, geo, before[3], before[4], before[2], n_prev)
-    for i in range(2):
-        before[2, i - lo_prev] = own[O_F + i]
-        before[3, i - lo_prev] = own[O_U + i]
-        before[4, i - lo_prev] = own[O_V + i]
-    directions(before[3], before[4], before[2], before[0], before[1], n_prev)
+    load_line(z, ints, geo, own, 0, lo_prev, n_prev, poly, heights, before)
     planes_prev = False
     void_prev = True
     stale = False
@@ -955,30 +1217,9 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
             before[0], before[1], before[2], before[3], before[4], before[5], before[6],
         )  # fmt: skip
         t, g, f, u, v, ea, eb = here[0], here[1], here[2], here[3], here[4], here[5], here[6]
-        fetch(z, main_is_row, main, minor, sign, heights, count)
-        place(degree, geo[Y0], lo, u_line, geo[SCALE], poly, u, v, count)
-        flatten(heights, 0.0, geo, u, v, f, count)
-        if j == 1:  # the corners of the own cell, sharp however near the observer
-            for i in range(2):
-                if 0 <= i - lo < count:
-                    f[i - lo] = own[O_F + 2 + i]
-                    u[i - lo] = own[O_U + 2 + i]
-                    v[i - lo] = own[O_V + 2 + i]
-        directions(u, v, f, t, g, count)
+        load_line(z, ints, geo, own, j, lo, count, poly, heights, here)
         if j == 1:
-            # Edges of the first strip begin behind the observer: ahead of it they come from
-            # straight left or right, whichever side of the observer they pass.
-            for i in range(max(lo, lo_prev), min(lo + count, lo_prev + n_prev)):
-                a = i - lo_prev
-                b = i - lo
-                if pu[a] <= 0.0 and u[b] > 0.0:
-                    passes = pv[a] * u[b] - v[b] * pu[a]
-                    pt[a] = BIG if passes > 0.0 else -BIG
-            if geo[Y0] == 0.0:
-                pt[0 - lo_prev] = t[0 - lo]
-            elif own_known:
-                pt[0 - lo_prev] = -BIG
-                pt[1 - lo_prev] = BIG
+            open_first_strip(geo, own_known, before, lo_prev, n_prev, here, lo, count)
 
         n_first = first - lo
         n_last = last - lo
@@ -1039,75 +1280,10 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                     else:
                         state[k, main] = 0
         else:
-            # the questions, and what their own strip says
-            for n in range(w_lo, w_hi + 1):
-                wants[n] = 0.0
-                if not (f[n] == f[n] and (plain or asked(ints, geo, u[n], v[n]))):
-                    continue
-                wants[n] = 1.0
-                if not want_clearance and goal[n] - at[n] * u[n] < 0.0:
-                    continue
-                a = n - shift
-                if j > 2:
-                    if curved:
-                        highest = -BIG
-                        for m in range(-2, 3):
-                            highest = max(highest, max(g[n + m], pg[a + m]))
-                    else:
-                        if f[n] - f[n - 1] - pf[a] + pf[a - 1] >= -FLAT:
-                            continue  # the last cell is not concave along the sight line
-                        if climbs(
-                            pf[a - 1], pf[a], f[n - 1], f[n], pu[a], u[n], t[n], t[n]
-                        ):
-                            continue
-                        highest = max(max(g[n - 1], g[n]), max(pg[a - 1], pg[a]))
-                    if highest <= at[n]:
-                        continue
-                    if not want_clearance and goal[n] - highest * u[n] > 1e-9:
-                        continue
-                strip = own_strip_horizon(
-                    pu, pv, pf, a, u, v, f, n, j, lo + n, t[n], own, own_known, cell
-                )
-                at[n] = max(at[n], strip)
-            # cells that may rise above the envelope
-            for k in range(n_arcs):
-                t0 = arcs[k, 0]
-                t1 = arcs[k, 1]
-                n = int(t0 * u_line - geo[Y0]) + 1 - lo
-                n = min(max(n, w_lo), w_hi)
-                while n > w_lo and t[n - 1] >= t0:
-                    n -= 1
-                while n <= w_hi and t[n] < t0:
-                    n += 1
-                while n <= w_hi and t[n] <= t1:
-                    bound = arcs[k, 2] + arcs[k, 3] * t[n]
-                    if wants[n] != 0.0 and bound > at[n]:
-                        if want_clearance or (
-                            goal[n] - at[n] * u[n] >= 0.0 and goal[n] - bound * u[n] < 1e-9
-                        ):
-                            at[n] = max(at[n], arc_value(arcs, k, own, t[n]))
-                    n += 1
-            # the answers
-            for n in range(w_lo, w_hi + 1):
-                if wants[n] == 0.0:
-                    continue
-                k = minor + sign * n
-                r = main if main_is_row else k
-                c = k if main_is_row else main
-                clear = goal[n] - at[n] * u[n]
-                answer = 0
-                if clear >= 0.0:
-                    answer = 1
-                    if n_gaps > 0 and in_gap(gaps, n_gaps, t[n]):
-                        answer = 2
-                state[r, c] = answer
-                if want_clearance:
-                    if answer == 2:
-                        clearance[r, c] = np.nan
-                    elif at[n] <= -BIG:
-                        clearance[r, c] = np.inf
-                    else:
-                        clearance[r, c] = clear
+            answer(
+                state, clearance, ints, geo, own, before, here, goal, at, wants, j, lo, shift,
+                w_lo, w_hi, plain, main, minor, arcs, n_arcs, gaps, n_gaps, cell,
+            )  # fmt: skip
 
         # merge this strip
         planes = False
@@ -1148,126 +1324,27 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                     n_env = n_new
                     which = 1 - which
                     env = spare
-                # Edges between the last line and this, even and odd rows apart: neighbours may
-                # overlap where the map bends.
-                bent = curved or j <= 2
-                step = 2 if bent else 1
-                for parity in range(step):
-                    n_seg = 0
-                    start = go_lo + ((go_lo + parity) & 1) if bent else go_lo
-                    for i in range(start, go_hi + 2, step):
-                        a = i - lo_prev
-                        b = i - lo
-                        t0 = max(min(t[b], pt[a]), low)
-                        t1 = min(max(t[b], pt[a]), high)
-                        both = f[b] + pf[a]
-                        if t1 <= t0 or not (both == both):
-                            continue
-                        if j == 1 and own_known and (i == 1 or i == 0):
-                            if i == 0 and geo[Y0] == 0.0:
-                                continue  # the observer stands on it
-                            sa, sb = own_plane(own, False, geo[Y0] + i)
-                        elif j == 1 and pu[a] == 0.0 and pv[a] == 0.0:
-                            continue  # it starts at the observer
-                        else:
-                            if j > 2:
-                                # under an edge of this line or of the last, all along?
-                                m = b if t[b] <= pt[a] else b - 1
-                                if pf[a] <= ea[m] * pu[a] + eb[m] * pv[a] and (
-                                    not curved or t[m] <= pt[a] <= t[m + 1]
-                                ):
-                                    continue
-                                m = a - 1 if t[b] <= pt[a] else a
-                                if f[b] <= pa[m] * u[b] + pb[m] * v[b] and (
-                                    not curved or pt[m] <= t[b] <= pt[m + 1]
-                                ):
-                                    continue
-                            det = pu[a] * v[b] - u[b] * pv[a]
-                            sa = (pf[a] * v[b] - f[b] * pv[a]) / det
-                            sb = (pu[a] * f[b] - u[b] * pf[a]) / det
-                            if not (sa - sa == 0.0):
-                                continue  # seen end on
-                        q0, q1 = above(env, n_env, sa, sb, t0, t1, eps)
-                        if q0 < q1:
-                            seg[0, n_seg] = t0
-                            seg[1, n_seg] = t1
-                            seg[2, n_seg] = sa
-                            seg[3, n_seg] = sb
-                            n_seg += 1
-                    if n_seg > 0:
-                        n_env, env_low = merge_edges(env, n_env, seg, n_seg, eps, envs[1 - which])
-                        if n_env == 0:
-                            return FULL
-                        changed = True
-                        which = 1 - which
-                        env = envs[which]
+                now = which
+                n_env, which, env_low = add_cross_edges(
+                    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, envs,
+                    which, n_env, env_low, seg,
+                )  # fmt: skip
+                if n_env == 0:
+                    return FULL
+                changed = changed or which != now
+                env = envs[which]
                 # bulges that are still above the envelope: looked after now and then, since one
                 # kept too long costs time but no exactness
                 stale = stale or changed
-                k = n_arcs
                 if stale and ((j & 3) == 0 or n_arcs > 2 * (n_last - n_first)):
-                    k = 0
+                    n_arcs = drop_arcs(env, n_env, eps, arcs, n_arcs)
                     stale = False
-                while k < n_arcs:
-                    t0, t1 = above(
-                        env, n_env, arcs[k, 2], arcs[k, 3], arcs[k, 0], arcs[k, 1], eps
-                    )
-                    if t0 < t1:
-                        arcs[k, 0] = t0
-                        arcs[k, 1] = t1
-                        k += 1
-                    else:
-                        n_arcs -= 1
-                        for m in range(16):
-                            arcs[k, m] = arcs[n_arcs, m]
-                # bulges of this strip
-                for i in range(go_lo, go_hi + 1):
-                    a = i - lo_prev
-                    b = i - lo
-                    twist = f[b + 1] - f[b] - pf[a + 1] + pf[a]
-                    if not (twist < -FLAT or (twist > FLAT and curved)):
-                        continue  # nowhere concave along a sight line, or unknown
-                    is_own = j == 1 and i == 0
-                    if is_own and not own_known:
-                        continue
-                    ts[0] = pt[a]
-                    ts[1] = pt[a + 1]
-                    ts[2] = t[b]
-                    ts[3] = t[b + 1]
-                    t0 = max(min(min(ts[0], ts[1]), min(ts[2], ts[3])), low)
-                    t1 = min(max(max(ts[0], ts[1]), max(ts[2], ts[3])), high)
-                    if t1 <= t0 or (twist > 0.0 and t0 > 0.3):
-                        continue
-                    if j > 2 and climbs(
-                        pf[a], pf[a + 1], f[b], f[b + 1], min(pu[a], pu[a + 1]),
-                        max(u[b], u[b + 1]), t0, t1,
-                    ):  # fmt: skip
-                        continue
-                    load_corners(pu, pv, pf, a, u, v, f, b, cell, 0)
-                    gs[0] = pg[a]
-                    gs[1] = pg[a + 1]
-                    gs[2] = g[b]
-                    gs[3] = g[b + 1]
-                    if j > 2:
-                        highest = max(max(gs[0], gs[1]), max(gs[2], gs[3]))
-                        q0, q1 = above(env, n_env, highest, 0.0, t0, t1, eps)
-                        if q0 >= q1:
-                            continue
-                    if is_own:
-                        cell[0, 4] = -BIG
-                        ts[0] = low if geo[Y0] < 0.0 else t[b]
-                        ts[1] = high
-                    slack = 0.0
-                    if curved:  # a cell that is no parallelogram is convex only so far
-                        uneven = abs(u[b + 1] - u[b] - pu[a + 1] + pu[a])
-                        uneven += abs(v[b + 1] - v[b] - pv[a + 1] + pv[a])
-                        tall = max(max(abs(f[b]), abs(f[b + 1])), max(abs(pf[a]), abs(pf[a + 1])))
-                        slack = (8.0 * uneven * tall + 1e-6 * abs(twist)) / u[b]
-                    n_arcs = add_arcs(
-                        cell, is_own, ts, gs, own, env, n_env, low, high, slack, eps, arcs, n_arcs
-                    )
-                    if n_arcs < 0:
-                        return FULL
+                n_arcs = add_strip_arcs(
+                    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, env,
+                    n_env, arcs, n_arcs, cell, ts, gs,
+                )  # fmt: skip
+                if n_arcs < 0:
+                    return FULL
 
         lo_prev = lo
         n_prev = count
@@ -1300,7 +1377,6 @@ def axis(z, state, clearance, ints, geo, own):
     sight line runs along edges and meets posts alone. Parameters as for `sweep`.
     """
     main_is_row = ints[MAIN_IS_ROW]
-    rows, cols = z.shape
     minor = ints[BASE_MINOR]
     horizon = -BIG
     broken = False
