@@ -48,7 +48,7 @@ __all__ = ["MapResult", "map_visibility"]
 #: A target this tall [m] looked for by eyes this low [m] is a structure entered as a target.
 _TALL_TARGET, _LOW_EYE = 20.0, 3.0
 #: Memory of the page, the writers and the scratch arrays, beside the arrays of the window [bytes].
-_OVERHEAD = 300e6
+_OVERHEAD = 500e6
 
 _BANDS = {
     "visible": ("visible (1), hidden (0), unresolved (2)", "", NODATA),
@@ -118,7 +118,9 @@ class MapResult:
     @cached_property
     def counts(self) -> dict[str, int]:
         """Cells of each state."""
-        found = np.bincount(self.visible.ravel(), minlength=256)
+        found = np.zeros(256, dtype=np.int64)
+        for first in range(0, self.visible.shape[0], 256):  # bincount widens what it is given
+            found += np.bincount(self.visible[first : first + 256].ravel(), minlength=256)
         return {name: int(found[value]) for name, value in _STATES.items()}
 
     @cached_property
