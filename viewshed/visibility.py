@@ -9,7 +9,6 @@ from __future__ import annotations
 import math
 import os
 import threading
-from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -168,29 +167,39 @@ def _run(
     threads: int,
     progress: Callable[[int, int], None] | None,
 ) -> None:
-    """Run the tasks on threads; an interrupt stops them after the wedges in hand."""
-    total = len(tasks)
-    done = 0
-    if threads == 1:
-        for task in tasks:
-            task()
-            done += 1
-            if progress is not None:
-                progress(done, total)
-        return
-    with ThreadPoolExecutor(threads) as pool:
-        waiting: set[Future[None]] = {pool.submit(task) for task in tasks}
+    """Run the tasks on threads; an error or an interrupt ends them after the wedges in hand."""
+    queue = iter(tasks)
+    done: list[None] = []
+    failed: list[BaseException] = []
+    stop = threading.Event()
+
+    def work() -> None:
         try:
-            while waiting:
-                ready, waiting = wait(waiting, timeout=0.2, return_when=FIRST_COMPLETED)
-                for future in ready:
-                    future.result()
-                done += len(ready)
-                if progress is not None and ready:
-                    progress(done, total)
-        except BaseException:
-            pool.shutdown(wait=True, cancel_futures=True)
-            raise
+            for task in queue:  # threads share the iterator: each task is taken once
+                if stop.is_set():
+                    return
+                task()
+                done.append(None)
+        except BaseException as error:
+            failed.append(error)
+            stop.set()
+
+    crew = [threading.Thread(target=work, daemon=True) for _ in range(min(threads, len(tasks)))]
+    try:
+        for worker in crew:
+            worker.start()
+        for worker in crew:
+            while worker.is_alive():
+                worker.join(0.1)
+                if progress is not None:
+                    progress(len(done), len(tasks))
+    finally:
+        stop.set()
+        for worker in crew:
+            if worker.ident is not None:
+                worker.join()
+    if failed:
+        raise failed[0]
 
 
 def compute(  # noqa: PLR0913 - one name for each thing a question is made of
