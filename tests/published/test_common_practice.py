@@ -4,6 +4,7 @@ A shore at sea level, an eye 6 ft (1.83 m) above the water, and things at variou
 """
 
 import math
+from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -102,7 +103,7 @@ def test_things_beyond_are_cut_off_by_the_same_horizon(towers, k):
 def test_refraction_lifts_far_things(towers):
     # Common practice: with refraction far things stand higher, never lower.
     cut, distance, answers = towers
-    for less, more in zip(AIRS, AIRS[1:], strict=False):
+    for less, more in pairwise(AIRS):
         lifted = cut[less] - cut[more]
         assert (lifted > 0.0).all()
         assert (np.diff(lifted) > 0.0).all()  # and the farther, the higher

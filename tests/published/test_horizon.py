@@ -121,9 +121,7 @@ def check_range(height, eye, k, radius, nautical_miles):
 @pytest.mark.parametrize(("object_ft", "eye_ft", "nautical_miles"), GEOGRAPHIC_RANGES)
 def test_geographic_range(object_ft, eye_ft, nautical_miles, measured):
     # Bowditch Table 13 is the sum of two rows of Table 12, k = 0.1721.
-    off = check_range(
-        object_ft * FOOT, eye_ft * FOOT, TABLE_12_K, TABLE_12_RADIUS, nautical_miles
-    )
+    off = check_range(object_ft * FOOT, eye_ft * FOOT, TABLE_12_K, TABLE_12_RADIUS, nautical_miles)
     measured(f"{off:+.1f} m off the rule")
 
 

