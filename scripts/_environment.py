@@ -158,7 +158,7 @@ def say(text):
     print("viewshed: " + text, file=sys.stderr, flush=True)
 
 
-def prepare(purpose, requirements=(), constraints=()):
+def prepare(purpose, requirements=(), constraints=(), files=()):
     """Make the environment for a purpose, or find the one made before.
 
     Parameters
@@ -169,6 +169,8 @@ def prepare(purpose, requirements=(), constraints=()):
         What to install beside the package.
     constraints : sequence of str
         Versions to hold to.
+    files : sequence of str
+        Packages of which only files are read: installed without what they depend on.
 
     Returns
     -------
@@ -190,7 +192,7 @@ def prepare(purpose, requirements=(), constraints=()):
         if not stamp.exists():
             _lock(handle, shared=False)
             if not stamp.exists():
-                _make(folder, requirements, constraints)
+                _make(folder, requirements, constraints, files)
                 stamp.touch()
                 _sweep(purpose, name)
             _lock(handle, shared=True)
@@ -200,7 +202,7 @@ def prepare(purpose, requirements=(), constraints=()):
     return interpreter(folder)
 
 
-def _make(folder, requirements, constraints):
+def _make(folder, requirements, constraints, files):
     """Build an environment from nothing, whatever an interrupted run left there."""
     say(f"making an environment in {folder} (first time: some minutes)")
     if folder.exists():
@@ -210,6 +212,8 @@ def _make(folder, requirements, constraints):
         _logged([sys.executable, "-m", "venv", str(folder)], out, log)
         pip = [str(interpreter(folder)), "-m", "pip", "install", "--prefer-binary"]
         pip += ["--retries", "2", "--progress-bar", "off", "--no-input"]
+        if files:
+            _logged([*pip, "--no-deps", *files], out, log)
         if constraints:
             pinned = folder / "constraints.txt"
             pinned.write_text("\n".join(constraints) + "\n", encoding="utf-8")

@@ -36,11 +36,11 @@ def parse(words):
 def environment(options):
     """Return the Python to test with."""
     if not options.lowest:
-        return prepare("test", group("dev"))
+        return prepare("test", group("dev"), files=group("data"))
     if sys.version_info[:2] != LOWEST:
         message = "--lowest needs Python {}.{}, this is {}.{}".format(*LOWEST, *sys.version_info)
         raise Trouble(message)
-    return prepare("lowest", group("test"), lower_bounds())
+    return prepare("lowest", group("test"), lower_bounds(), group("data"))
 
 
 def steps(options):
