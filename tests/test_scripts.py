@@ -19,7 +19,7 @@ def environment(load_script, tmp_path, monkeypatch):
     module = load_script("_environment")
     made = []
 
-    def make(folder, requirements, constraints):
+    def make(folder, requirements, constraints, files):
         made.append((folder.name, list(requirements), list(constraints)))
         folder.mkdir()
 
@@ -154,7 +154,7 @@ def test_runs_at_once_make_it_once(copied):
     code = (
         "import sys, time; sys.path.insert(0, sys.argv[1])\n"
         "import _environment as e\n"
-        "def make(folder, requirements, constraints):\n"
+        "def make(folder, requirements, constraints, files):\n"
         "    folder.mkdir(); time.sleep(1); print('made')\n"
         "e._make = make\n"
         "e.prepare('run'); print('ready')\n"
