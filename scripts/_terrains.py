@@ -4,14 +4,16 @@ All are made from fixed seeds by numpy alone, so that two runs with the same num
 ground. The observer's place is part of a scene, since most of the cost depends on it.
 """
 
+import functools
 from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 
 SEED = 4_711
-#: Side of the ground that relief is stated for [cells]; smaller pieces of it are as steep.
-FULL = 6_144
+#: Sides of fractal ground [cells], of small factors and so quick to transform. Relief is stated
+#: for the last; smaller ground is as steep.
+SIDES = (2_048, 3_072, 6_144)
 
 
 @dataclass(frozen=True)
@@ -42,47 +44,45 @@ class Scene:
     cell: float = 30.0
 
 
-def fractal(n, roughness, relief, summit=True):
-    """Landscape without a scale, its highest post brought to the middle.
+@functools.lru_cache(maxsize=1)
+def fractal(n, roughness, relief):
+    """Landscape without a scale of its own, its highest post brought to the middle.
 
     Parameters
     ----------
     n : int
-        Rows and columns.
+        Rows and columns, at most SIDES[-1].
     roughness : float
-        Hurst exponent: heights differ by distance ** roughness; 1 is smooth, 0.5 is rough.
+        Hurst exponent: heights differ by distance ** roughness, so 1.2 is smooth and 0.7 rough.
     relief : float
-        From the lowest to the highest post of a ground of FULL cells [m].
-    summit : bool
-        Whether to bring the highest post to the middle.
+        From the lowest to the highest post of the largest ground [m].
 
     Returns
     -------
     numpy.ndarray
-        Elevation [m], shape (n, n), float32.
+        Elevation [m], shape (n, n), float32; kept for the next scene, so not to be written to.
     """
-    size = FULL if n > FULL // 3 else FULL // 3  # of many small factors: quick to transform
+    side = next(s for s in SIDES if s >= n)
     rng = np.random.default_rng(SEED)
-    power = np.fft.fftfreq(size)[:, None] ** 2 + np.fft.rfftfreq(size)[None, :] ** 2
+    power = np.fft.fftfreq(side)[:, None] ** 2 + np.fft.rfftfreq(side)[None, :] ** 2
     power[0, 0] = np.inf
     np.power(power, -0.5 * (1.0 + roughness), out=power)
-    z = np.fft.irfft2(np.fft.rfft2(rng.standard_normal((size, size))) * power, s=(size, size))
+    z = np.fft.irfft2(np.fft.rfft2(rng.standard_normal((side, side))) * power, s=(side, side))
     z -= z.min()
-    z *= relief * (size / FULL) ** roughness / z.max()
-    if summit:
-        top = np.unravel_index(np.argmax(z), z.shape)
-        z = np.roll(z, (n // 2 - top[0], n // 2 - top[1]), (0, 1))  # it repeats without a seam
+    z *= relief * (side / SIDES[-1]) ** roughness / z.max()
+    top = np.unravel_index(np.argmax(z), z.shape)
+    z = np.roll(z, (n // 2 - top[0], n // 2 - top[1]), (0, 1))  # it repeats without a seam
     return np.ascontiguousarray(z[:n, :n], dtype=np.float32)
 
 
 def rough(n):
     """Rough fractal from its summit: ground of many small obstacles."""
-    return fractal(n, 0.5, 2000.0)
+    return fractal(n, 0.7, 2000.0)
 
 
 def smooth(n):
     """Smooth fractal from its summit: hills and valleys."""
-    return fractal(n, 1.0, 1500.0)
+    return fractal(n, 1.2, 1500.0)
 
 
 def sea(n):
@@ -120,7 +120,7 @@ def ridges(n):
 
 def voids(n):
     """Smooth fractal from its summit with 1 % of its posts unknown."""
-    z = smooth(n)
+    z = smooth(n).copy()
     holes = np.random.default_rng(SEED + 1).random((n, n), dtype=np.float32) < 0.01
     holes[n // 2 - 1 : n // 2 + 2, n // 2 - 1 : n // 2 + 2] = False
     z[holes] = np.nan
@@ -154,12 +154,13 @@ def roof(z):
 SCENES = (
     Scene("sea", "flat sea", 100.0, sea, middle),
     Scene("city", "city blocks, from a roof", 30.0, city, roof, 5.0),
-    Scene("noise", "white noise", 50.0, noise, middle),
+    Scene("noise", "white noise, low eye", 2.0, noise, middle),
+    Scene("mast", "white noise, from a mast", 50.0, noise, middle),
     Scene("bowl", "bowl, from its bottom", 5.0, bowl, middle),
     Scene("ridges", "saw-tooth ridges", 20.0, ridges, middle),
     Scene("smooth", "smooth fractal, summit", 5.0, smooth, middle),
-    Scene("rough", "rough fractal, summit", 5.0, rough, middle),
     Scene("voids", "smooth fractal, 1 % voids", 5.0, voids, middle),
+    Scene("rough", "rough fractal, summit", 5.0, rough, middle),
     Scene("between", "rough, between posts", 5.0, rough, between),
     Scene("quarter", "rough, off centre", 5.0, rough, quarter),
 )

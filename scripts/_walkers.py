@@ -7,16 +7,17 @@ and target, edges straight between posts, and the bulge of the bilinear surface 
 passed, the observer's own cell and the target's last cell included. Flat heights are worked out on
 the fly in double precision.
 
-The code is meant to be hard to beat for a walk. Each strip between two lines of posts is first
-asked whether the highest of the four or six posts around the sight line reaches an upper bound of
-what could be below it, a quadratic in the distance; only if it does, crossings and bulges are
-worked out. Walking outward begins at the observer, walking inward at the target.
+Each walk goes strip by strip between two lines of posts: the crossing of the line, that of the row
+in between if there is one, and the bulges of the one or two cells passed. Walking outward begins
+at the observer, walking inward at the target. `bounded` walks are no longer plain ones: they first
+ask of each strip, with one comparison, whether the highest of the four or six posts around the
+sight line reaches the least height that could block it, a quadratic in the distance.
 
 The frame is an octant around the observer: u along the main axis, v along the other, v = t u with
 t in [0, 1]; line j of posts is at u = x0 + j, row i at v = y0 + i, and the observer is in the cell
 between lines 0 and 1 and rows 0 and 1.
 """
-# ruff: noqa: PLR0911, PLR0912, PLR0913, PLR0915, PLR0917
+# ruff: noqa: PLR0912, PLR0913, PLR0915, PLR0917
 
 import math
 
@@ -88,72 +89,81 @@ def own_cell_blocks(z, start, main, minor, ray, last):
 
 
 @numba.njit(**OPTIONS)
-def strip_blocks(z, here, main, minor, u, y, i, side, ray):
-    """Whether the surface stands above the sight line from one line of posts on to the next.
-
-    `here` is the post of row i on the near line, whose crossing is looked at; that of the far
-    line belongs to the next strip. `side` tells that the sight line changes rows on the way.
-    """
-    v = ray[Y0] + i
-    da = excess(np.float64(z[np.uint64(here)]), u, v, ray)
-    db = excess(np.float64(z[np.uint64(here + minor)]), u, v + 1.0, ray)
-    w = y - i
-    begin = da + w * (db - da)
-    if begin > 0.0:
-        return True
-    dc = excess(np.float64(z[np.uint64(here + main)]), u + 1.0, v, ray)
-    dd = excess(np.float64(z[np.uint64(here + main + minor)]), u + 1.0, v + 1.0, ray)
-    if not side:
-        w_end = w + ray[T]
-        end = dc + w_end * (dd - dc)
-        kappa = -(dd - dc - db + da) * (w_end - w)
-        return kappa > 0.0 and bulges(begin, end, kappa)
-    x = (1.0 - w) / ray[T]
-    middle = db + x * (dd - db)
-    if middle > 0.0:
-        return True
-    kappa = -(dd - dc - db + da) * x * (1.0 - w)
-    if kappa > 0.0 and bulges(begin, middle, kappa):
-        return True
-    de = excess(np.float64(z[np.uint64(here + 2 * minor)]), u, v + 2.0, ray)
-    df = excess(np.float64(z[np.uint64(here + main + 2 * minor)]), u + 1.0, v + 2.0, ray)
-    w_end = w + ray[T] - 1.0
-    end = dd + w_end * (df - dd)
-    kappa = -(df - dd - de + db) * (1.0 - x) * w_end
-    return kappa > 0.0 and bulges(middle, end, kappa)
-
-
-@numba.njit(**OPTIONS)
 def strips_block(z, start, main, minor, ray, last, row, outward, bounded):
     """Whether the surface stands above the sight line between line 1 and the target.
 
-    Each strip between two lines is first asked with one comparison: its posts around the sight
-    line (the third of a line is the second again where no row is crossed) against the bound.
+    Each strip is worked from the crossing of its near line up to that of its far line, which is
+    the next strip's. A bulge rises at most kappa / 4 above its chord. `bounded`: ask first, with
+    one comparison, whether the highest post around the sight line reaches the least height that
+    could stand above it.
     """
-    t = ray[T]
-    x0 = ray[X0]
-    y0 = ray[Y0]
-    level = ray[LEVEL]
-    rise = ray[RISE]
-    bend = ray[BEND]
+    t, s, x0, y0, d20, d11, d02, ze, ir, level, rise, bend = ray
+    inv_t = 1.0 / t
     j = 1 if outward else last - 1
     step = 1 if outward else -1
     for _ in range(1, last):
         u = x0 + j
         y = t * u - y0
         i = min(int(y), row - 1)
-        i_end = min(int(y + t), row - 1)
+        w = y - i
+        w_end = w + t
+        side = i < row - 1 and w_end > 1.0
         here = start + j * main + i * minor
         if bounded:
-            third = here + (i_end + 1 - i) * minor
-            low = max(z[np.uint64(here)], z[np.uint64(here + main)])
-            mid = max(z[np.uint64(here + minor)], z[np.uint64(here + minor + main)])
-            top = max(z[np.uint64(third)], z[np.uint64(third + main)])
-            skip = max(max(low, mid), top) < level + (rise + bend * u) * u
-        else:
-            skip = False
-        if not skip and strip_blocks(z, here, main, minor, u, y, i, i_end > i, ray):
+            third = here + (2 * minor if side else minor)
+            near = max(z[np.uint64(here)], z[np.uint64(here + minor)])
+            far = max(z[np.uint64(here + main)], z[np.uint64(here + main + minor)])
+            rest = max(z[np.uint64(third)], z[np.uint64(third + main)])
+            if max(near, far, rest) < level + (rise + bend * u) * u:
+                j += step
+                continue
+        v = y0 + i
+        v1 = v + 1.0
+        u1 = u + 1.0
+        base = d20 * u * u + s * u
+        lin = d11 * u
+        base1 = d20 * u1 * u1 + s * u1
+        lin1 = d11 * u1
+        a = np.float64(z[np.uint64(here)])
+        b = np.float64(z[np.uint64(here + minor)])
+        c = np.float64(z[np.uint64(here + main)])
+        d = np.float64(z[np.uint64(here + main + minor)])
+        da = (a - ze) * (1.0 - a * ir) - (base + (lin + d02 * v) * v)
+        db = (b - ze) * (1.0 - b * ir) - (base + (lin + d02 * v1) * v1)
+        begin = da + w * (db - da)
+        if begin > 0.0:
             return True
+        dc = (c - ze) * (1.0 - c * ir) - (base1 + (lin1 + d02 * v) * v)
+        dd = (d - ze) * (1.0 - d * ir) - (base1 + (lin1 + d02 * v1) * v1)
+        twist = dd - dc - db + da
+        if not side:
+            if twist < 0.0:
+                end = dc + w_end * (dd - dc)
+                kappa = -twist * t
+                if max(begin, end) > -0.25 * kappa and bulges(begin, end, kappa):
+                    return True
+        else:
+            x = (1.0 - w) * inv_t
+            middle = db + x * (dd - db)
+            if middle > 0.0:
+                return True
+            if twist < 0.0:
+                kappa = -twist * x * (1.0 - w)
+                if max(begin, middle) > -0.25 * kappa and bulges(begin, middle, kappa):
+                    return True
+            # the second cell of the strip
+            v2 = v1 + 1.0
+            e = np.float64(z[np.uint64(here + 2 * minor)])
+            f = np.float64(z[np.uint64(here + main + 2 * minor)])
+            de = (e - ze) * (1.0 - e * ir) - (base + (lin + d02 * v2) * v2)
+            df = (f - ze) * (1.0 - f * ir) - (base1 + (lin1 + d02 * v2) * v2)
+            twist = df - dd - de + db
+            if twist < 0.0:
+                w_end = min(w_end - 1.0, 1.0)
+                end = dd + w_end * (df - dd)
+                kappa = -twist * (1.0 - x) * w_end
+                if max(middle, end) > -0.25 * kappa and bulges(middle, end, kappa):
+                    return True
         j += step
     return False
 
@@ -245,6 +255,8 @@ def walk_rows(z, rows, row0, col0, height, range2, metres, air, outward, bounded
         Eye elevation [m], 1 / R' [1/m] and the drop by x x, x y and y y [m].
     outward : bool
         Whether to begin at the observer.
+    bounded : bool
+        Whether to pass over strips by their highest post.
     state : (n, cols) uint8
         Written: 1 visible, 0 hidden, 255 outside the range.
     """
@@ -257,12 +269,11 @@ def walk_rows(z, rows, row0, col0, height, range2, metres, air, outward, bounded
             dx = c - col0
             answer = NODATA
             if metres[0] * dx * dx + metres[1] * dx * dy + metres[2] * dy * dy <= range2:
-                if dx == 0.0 and dy == 0.0:
+                answer = HIDDEN
+                if (dx == 0.0 and dy == 0.0) or target_visible(
+                    flat, cols, row0, col0, r, c, height, air, outward, bounded
+                ):
                     answer = VISIBLE
-                elif target_visible(flat, cols, row0, col0, r, c, height, air, outward, bounded):
-                    answer = VISIBLE
-                else:
-                    answer = HIDDEN
             state[n, c] = answer
 
 
@@ -297,7 +308,7 @@ class Walkers:
         )
 
     def answer(self, rows, *, outward, bounded=False):
-        """State of some rows; those that lie side by side go to different threads."""
+        """Return the state of some rows; those side by side go to different threads."""
         order = np.concatenate([rows[0::2], rows[1::2]]).astype(np.int64)
         state = np.empty((order.size, self.z.shape[1]), dtype=np.uint8)
         walk_rows(

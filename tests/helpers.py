@@ -187,13 +187,33 @@ class Scene:
 # --- comparison -----------------------------------------------------------------------------------
 
 
-def differing(got, state, margin, tolerance=TOLERANCE):
-    """Cells whose state differs although the clearance is not within the tolerance of zero."""
-    return (got != state) & ~(np.abs(margin) <= tolerance)
+def differing(got, twin, state, tolerance=TOLERANCE):
+    """Cells whose state differs although no clearance is within the tolerance of zero.
+
+    Where the sight line passes a post by less than a float can tell, what is unknown on one side
+    of it may count or not.
+    """
+    tied = np.abs(twin.margin) <= tolerance
+    unsure = twin.grazes & ((got == 2) | (state == 2))
+    return (got != state) & ~tied & ~unsure
 
 
-def assert_like_twin(z, post_map, *, eye_height=1.7, target_height=0.0, k=0.13, **scene):
-    """Compare every layer with the plain walker's; return the walker and the answer."""
+def assert_like_twin(
+    z,
+    post_map,
+    *,
+    eye_height=1.7,
+    target_height=0.0,
+    k=0.13,
+    tolerance=TOLERANCE,
+    touching=False,
+    **scene,
+):
+    """Compare every layer with the plain walker's; return the walker and the answer.
+
+    Where `touching`, cells whose target may be exactly the top of the ground in its way are left
+    out: clearance jumps there, since that top is an obstacle a hair before the target, not at it.
+    """
     heights = {"eye_height": eye_height, "target_height": target_height}
     twin = Walker(z, post_map, k=k, **heights, **scene)
     state, clearance = twin.answer()
@@ -201,13 +221,19 @@ def assert_like_twin(z, post_map, *, eye_height=1.7, target_height=0.0, k=0.13, 
     lean = compute(z, post_map, refraction_k=k, **heights, **scene)
 
     np.testing.assert_array_equal(lean.visible, full.visible, "with and without clearance")
-    wrong = np.argwhere(differing(full.visible, state, twin.margin))
+    left_out = np.zeros(z.shape, bool)
+    if touching:
+        left_out = np.fmin(np.abs(full.clearance), np.abs(twin.margin)) <= tolerance
+    wrong = np.argwhere(differing(full.visible, twin, state, tolerance) & ~left_out)
     assert not len(wrong), report(wrong, full, state, twin.margin)
 
-    both = (full.visible <= 1) & (state <= 1)
-    off = np.abs(full.clearance.astype(np.float64) - clearance)[both]
-    allowed = TOLERANCE + ROUNDING * np.abs(clearance[both])
-    assert np.all(off <= allowed), f"clearance off by {off.max()} m"
+    both = (full.visible <= 1) & (state <= 1) & ~left_out
+    expected = clearance[both]
+    off = np.abs(full.clearance[both].astype(np.float64) - expected)
+    # beyond 1000 km of clearance the eye stands a billionth of a cell before a grid line
+    part = np.where(np.abs(expected) < 1e6, ROUNDING, 1e-5)
+    excess = off - tolerance - part * np.abs(expected)
+    assert np.all(excess <= 0.0), f"clearance off by {off[excess > 0.0]} m"
     assert np.array_equal(np.isnan(full.clearance), full.visible >= 2)
     return twin, full
 

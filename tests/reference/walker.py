@@ -29,6 +29,8 @@ class Walker:
     ----------
     margin : (rows, cols) float64
         Clearance also where the answer is unresolved, after `answer` [m].
+    grazes : (rows, cols) bool
+        Where the sight line passes a post by less than a float can tell, after `answer`.
     """
 
     def __init__(
@@ -110,6 +112,7 @@ class Walker:
         state = np.full((rows, cols), 255, np.uint8)
         clearance = np.full((rows, cols), np.nan)
         self.margin = np.full((rows, cols), np.nan)
+        self.grazes = np.zeros((rows, cols), bool)
         east, north = self.metres()
         distance = np.hypot(east, north)
         bearing = np.degrees(np.arctan2(east, north))
@@ -175,6 +178,7 @@ class Walker:
         if straight:  # exact zeros for whole-number ratios
             dp, dq = self.p[rt, ct], self.q[rt, ct]
             side = np.where(dp * q == dq * p, 0.0, side)
+        self.grazes[rt, ct] = np.any((side != 0) & (np.abs(side) < 1e-13 * max(1.0, length)))
         found = {}
         on = np.argwhere(side == 0)
         for a, b in on:  # through a post
@@ -341,7 +345,7 @@ class Walker:
             return -math.inf
         (distance, x, y), f = found
         bulge = -f[3] * x * y
-        if bulge <= 0 or -f[0] >= bulge:
+        if bulge <= 1e-11 or -f[0] >= bulge:  # less is rounding
             return -math.inf
         return (f[1] * x + f[2] * y - 2 * math.sqrt(max(0.0, -f[0] * bulge))) / distance
 

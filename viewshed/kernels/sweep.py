@@ -150,7 +150,7 @@ def own_peak(own, t):
     x, y, u = own_exit(own, t)
     kappa = -own[O_FAB] * x * y
     f0 = own[O_F0]
-    if kappa <= 0.0 or -f0 >= kappa or u <= 0.0:
+    if kappa <= FLAT or -f0 >= kappa or u <= 0.0:
         return -BIG
     fall = -f0 * kappa
     if fall < 0.0:
@@ -624,6 +624,11 @@ def own_strip_horizon(pu, pv, pf, a, u, v, f, b, j, i, t, own, own_known, cell):
             at_a += 1
             at_b += 1
         near = pv[at_a] - t * pu[at_a]
+        if near == 0.0:  # through a post: its edge outward blocks with this end
+            ff = pf[at_a] + f[at_b]
+            if ff == ff and pu[at_a] > 0.0:
+                best = max(best, pf[at_a] / pu[at_a])
+            return best
         if (step < 0 and near <= 0.0) or (step > 0 and near >= 0.0):
             return best
         far = v[at_b] - t * u[at_b]
