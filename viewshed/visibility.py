@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from viewshed._jit import announce
-from viewshed.constants import HIDDEN, NODATA, UNRESOLVED, VISIBLE
+from viewshed.constants import HIDDEN, NODATA, VISIBLE
 from viewshed.errors import InputError, ViewshedError
 from viewshed.kernels import sweep as k
 from viewshed.wedges import Air, Scene, Wedge, corner_weights, shift_of, wedge_count, wedges
@@ -322,13 +322,17 @@ def _finish(
 ) -> tuple[NDArray[np.float32] | None, NDArray[np.float32] | None]:
     """Clearance and needed height, with a number also where nothing stands between.
 
-    There the sight line has the full height of eye and target to spare.
+    There the sight line has the full height of eye and target to spare. Strip by strip, so that
+    nothing as large as the layer is made on the way.
     """
-    np.copyto(clear, np.float32(scene.eye_height + scene.target_height), where=np.isposinf(clear))
-    known = (state == VISIBLE) | (state == HIDDEN)
-    np.copyto(clear, np.float32(np.nan), where=~known)
-    height = None
-    if needed:
-        height = np.maximum(np.float32(0.0), np.float32(scene.target_height) - clear)
-        np.copyto(height, np.float32(np.nan), where=state == UNRESOLVED)
+    spare = np.float32(scene.eye_height + scene.target_height)
+    target = np.float32(scene.target_height)
+    height = np.empty_like(clear) if needed else None
+    for first in range(0, state.shape[0], 256):
+        rows = slice(first, first + 256)
+        part = clear[rows]
+        part[np.isposinf(part)] = spare
+        part[(state[rows] != VISIBLE) & (state[rows] != HIDDEN)] = np.nan
+        if height is not None:
+            np.maximum(np.float32(0.0), target - part, out=height[rows])
     return (clear if clearance else None), height
