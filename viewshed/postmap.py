@@ -26,6 +26,7 @@ _ALLOWED_ERROR = 0.01  # [cells]
 _FIT_NODES = 24
 _CHECK_NODES = 41
 _WINDOW_MARGIN = 2
+_NO_BEND = 1e-9  # effect of a term that is rounding of the fit [cells]
 
 
 # --- the part of a grid within range ------------------------------------------------------------
@@ -233,6 +234,8 @@ def _post_map(exact: _Exact, terms: FloatArray, scale: float) -> PostMap:
     """Take the linear part at the observer out of E and N; the errors are still unknown."""
     jacobian = np.stack([terms[:, 1, 0], terms[:, 0, 1]], axis=1) / scale
     pq = np.einsum("kl,lij->kij", np.linalg.inv(jacobian), terms)
+    # rounding alone would bend a meridian away from the grid's own column
+    pq[np.abs(pq) < _NO_BEND] = 0.0
     pq[:, 1, 0] = scale, 0.0
     pq[:, 0, 1] = 0.0, scale
     geod = exact.frame.geod

@@ -106,14 +106,14 @@ class _Workers:
             self._local.factor = factor
             self._local.arrays = (
                 np.zeros((2, 7, w)),
-                np.zeros((6, w)),
+                np.zeros((7, w)),
                 np.zeros((2, 3, 12 * w + 256)),
                 np.zeros((4, w)),
                 np.zeros((8 * w + 256, 16)),
                 np.zeros((2, 4 * w + 64)),
                 np.zeros((2, 16)),
                 np.zeros((1, 16)),
-                np.zeros((2, 4)),
+                np.zeros((3, 8)),
             )
         arrays: tuple[NDArray[np.float64], ...] = self._local.arrays
         return arrays
@@ -200,6 +200,8 @@ def _run(
                 worker.join()
     if failed:
         raise failed[0]
+    if progress is not None:
+        progress(len(done), len(tasks))
 
 
 def compute(  # noqa: PLR0913 - one name for each thing a question is made of
@@ -262,6 +264,12 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     surface strictly between it and the observer lies above the straight line that joins them.
     """
     n_threads = usable_threads(threads)
+    if not (range_m > 0.0 and math.isfinite(refraction_k)):
+        msg = (
+            f"range {range_m} m must be above 0 and the refraction coefficient {refraction_k} a "
+            "finite number"
+        )
+        raise InputError(msg)
     if not (math.isfinite(eye_height) and math.isfinite(target_height)):
         msg = f"eye height {eye_height} and target height {target_height} must be finite numbers"
         raise InputError(msg)
@@ -295,7 +303,7 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
 
     announce(k.sweep)
     for octant in axes:
-        k.axis(elevation, state, clear, octant.ints, octant.geo, octant.own)
+        k.axis(elevation, state, clear, octant.ints, octant.geo, octant.coef_u, octant.own)
     _run([sweep_task(piece) for piece in pieces], n_threads, progress)
     _answer_own_place(scene, state, clear if want else None)
     layers = _finish(state, clear, scene, clearance, needed_height) if want else (None, None)

@@ -77,6 +77,7 @@ class Octant:
     coef_v: NDArray[np.float64]
     own: NDArray[np.float64]
     to_east_north: NDArray[np.float64]
+    straight: bool
 
 
 @dataclass(frozen=True)
@@ -225,11 +226,13 @@ def _octant(scene: Scene, by_row: bool, signs: tuple[int, int], clearance: bool)
     ints[k.OWN_KNOWN] = own_known
     ints[k.WANT_CLEARANCE] = clearance
     ints[k.OWN_DIAGONAL] = not by_row
-    ints[k.OWN_AXIS] = (not scene.affine) and signs[1] > 0
     ints[k.MARGIN] = 3 + math.ceil(4.0 * _bend(pm, rows, cols))
     _bearing_fields(scene.sector, frame, ints, geo)
     coef_u, coef_v = _octant_polynomials(scene, by_row, signs)
-    return Octant(ints, geo, coef_u, coef_v, own, frame)
+    # does the observer's own row or column run straight, with the observer on it?
+    straight = geo[k.Y0] == 0.0 and not coef_v[:, 0].any()
+    ints[k.OWN_AXIS] = not straight and signs[1] > 0
+    return Octant(ints, geo, coef_u, coef_v, own, frame, bool(straight))
 
 
 def _octant_polynomials(
@@ -334,7 +337,7 @@ def wedges(scene: Scene, clearance: bool) -> tuple[list[Wedge], list[Octant]]:
                 octant = _octant(scene, by_row, (main, minor), clearance)
                 if octant.ints[k.LAST_LINE] < 1:
                     continue
-                if scene.affine and octant.geo[k.Y0] == 0.0 and minor > 0:
+                if octant.straight and minor > 0:
                     axes.append(octant)
                 for n in range(count):
                     low, high = float(edges[n]), float(edges[n + 1])

@@ -25,6 +25,8 @@ import numpy as np
 from viewshed._jit import inline, kernel
 
 BIG = 1e300
+#: Parts of a wedge that are looked at as a whole.
+BLOCKS = 8
 #: A mixed difference of four heights that is rounding and no bulge [m].
 FLAT = 1e-11
 
@@ -726,7 +728,8 @@ def add_strip_gaps(pt, pf, t, f, shift, from_a, to_a, j, lo_prev, low, high, gap
             t1 = BIG
         if t1 <= low or t0 >= high:
             continue
-        if t0 < run_b:  # overlaps the run of cells before it
+        # overlaps the run of cells before it, or meets it at a void post
+        if t0 < run_b or (t0 == run_b and (pf[a] != pf[a] or f[b] != f[b])):
             run_a = min(run_a, t0)
             run_b = max(run_b, t1)
         else:
@@ -774,6 +777,67 @@ def survey_line(env, n_env, first, count, t, low, high, at, least, most):
         w = a + b * there
         least[n] = min(bottom, w)
         most[n] = max(peak, w)
+
+
+@inline
+def block_floors(env, n_env, low, high, floors):
+    """Least value of the envelope over each of equal parts of the wedge."""
+    k = 0
+    step = (high - low) / BLOCKS
+    for b in range(BLOCKS):
+        t0 = low + step * b
+        t1 = low + step * (b + 1) if b < BLOCKS - 1 else high
+        while k > 0 and env[0, k] > t0:
+            k -= 1
+        while k < n_env - 1 and env[0, k + 1] <= t0:
+            k += 1
+        bottom = env[1, k] + env[2, k] * t0
+        while True:
+            bottom = min(bottom, env[1, k] + env[2, k] * max(env[0, k], t0))
+            bottom = min(bottom, env[1, k] + env[2, k] * min(env[0, k + 1], t1))
+            if k == n_env - 1 or env[0, k + 1] >= t1:
+                break
+            k += 1
+        floors[b] = bottom
+
+
+@inline
+def loud_posts(
+    t, g, goal_g, pg, shift, n_prev, n_first, n_last, lo, u_line, y0, low, high, floors, least, most
+):
+    """Find the posts of a line between which something may be seen or rise: first and last.
+
+    Part by part of the wedge, the line and the one before it are held against the least of the
+    envelope there; `least` and `most` are bounded where nothing rises.
+    """
+    from_n = n_last + 1
+    to_n = n_first - 1
+    n_a = n_first
+    step = (high - low) / BLOCKS
+    for b in range(BLOCKS):
+        n_b = n_last
+        if b < BLOCKS - 1:
+            edge = low + step * (b + 1)
+            n_b = min(max(int(edge * u_line - y0) + 1 - lo, n_a), n_last)
+            while n_b > n_a and t[n_b - 1] >= edge:
+                n_b -= 1
+            while n_b < n_last and t[n_b] < edge:
+                n_b += 1
+        # a cell reaches no farther than three posts along its line, also where the map bends
+        peak = greatest(g, max(n_a - 3, 0), n_b + 4)
+        peak = max(peak, greatest(goal_g, max(n_a - 3, 0), n_b + 4))
+        peak = max(peak, greatest(pg, max(n_a - 3 - shift, 0), min(n_b + 4 - shift, n_prev)))
+        bottom = floors[b]
+        if peak + 1e-12 >= bottom:
+            from_n = min(from_n, max(n_a - 3, n_first))
+            to_n = max(to_n, min(n_b + 3, n_last))
+        for n in range(n_a, n_b):
+            least[n] = bottom
+            most[n] = BIG
+        if b > 0 and n_a > n_first:
+            least[n_a - 1] = min(least[n_a - 1], bottom)
+        n_a = n_b
+    return from_n, to_n
 
 
 @inline
@@ -1130,8 +1194,8 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
         Directions answered, from piece[0] up to but not at piece[1], and those swept, piece[2]
         to piece[3].
     work : tuple of arrays
-        Scratch space: lines (2, 7, w), post (6, w), env (2, 3, e), seg (4, w), arcs (a, 16),
-        gaps (2, b), poly (2, n + 1), cell (1, 16), corner (2, 4).
+        Scratch space: lines (2, 7, w), post (7, w), env (2, 3, e), seg (4, w), arcs (a, 16),
+        gaps (2, b), poly (2, n + 1), cell (1, 16), corner (3, 8).
 
     Returns
     -------
@@ -1155,6 +1219,9 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
 
     ts = corner[0]
     gs = corner[1]
+    floors = corner[2]
+    for k in range(BLOCKS):
+        floors[k] = -BIG
     heights, at, least, most, wants = post[0], post[1], post[2], post[3], post[4]
 
     which = 0
@@ -1263,38 +1330,56 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
         plain = ints[HAS_BEARINGS] == 0 and w_lo <= w_hi and (
             asked(ints, geo, u[w_lo], v[w_lo]) and asked(ints, geo, u[w_hi], v[w_hi])
         )
-        top_goal = top
         goal = f
+        goal_g = g
+        top_goal = top
         if target != 0.0:
             goal = post[5]
+            goal_g = post[6]
             flatten(heights, target, geo, u, v, goal, count)
-            for n in range(w_lo, w_hi + 1):
-                if goal[n] > top_goal * u[n]:
-                    top_goal = goal[n] / u[n]
+            for n in range(count):
+                goal_g[n] = goal[n] / u[n]
+            top_goal = max(top, greatest(goal_g, w_lo, w_hi + 1))
 
         hidden = top_goal + 1e-12 < env_low and not want_clearance
         rises = max(top, top_prev) > env_low
+        h_lo = n_first
+        h_hi = n_last
+        if not want_clearance and j > 2 and n_last - n_first >= 3 * BLOCKS and (
+            rises or not hidden
+        ):
+            h_lo, h_hi = loud_posts(
+                t, g, goal_g, pg, shift, n_prev, n_first, n_last, lo, u_line, geo[Y0], low, high,
+                floors, least, most,
+            )  # fmt: skip
+            hidden = hidden or h_lo > h_hi
+            rises = rises and h_lo <= h_hi
         if rises or not hidden:
-            survey_line(env, n_env, n_first, n_last - n_first, t, low, high, at, least, most)
+            survey_line(env, n_env, h_lo, h_hi - h_lo, t, low, high, at, least, most)
+        r_lo = h_lo
         if hidden:
-            for n in range(w_lo, w_hi + 1):
-                if f[n] == f[n] and (plain or asked(ints, geo, u[n], v[n])):
-                    k = minor + sign * n
-                    if main_is_row:
-                        state[main, k] = 0
-                    else:
-                        state[k, main] = 0
-        else:
+            h_lo = w_hi + 1
+        for n in range(w_lo, w_hi + 1):
+            if h_lo <= n <= h_hi:
+                continue
+            if f[n] == f[n] and (plain or asked(ints, geo, u[n], v[n])):
+                k = minor + sign * n
+                if main_is_row:
+                    state[main, k] = 0
+                else:
+                    state[k, main] = 0
+        if not hidden:
             answer(
                 state, clearance, ints, geo, own, before, here, goal, at, wants, j, lo, shift,
-                w_lo, w_hi, plain, main, minor, arcs, n_arcs, gaps, n_gaps, cell,
+                max(w_lo, h_lo), min(w_hi, h_hi), plain, main, minor, arcs, n_arcs, gaps, n_gaps,
+                cell,
             )  # fmt: skip
 
         # merge this strip
         planes = False
         if rises:
-            go_lo = cell_lo
-            go_hi = cell_hi
+            go_lo = cell_lo if r_lo == n_first else lo + r_lo
+            go_hi = cell_hi if h_hi == n_last else lo + h_hi
             if j > 2:
                 while go_lo <= go_hi and not rising(
                     pg, go_lo - lo_prev, g, go_lo - lo, least, n_first, n_last
@@ -1344,6 +1429,8 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                 if stale and ((j & 3) == 0 or n_arcs > 2 * (n_last - n_first)):
                     n_arcs = drop_arcs(env, n_env, eps, arcs, n_arcs)
                     stale = False
+                if changed:
+                    block_floors(env, n_env, low, high, floors)
                 n_arcs = add_strip_arcs(
                     ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, env,
                     n_env, arcs, n_arcs, cell, ts, gs,
@@ -1375,11 +1462,11 @@ def has_edge(z, r, c):
 
 
 @kernel
-def axis(z, state, clearance, ints, geo, own):
+def axis(z, state, clearance, ints, geo, coef_u, own):
     """Answer the targets straight along the main axis, on the observer's own row or column.
 
-    Only for grids whose map is affine and an observer exactly on that row or column: there the
-    sight line runs along edges and meets posts alone. Parameters as for `sweep`.
+    Only where the map leaves that row or column straight and the observer stands exactly on it:
+    there the sight line runs along edges and meets posts alone. Parameters as for `sweep`.
     """
     main_is_row = ints[MAIN_IS_ROW]
     minor = ints[BASE_MINOR]
@@ -1390,6 +1477,11 @@ def axis(z, state, clearance, ints, geo, own):
         r = main if main_is_row else minor
         c = minor if main_is_row else main
         u = geo[X0] + j
+        if ints[DEGREE] > 1:
+            x = u / geo[SCALE]
+            u = 0.0
+            for k in range(ints[DEGREE], -1, -1):
+                u = u * x + coef_u[k, 0]
         if geo[G20] * u * u > geo[RANGE2]:
             return
         height = np.float64(z[r, c])
@@ -1418,7 +1510,7 @@ def axis(z, state, clearance, ints, geo, own):
                 else:
                     clearance[r, c] = clear
         if j == 1:
-            horizon = own[O_F0] / u + own[O_FA]
+            horizon = own[O_F0] / u + own[O_FA] * (own[O_X1] / u)
         elif has_edge(z, r, c):
             f = (height - geo[Z_EYE]) * (1.0 - height * geo[INV_R]) - drop
             horizon = max(horizon, f / u)
