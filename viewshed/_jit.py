@@ -54,9 +54,8 @@ def announce(dispatcher: Any) -> None:
     """Say so, once, when the next call of a kernel will have to compile it."""
     if dispatcher.overloads or _is_cached(dispatcher):
         return
-    _log.warning(
-        "compiling the kernels: this takes about half a minute and is kept for the next run"
-    )
+    kept = " and is kept for the next run" if hasattr(dispatcher._cache, "_cache_file") else ""
+    _log.warning("compiling the kernels: this takes about half a minute%s", kept)
 
 
 def _is_cached(dispatcher: Any) -> bool:

@@ -28,8 +28,8 @@ from viewshed.constants import (
     UNRESOLVED,
     VISIBLE,
 )
-from viewshed.errors import InputError, ViewshedWarning
-from viewshed.places import Observer, Sector, Target
+from viewshed.errors import InputError, OutputError, ViewshedWarning
+from viewshed.places import Observer, Sector, Target, parse_length
 from viewshed.postmap import fit_post_map, range_window
 from viewshed.visibility import compute, ground_at
 
@@ -49,6 +49,13 @@ __all__ = ["MapResult", "map_visibility"]
 _TALL_TARGET, _LOW_EYE = 20.0, 3.0
 #: Memory of the page, the writers and the scratch arrays, beside the arrays of the window [bytes].
 _OVERHEAD = 500e6
+
+#: A position this near to a post is that post [cells].
+_SAME_POST = 1e-6
+#: Clearance is told up to here [m]: an obstacle a hair's breadth before the eye gives millions.
+_GREATEST_CLEARANCE = np.float32(10_000.0)
+#: Half way round the Earth, about [m].
+_GREATEST_RANGE = 2e7
 
 _BANDS = {
     "visible": ("visible (1), hidden (0), unresolved (2)", "", NODATA),
@@ -150,6 +157,13 @@ class MapResult:
         x, y = (float(v) for v in self.grid.xy(best[2], best[3]))
         return {"x": x, "y": y, "distance_m": round(best[0], 2), "bearing_deg": round(best[1], 4)}
 
+    @property
+    def covered(self) -> float:
+        """Share of range and sector that lies on known ground, so that it has an answer."""
+        width = 360.0 if self.sector is None else self.sector.width_deg
+        asked = math.pi * self.range_m**2 * width / 360.0
+        return min(1.0, sum(self.areas_m2.values()) / asked)
+
     @cached_property
     def summary(self) -> list[tuple[str, str]]:
         """Short table of the result: rows of label and value."""
@@ -157,13 +171,20 @@ class MapResult:
         rows = []
         for name, area in self.areas_m2.items():
             share = f" ({100 * area / total:.1f} %)" if total else ""
-            rows.append((name.capitalize(), f"{area / 1e6:,.2f} km2{share}"))
+            told = f"{area / 1e6:,.2f} km2" if total >= 1e5 else f"{area:,.0f} m2"
+            rows.append((name.capitalize(), told + share))
+        if self.covered < 0.99:
+            rows.append(("Range on known ground", f"{100 * self.covered:.0f} % of it"))
         far = self.farthest_visible
         if far is not None:
-            distance = f"{far['distance_m'] / 1000:.1f} km"
+            metres = far["distance_m"]
+            distance = f"{metres / 1000:.1f} km" if metres >= 1000 else f"{metres:.0f} m"
             told = f"{distance} off at {far['bearing_deg']:.0f} degrees"
             rows.append(("Farthest visible", told))
         rows.append(("Refraction", self.refraction.describe()))
+        rows.append(("Ground at the observer", f"{self._ground:.1f} m"))
+        if self.terrain.height_unit_origin == "assumed metres":
+            rows.append(("Heights", "in metres, as assumed"))
         error = self.post_map.error_m
         told = f"up to {error:.2g} m" if error >= 1e-3 else "under 1 mm"
         rows.append(("Map position error", told))
@@ -209,6 +230,7 @@ class MapResult:
                 },
                 "counts": self.counts,
                 "areas_m2": self.areas_m2,
+                "range_on_known_ground": round(self.covered, 4),
                 "farthest_visible": self.farthest_visible,
                 "warnings": list(self.warnings),
                 "outputs": {},
@@ -231,6 +253,7 @@ class MapResult:
             "sector_deg": None if sector is None else [sector.from_deg, sector.to_deg],
             "refraction_k": self.refraction.k,
             "layers": list(self.layers),
+            **self.terrain.stated,
         }
 
     def write(
@@ -270,6 +293,7 @@ class MapResult:
 
         check_out_dir(out_dir, overwrite)
         folder = Path(out_dir)
+        self._spare_the_inputs(folder)
         outputs: dict[str, Any] = {}
         with staged(folder, overwrite=overwrite) as stage:
             for layer, array in self._arrays():
@@ -290,10 +314,26 @@ class MapResult:
             if picture:
                 self._draw(stage.path("map.png"))
                 outputs["map.png"] = {"sha256": file_sha256(stage.path("map.png")), "layer": None}
-            record = build_record({**self.record, "outputs": outputs}, folder=folder.resolve())
+            options = {
+                **self.record["options"],
+                "picture": picture,
+                "creation_options": dict(creation_options or {}),
+            }
+            record = build_record(
+                {**self.record, "options": options, "outputs": outputs}, folder=folder.resolve()
+            )
             write_record(stage.path("record.json"), record)
         names = sorted(outputs, key=lambda n: (n != "map.png", list(outputs).index(n)))
         return [folder / name for name in [*names, "record.json"]]
+
+    def _spare_the_inputs(self, folder: Path) -> None:
+        """Refuse to write over the elevation that was read."""
+        from viewshed.io._atomic import RESULT_NAMES
+
+        for path in self.terrain.paths:
+            if path.resolve().parent == folder.resolve() and path.name in RESULT_NAMES:
+                msg = f"{path}: is the elevation grid itself; choose another folder for the results"
+                raise OutputError(msg)
 
     def _arrays(self) -> list[tuple[str, NDArray[Any]]]:
         arrays = {
@@ -365,8 +405,8 @@ def _place(terrain: Terrain, observer: Observer) -> tuple[float, float, float, f
         given, own = (geodesy.crs_from_user(crs) for crs in (observer.crs, grid.crs_wkt))
         x, y = geodesy.transform_point(x, y, given, own)
     row, col = geodesy.post_position(grid, x, y)
-    # a position given in decimal digits on a grid of cells is on a post if it is within rounding
-    row, col = (round(v) if abs(v - round(v)) < 1e-9 else v for v in (row, col))
+    # positions and cell sizes are written in decimals: within their rounding a post is meant
+    row, col = (round(v) if abs(v - round(v)) < _SAME_POST else v for v in (row, col))
     if 0 <= row <= grid.rows - 1 and 0 <= col <= grid.cols - 1:
         return float(row), float(col), x, y
     told = f"the observer {_number(observer.x)},{_number(observer.y)}"
@@ -429,6 +469,19 @@ def _layers(layers: Sequence[str]) -> tuple[str, ...]:
     return tuple(name for name in LAYERS if name in layers or name == "visible")
 
 
+def _ground_under(
+    elevation: NDArray[np.float32], at: tuple[float, float], place: tuple[float, float]
+) -> float:
+    try:
+        return ground_at(elevation, *at)
+    except InputError:
+        msg = (
+            f"the observer {_number(place[0])},{_number(place[1])} stands on or beside a void, "
+            "so the ground under it is not known: move it or fill the void"
+        )
+        raise InputError(msg) from None
+
+
 def _eye_height(observer: Observer, ground: float) -> float:
     if observer.eye_elevation is None:
         return float(observer.eye_height or 0.0)
@@ -447,7 +500,7 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
     observer: Observer,
     *,
     target: Target | float = 0.0,
-    range_m: float = DEFAULT_RANGE,
+    range_m: float | str = DEFAULT_RANGE,
     refraction: Refraction | float | str = SURVEY_K,
     sector: Sector | None = None,
     layers: Sequence[str] = ("visible",),
@@ -464,8 +517,8 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
         Where the sight lines start.
     target : Target or float
         What is looked at in each cell: height above ground [m].
-    range_m : float
-        Farthest ground distance considered [m].
+    range_m : float or str
+        Farthest ground distance considered [m], or a text such as ``"30km"``.
     refraction : Refraction, float or str
         The air: k, or a text such as ``"K=4/3"`` or ``"survey"``.
     sector : Sector or None
@@ -502,8 +555,9 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
     >>> result.counts["unresolved"], result.refraction.describe()
     (0, 'k = 0.13 (K = 1.149)')
     """
-    if not (math.isfinite(range_m) and range_m > 0.0):
-        msg = f"range {range_m} m: give a positive length"
+    range_m = parse_length(range_m) if isinstance(range_m, str) else float(range_m)
+    if not 0.0 < range_m <= _GREATEST_RANGE:
+        msg = f"range {range_m:g} m: give a length above 0 and up to {_length(_GREATEST_RANGE)}"
         raise InputError(msg)
     wanted = _layers(layers)
     goal = target if isinstance(target, Target) else Target(float(target))
@@ -522,7 +576,7 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
         elevation = terrain.read(*window)
     notes += [str(w.message) for w in caught if issubclass(w.category, ViewshedWarning)]
     at = (row - window[0], col - window[1])
-    eye_height = _eye_height(observer, ground_at(elevation, *at))
+    eye_height = _eye_height(observer, _ground_under(elevation, at, (x, y)))
     if goal.height > _TALL_TARGET and eye_height < _LOW_EYE:
         notes.append(
             f"a target {goal.height:g} m tall seen from an eye at {eye_height:g} m: this maps "
@@ -546,6 +600,12 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
         threads=threads,
         progress=progress,
     )
+    if seen.clearance is not None:
+        np.minimum(seen.clearance, _GREATEST_CLEARANCE, out=seen.clearance)
+    if (seen.visible == NODATA).all():
+        where = "" if sector is None else " and the sector"
+        msg = f"no known cell centre lies within the range of {_length(range_m)}{where}: widen it"
+        raise InputError(msg)
     return _cropped(
         seen,
         elevation,
@@ -557,7 +617,7 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
             "position": (x, y),
             "eye_height": eye_height,
             "target": goal,
-            "range_m": float(range_m),
+            "range_m": range_m,
             "refraction": air,
             "sector": sector,
             "layers": wanted,

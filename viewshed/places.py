@@ -40,10 +40,17 @@ def _finite(value: float, what: str, cure: str) -> float:
     return number
 
 
+#: Heights beyond this are slips of the pen [m].
+_GREATEST_HEIGHT = 100_000.0
+
+
 def _height(value: float, what: str) -> float:
     number = _finite(value, what, "give it in metres above ground")
     if number < 0.0:
         msg = f"{what} {number:g} m is below ground; give 0 or more"
+        raise InputError(msg)
+    if number > _GREATEST_HEIGHT:
+        msg = f"{what} {number:g} m is no height on Earth; give at most {_GREATEST_HEIGHT:g} m"
         raise InputError(msg)
     return number
 

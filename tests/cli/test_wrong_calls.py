@@ -25,6 +25,7 @@ def call(**changes):
     ("changes", "words"),
     [
         ({"observer": "here"}, ("--observer", "'here'", "X,Y")),
+        ({"out": ""}, ("--out", "no name")),
         ({"observer": "1"}, ("'1'", "X,Y")),
         ({"observer": "nan,2"}, ("'nan,2'", "X,Y")),
         ({"observer": "1,inf"}, ("'1,inf'", "X,Y")),

@@ -119,10 +119,12 @@ def test_overwrite_leaves_no_stale_layer(tmp_path):
     assert matching(tmp_path)
 
 
-def test_overwrite_without_a_record(tmp_path):
-    (tmp_path / "visible.tif").write_text("stale")
-    run(tmp_path, NEW, overwrite=True)
-    assert content(tmp_path) == NEW
+def test_overwrite_spares_what_no_record_lists(tmp_path):
+    (tmp_path / "visible.tif").write_text("mine")
+    for refuse in (check_out_dir, lambda out, *, overwrite: run(out, NEW, overwrite=overwrite)):
+        with pytest.raises(OutputError, match=r"visible\.tif: exists and no record of viewshed"):
+            refuse(tmp_path, overwrite=True)
+    assert (tmp_path / "visible.tif").read_text() == "mine"
 
 
 @pytest.mark.parametrize("text", ["{}", "[1]", "not json", '{"format": "another"}'])
@@ -140,7 +142,7 @@ def test_a_record_cannot_reach_outside(tmp_path):
     precious = tmp_path / "precious.txt"
     precious.write_text("mine")
     record = json.loads((out / "record.json").read_text())
-    record["outputs"] = {"../precious.txt": {}, str(precious): {}, ".hidden": {}, "..": {}}
+    record["outputs"] |= {"../precious.txt": {}, str(precious): {}, ".hidden": {}, "..": {}}
     (out / "record.json").write_text(json.dumps(record))
     run(out, NEW, overwrite=True)
     assert precious.read_text() == "mine"
@@ -223,7 +225,7 @@ def test_check_makes_nothing(tmp_path):
 
 def test_a_folder_where_a_file_belongs(tmp_path):
     (tmp_path / "visible.tif").mkdir()
-    with pytest.raises(OutputError, match=r"visible\.tif: is a folder and stands where"):
+    with pytest.raises(OutputError, match=r"visible\.tif: exists and no record"):
         run(tmp_path, NEW, overwrite=True)
     assert [p.name for p in tmp_path.iterdir()] == ["visible.tif"]
 

@@ -226,9 +226,65 @@ def test_an_option_of_the_format_is_passed_on_or_refused(terrain, tmp_path):
     result.write(tmp_path / "z", picture=False, creation_options={"COMPRESS": "LZW"})
     with rasterio.open(tmp_path / "z" / "visible.tif") as file:
         assert file.profile["compress"] == "lzw"
-    with pytest.raises(viewshed.InputError, match="'SHAPE' is unknown"):
-        result.write(tmp_path / "y", picture=False, creation_options={"SHAPE": "ROUND"})
+    for option, told in (("SHAPE=ROUND", "'SHAPE' is unknown"), ("COMPRESS=BOGUS", "DEFLATE")):
+        with pytest.raises(viewshed.InputError, match=told):
+            result.write(
+                tmp_path / "y", picture=False, creation_options=dict([option.split("=")])
+            )
     assert not (tmp_path / "y").exists()
+
+
+def test_the_elevation_is_never_written_over(tmp_path, hills):
+    folder = tmp_path / "data"
+    folder.mkdir()
+    source = write_dem(folder / "visible.tif", hills)
+    before = source.read_bytes()
+    result = viewshed.map_visibility(
+        viewshed.open_terrain(source), viewshed.Observer(*post(30, 40)), range_m=300
+    )
+    for overwrite in (False, True):
+        with pytest.raises(viewshed.OutputError, match=r"visible\.tif"):
+            result.write(folder, overwrite=overwrite, picture=False)
+    assert source.read_bytes() == before
+
+
+def test_a_range_that_reaches_no_cell_is_refused(terrain):
+    with pytest.raises(viewshed.InputError, match=r"no known cell centre .* widen"):
+        viewshed.map_visibility(terrain, viewshed.Observer(*post(30.5, 40.5)), range_m=5)
+
+
+def test_a_range_may_be_a_text_and_has_an_end(terrain):
+    observer = viewshed.Observer(*post(30, 40))
+    assert viewshed.map_visibility(terrain, observer, range_m="0.3km").range_m == 300.0
+    with pytest.raises(viewshed.InputError, match="up to 20000 km"):
+        viewshed.map_visibility(terrain, observer, range_m=1e12)
+
+
+def test_the_page_says_how_much_of_the_range_is_known(terrain):
+    whole = viewshed.map_visibility(terrain, viewshed.Observer(*post(30, 40)), range_m=600)
+    assert whole.covered == pytest.approx(1.0, abs=0.01)
+    assert "Range on known ground" not in dict(whole.summary)
+    with pytest.warns(viewshed.ViewshedWarning, match="past"):
+        part = viewshed.map_visibility(terrain, viewshed.Observer(*post(0, 40)), range_m=600)
+    assert part.covered == pytest.approx(0.5, abs=0.05)
+    assert dict(part.summary)["Range on known ground"].startswith("5")
+    assert part.record["range_on_known_ground"] == pytest.approx(part.covered, abs=1e-4)
+
+
+def test_clearance_stays_fit_for_a_display(terrain):
+    x, y = post(30.00002, 40)  # half a millimetre beside a row of posts
+    result = viewshed.map_visibility(
+        terrain, viewshed.Observer(x, y, eye_height=60), range_m=300, layers=("clearance",)
+    )
+    assert np.nanmax(result.clearance) == 10_000.0
+    assert (result.clearance == 10_000.0).sum() < 10
+
+
+def test_small_areas_and_lengths_are_told_in_metres(terrain):
+    result = viewshed.map_visibility(terrain, viewshed.Observer(*post(30, 40)), range_m=100)
+    told = dict(result.summary)
+    assert " m2" in told["Visible"]
+    assert told["Farthest visible"].split()[1] == "m"
 
 
 def test_turned_and_south_up_grids_give_the_same_places(tmp_path, hills):

@@ -68,10 +68,16 @@ def main(args: list[str] | None = None) -> Any:
     """Run the program; the exit code is 0, 1 (failed), 2 (wrong call) or 130 (Ctrl-C)."""
     with contextlib.suppress(ValueError, OSError):
         _leave_in_time()
+        signal.signal(signal.SIGTERM, _end)
     try:
         return cli.main(args=args, prog_name="viewshed")
     except KeyboardInterrupt:
         raise SystemExit(INTERRUPTED) from None
+
+
+def _end(number: int, _: object) -> None:
+    """End on SIGTERM as on Ctrl-C, with what is half done removed."""
+    raise SystemExit(128 + number)
 
 
 def _leave_in_time() -> None:

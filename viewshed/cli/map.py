@@ -10,6 +10,7 @@ import click
 
 from viewshed.cli.options import (
     CrsType,
+    FolderType,
     LayersType,
     LengthType,
     NameValueType,
@@ -159,7 +160,7 @@ SECTIONS = {
 )
 @click.option(
     "--out",
-    type=click.Path(path_type=Path),
+    type=FolderType(),
     required=True,
     metavar="DIR",
     help="Folder for the results; made if it is not there.",
@@ -206,7 +207,14 @@ def map_command(ctx: click.Context, /, **given: Any) -> None:
     terrain = open_terrain(list(given["dem"]), crs=given["crs"], height_unit=given["height_unit"])
 
     from viewshed.api import map_visibility
+    from viewshed.errors import InputError
+    from viewshed.io.raster import checked_creation_options
 
+    options = dict(given["creation_options"])
+    try:
+        checked_creation_options(options)
+    except InputError as error:
+        raise click.BadParameter(str(error), param_hint="'--co'") from None
     with Progress("Looking", hidden=quiet) as progress:
         result = map_visibility(
             terrain,
@@ -219,7 +227,6 @@ def map_command(ctx: click.Context, /, **given: Any) -> None:
             threads=given["threads"],
             progress=progress,
         )
-    options = dict(given["creation_options"])
     paths = result.write(
         given["out"],
         overwrite=given["overwrite"],

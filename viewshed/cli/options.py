@@ -13,6 +13,7 @@ import traceback
 import warnings
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
+from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeVar
 
 import click
@@ -151,6 +152,19 @@ class LayersType(_Text):
         return tuple(layer for layer in LAYERS if layer == "visible" or layer in asked)
 
 
+class FolderType(_Text):
+    """A folder, which an empty text (an unset variable in a script) is not."""
+
+    name = "DIR"
+
+    def read(self, text: str) -> Path:
+        """Make a path of the text."""
+        if not text.strip():
+            msg = "the folder for the results has no name; give one"
+            raise InputError(msg)
+        return Path(text)
+
+
 class NameValueType(_Text):
     """NAME=VALUE."""
 
@@ -210,7 +224,7 @@ def verbosity_options(command: Command) -> Command:
             expose_value=False,
             is_eager=True,
             callback=lambda ctx, _, n: _louder(ctx, n),
-            help="Tell more; -vv tells everything and shows where an error comes from.",
+            help="Tell more where there is more; -vv shows where an error comes from.",
         ),
     ):
         command = option(command)

@@ -198,8 +198,14 @@ def _refuse_existing(folder: Path, *, overwrite: bool, names: tuple[str, ...]) -
     if found and not overwrite:
         msg = f"{folder / found[0]}: exists; use --overwrite to replace the results in this folder"
         raise OutputError(msg)
-    if RECORD_NAME in found:
-        _listed(folder)
+    ours = set(_listed(folder))
+    for name in found:
+        if name not in ours:
+            msg = (
+                f"{folder / name}: exists and no record of viewshed lists it; move it away or "
+                "choose another folder"
+            )
+            raise OutputError(msg)
 
 
 def _listed(folder: Path) -> list[str]:

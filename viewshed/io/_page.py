@@ -151,16 +151,8 @@ class Page:
         for text in lines[:4]:
             y += 1.28 * size * pt
             self.write(self.left, y, text, size, bold=True)
-        facts = [f"Refraction {words.refraction}", f"range {told_length(scene.range_m)}"]
-        if scene.sector is not None:
-            ends = (scene.sector.from_deg % 360, scene.sector.to_deg % 360)
-            facts.append("sector {:g}\u00b0 to {:g}\u00b0".format(*ends))
-        told = "   \u00b7   ".join(facts)
         y += 16 * pt
-        self.write(self.left, y, told, 9)
-        left_over = room - self.length(told, 9) - 0.3 * self.dpi
-        name = self.fitted(f"Elevation: {words.dem_name}", 9, left_over)
-        self.write(self.right, y, name, 9, ha="right")
+        self.write(self.left, y, self.fitted(f"Elevation: {words.dem_name}", 9, room), 9)
         return y + 9 * pt
 
     def _band(
@@ -410,6 +402,8 @@ class MapBox:
             if len(found) > len(best):
                 best = found
         for x, y, text in best:
+            wide = page.length(text, 7.5) + 2 * pt
+            page.box(x - wide / 2, y - 4.5 * pt, wide, 9 * pt, fc=HALO, ec="none", zorder=4.9)
             page.write(x, y + 2.7 * pt, text, 7.5, ha="center", halo=2.4, zorder=5)
 
     def coordinates(self, crs_name: str) -> float:

@@ -74,12 +74,15 @@ class Terrain:
         Where that is known from: ``"option"``, ``"band"``, ``"crs"`` or ``"assumed metres"``.
     tiles : tuple of Tile
         What each file says.
+    stated : dict
+        What the caller stated of the files: ``crs`` and ``height_unit``, None where nothing.
     """
 
     grid: Grid
     height_factor: float
     height_unit_origin: str
     tiles: tuple[Tile, ...] = field(repr=False)
+    stated: dict[str, str | None] = field(default_factory=dict, repr=False)
 
     @property
     def paths(self) -> tuple[Path, ...]:
@@ -211,6 +214,7 @@ def open_terrain(
         height_factor=tiles[0].height_factor,
         height_unit_origin=tiles[0].height_unit_origin,
         tiles=tuple(tiles),
+        stated={"crs": crs, "height_unit": height_unit},
     )
 
 

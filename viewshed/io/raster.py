@@ -143,7 +143,7 @@ def write_cog(  # noqa: PLR0913 - path, cells, place, and what the file says of 
     InputError
         If a creation option is not one that may be set.
     """
-    chosen = _checked_options(creation_options or {})
+    chosen = checked_creation_options(creation_options or {})
     final = Path(path)
     if array.shape != grid.shape:
         msg = f"array of shape {array.shape} does not fit the grid of shape {grid.shape}"
@@ -221,26 +221,34 @@ def _write_draft(path: Path, array: NDArray[Any], grid: Grid, facts: _Facts) -> 
             file.write(np.ascontiguousarray(array[first : first + count]), 1, window=window)
 
 
-#: Options of the COG driver that a caller may set.
-CREATION_OPTIONS = (
-    "BIGTIFF",
-    "BLOCKSIZE",
-    "COMPRESS",
-    "LEVEL",
-    "NUM_THREADS",
-    "OVERVIEWS",
-    "OVERVIEW_COMPRESS",
-    "PREDICTOR",
-    "STATISTICS",
-)
+#: Options of the COG driver that a caller may set, and the values that leave cells as they are.
+CREATION_OPTIONS: dict[str, tuple[str, ...]] = {
+    "BIGTIFF": ("YES", "NO", "IF_NEEDED", "IF_SAFER"),
+    "BLOCKSIZE": ("128", "256", "512", "1024", "2048"),
+    "COMPRESS": ("NONE", "LZW", "DEFLATE", "ZSTD"),
+    "LEVEL": tuple(str(level) for level in range(1, 23)),
+    "PREDICTOR": ("YES", "NO"),
+}
 
 
-def _checked_options(options: Mapping[str, str]) -> dict[str, Any]:
-    for name in options:
-        if name.upper() not in CREATION_OPTIONS:
+def checked_creation_options(options: Mapping[str, str]) -> dict[str, str]:
+    """Check options of the COG driver.
+
+    Raises
+    ------
+    InputError
+        If a name or value is not one of `CREATION_OPTIONS`.
+    """
+    for name, value in options.items():
+        known = CREATION_OPTIONS.get(name.upper())
+        if known is None:
             msg = f"creation option {name!r} is unknown: choose from {', '.join(CREATION_OPTIONS)}"
             raise InputError(msg)
-    return {name.lower(): value for name, value in options.items()}
+        if value.upper() not in known:
+            span = f"{known[0]} to {known[-1]}" if len(known) > 6 else ", ".join(known)
+            msg = f"creation option {name}={value} is refused: choose from {span}"
+            raise InputError(msg)
+    return {name.lower(): value.upper() for name, value in options.items()}
 
 
 def _cog_options(overview: str, is_float: bool) -> dict[str, Any]:
