@@ -1249,6 +1249,8 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
     planes_prev = False
     void_prev = True
     stale = False
+    stale_floors = False
+    rest = 0
     top_prev = BIG
     first_prev = 0
     last_prev = 2
@@ -1348,12 +1350,20 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
         if not want_clearance and j > 2 and n_last - n_first >= 3 * BLOCKS and (
             rises or not hidden
         ):
-            h_lo, h_hi = loud_posts(
-                t, g, goal_g, pg, shift, n_prev, n_first, n_last, lo, u_line, geo[Y0], low, high,
-                floors, least, most,
-            )  # fmt: skip
-            hidden = hidden or h_lo > h_hi
-            rises = rises and h_lo <= h_hi
+            if rest > 0:
+                rest -= 1
+            else:
+                if stale_floors:
+                    block_floors(env, n_env, low, high, floors)
+                    stale_floors = False
+                h_lo, h_hi = loud_posts(
+                    t, g, goal_g, pg, shift, n_prev, n_first, n_last, lo, u_line, geo[Y0], low,
+                    high, floors, least, most,
+                )  # fmt: skip
+                hidden = hidden or h_lo > h_hi
+                rises = rises and h_lo <= h_hi
+                if h_lo <= n_first and h_hi >= n_last:
+                    rest = 3  # nothing is quiet here, nor likely on the next lines
         if rises or not hidden:
             survey_line(env, n_env, h_lo, h_hi - h_lo, t, low, high, at, least, most)
         r_lo = h_lo
@@ -1429,8 +1439,7 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
                 if stale and ((j & 3) == 0 or n_arcs > 2 * (n_last - n_first)):
                     n_arcs = drop_arcs(env, n_env, eps, arcs, n_arcs)
                     stale = False
-                if changed:
-                    block_floors(env, n_env, low, high, floors)
+                stale_floors = stale_floors or changed
                 n_arcs = add_strip_arcs(
                     ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, env,
                     n_env, arcs, n_arcs, cell, ts, gs,
