@@ -3,11 +3,9 @@
 from dataclasses import dataclass, replace
 
 import numpy as np
-from affine import Affine
-from pyproj import CRS
 
 from tests.reference.walker import Walker
-from viewshed.grid import Grid, PostMap
+from viewshed.grid import PostMap
 from viewshed.postmap import fit_post_map
 from viewshed.visibility import compute
 
@@ -118,17 +116,6 @@ def bent_map(row0, col0, bend=3e-4, degree=3, seed=0, cell=30.0):
                 coefficients[:, i, j] = rng.normal(size=2) * bend * plain.scale**2
     coefficients[0, 1, 0] = coefficients[1, 0, 1] = plain.scale
     return replace(plain, cp=coefficients[0], cq=coefficients[1])
-
-
-def grid_about(crs, centre, step, shape, turn=0.0):
-    """Grid about a place [CRS units], steps (x, y), turned by some degrees."""
-    transform = (
-        Affine.translation(*centre)
-        @ Affine.rotation(turn)
-        @ Affine.scale(*step)
-        @ Affine.translation(-shape[1] / 2, -shape[0] / 2)
-    )
-    return Grid(shape, transform, CRS.from_user_input(crs).to_wkt())
 
 
 def fitted_map(grid, row0, col0, size, range_m=60e3):

@@ -27,6 +27,7 @@ LAYERS = {
     "wedges": 4,
     "visibility": 4,
     "io": 5,
+    "result": 6,
     "api": 6,
     "cli": 7,
     "__init__": 8,

@@ -18,7 +18,7 @@ from typing import TYPE_CHECKING, Any
 from viewshed._version import __version__
 
 if TYPE_CHECKING:
-    from viewshed.api import MapResult, map_visibility
+    from viewshed.api import map_visibility
     from viewshed.atmosphere import Refraction, parse_refraction
     from viewshed.errors import (
         DataError,
@@ -31,6 +31,7 @@ if TYPE_CHECKING:
     from viewshed.grid import Grid
     from viewshed.io.elevation import Terrain, open_terrain
     from viewshed.places import Observer, Sector, Target
+    from viewshed.result import MapResult
 
 __all__ = [
     "DataError",
@@ -56,7 +57,7 @@ _HOME = {
     "DataError": "errors",
     "Grid": "grid",
     "InputError": "errors",
-    "MapResult": "api",
+    "MapResult": "result",
     "MemoryLimitError": "errors",
     "Observer": "places",
     "OutputError": "errors",

@@ -10,7 +10,8 @@ import rasterio
 from affine import Affine
 
 import viewshed
-from viewshed import api, geodesy
+from viewshed import geodesy
+from viewshed import result as result_module
 from viewshed.io.record import matching
 
 CELL = 30.0
@@ -313,9 +314,9 @@ def test_turned_and_south_up_grids_give_the_same_places(tmp_path, hills):
 
 
 def test_numbers_are_written_without_needless_digits():
-    assert api._number(410385.0) == "410385"
-    assert api._number(-84.2) == "-84.2"
-    assert api._number(0.0) == "0"
+    assert result_module.told_number(410385.0) == "410385"
+    assert result_module.told_number(-84.2) == "-84.2"
+    assert result_module.told_number(0.0) == "0"
 
 
 def test_nothing_warns_on_an_ordinary_run(terrain):

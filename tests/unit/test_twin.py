@@ -14,13 +14,13 @@ from tests.helpers import (
     fitted_map,
     flat,
     fractal,
-    grid_about,
     noise,
     saddle,
     steps,
     with_voids,
 )
 from tests.reference.walker import Walker
+from tests.unit.grids import make_grid
 from viewshed.places import Sector
 from viewshed.visibility import compute
 
@@ -386,13 +386,13 @@ def test_cells_that_are_not_square(jacobian, place):
 
 
 CURVED = {
-    "geographic at 65 N": grid_about("EPSG:4326", (10, 65), (1 / 1500, -1 / 3600), (4000, 4000)),
-    "geographic at 65 S": grid_about("EPSG:4326", (10, -65), (1 / 1500, -1 / 3600), (4000, 4000)),
-    "Mercator at 60 N": grid_about("EPSG:3395", (1e6, 8362698), (60, -60), (3000, 3000)),
-    "rotated, far from the axis": grid_about("EPSG:32633", (8e5, 7e6), (30, -30), (2000, 2000), 25),
-    "oblong Mercator": grid_about("EPSG:3395", (1e6, 8362698), (200, -60), (1200, 3000)),
-    "coarse geographic": grid_about("EPSG:4326", (10, 65), (1 / 45, -1 / 110), (91, 91), 20),
-    "coarse Mercator": grid_about("EPSG:3395", (1e6, 8362698), (4000, -4000), (61, 61)),
+    "geographic at 65 N": make_grid("EPSG:4326", (10, 65), (1 / 1500, -1 / 3600), (4000, 4000)),
+    "geographic at 65 S": make_grid("EPSG:4326", (10, -65), (1 / 1500, -1 / 3600), (4000, 4000)),
+    "Mercator at 60 N": make_grid("EPSG:3395", (1e6, 8362698), (60, -60), (3000, 3000)),
+    "rotated, far from the axis": make_grid("EPSG:32633", (8e5, 7e6), (30, -30), (2000, 2000), 25),
+    "oblong Mercator": make_grid("EPSG:3395", (1e6, 8362698), (200, -60), (1200, 3000)),
+    "coarse geographic": make_grid("EPSG:4326", (10, 65), (1 / 45, -1 / 110), (91, 91), 20),
+    "coarse Mercator": make_grid("EPSG:3395", (1e6, 8362698), (4000, -4000), (61, 61)),
 }
 
 
