@@ -130,7 +130,8 @@ def _sweep_piece(
     factor = 1
     while True:
         status = k.sweep(
-            scene.elevation,
+            scene.surface,
+            scene.surface if scene.ground is None else scene.ground,
             state,
             clearance,
             octant.ints,
@@ -208,6 +209,7 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     elevation: NDArray[np.float32],
     post_map: PostMap,
     *,
+    surface: NDArray[np.float32] | None = None,
     eye_height: float,
     target_height: float = 0.0,
     refraction_k: float = 0.13,
@@ -223,9 +225,12 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     Parameters
     ----------
     elevation : (rows, cols) float32
-        Elevation of the posts [m], NaN where void.
+        Elevation of the ground at the posts [m], NaN where void.
     post_map : PostMap
         True local coordinates of the posts; its origin is the observer.
+    surface : (rows, cols) float32, optional
+        What blocks sight [m], NaN where not known, while observer and targets stand on
+        `elevation`. None is the ground itself. It also blocks at the target's own post.
     eye_height : float
         Height of the eye above the ground under it [m].
     target_height : float
@@ -251,7 +256,8 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     Raises
     ------
     InputError
-        If the observer is outside the outermost posts, on or beside a void, or under ground.
+        If the observer is outside the outermost posts, on or beside a void, or under the ground or
+        the surface.
 
     Notes
     -----
@@ -281,12 +287,17 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
             "to the ground or above"
         )
         raise InputError(msg)
+    foot = ground
+    if surface is not None:
+        surface = np.require(surface, dtype=np.float32, requirements=["C", "W"])
+        foot = _surface_under(surface, elevation, post_map, ground + eye_height)
     scene = Scene(
-        elevation=elevation,
+        surface=elevation if surface is None else surface,
+        ground=None if surface is None else elevation,
         post_map=post_map,
         air=Air(post_map.radius_meridian, post_map.radius_prime_vertical, refraction_k),
-        ground=ground,
-        eye_height=eye_height,
+        foot=foot,
+        eye_over=eye_height if surface is None else ground + eye_height - foot,
         target_height=target_height,
         range_m=min(range_m, 1e9),
         sector=sector,
@@ -303,39 +314,86 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
 
     announce(k.sweep)
     for octant in axes:
-        k.axis(elevation, state, clear, octant.ints, octant.geo, octant.coef_u, octant.own)
+        k.axis(
+            scene.surface,
+            elevation,
+            state,
+            clear,
+            octant.ints,
+            octant.geo,
+            octant.coef_u,
+            octant.own,
+        )
     _run([sweep_task(piece) for piece in pieces], n_threads, progress)
-    _answer_own_place(scene, state, clear if want else None)
-    layers = _finish(state, clear, scene, clearance, needed_height) if want else (None, None)
-    return Visibility(state, *layers, eye_elevation=ground + eye_height)
+    _answer_own_place(scene, elevation, state, clear if want else None)
+    asked = (clearance, needed_height)
+    cleared, needed = (
+        _finish(state, clear, eye_height, target_height, asked) if want else (None, None)
+    )
+    return Visibility(state, cleared, needed, eye_elevation=ground + eye_height)
+
+
+def _surface_under(
+    surface: NDArray[np.float32],
+    elevation: NDArray[np.float32],
+    post_map: PostMap,
+    eye: float,
+) -> float:
+    """Surface under the observer; the eye must not be below it."""
+    if surface.shape != elevation.shape:
+        msg = f"surface of shape {surface.shape} does not fit the ground of {elevation.shape}"
+        raise InputError(msg)
+    try:
+        foot = ground_at(surface, post_map.row0, post_map.col0)
+    except InputError:
+        msg = (
+            "the surface is not known at the observer, so what stands before the eye is not "
+            "either: move the observer or fill the surface"
+        )
+        raise InputError(msg) from None
+    if eye < foot:
+        msg = (
+            f"the eye at {eye:.2f} m is {foot - eye:.2f} m below the surface at its place "
+            f"({foot:.2f} m): raise it or move the observer into the open"
+        )
+        raise InputError(msg)
+    return foot
 
 
 def _answer_own_place(
-    scene: Scene, state: NDArray[np.uint8], clear: NDArray[np.float32] | None
+    scene: Scene,
+    elevation: NDArray[np.float32],
+    state: NDArray[np.uint8],
+    clear: NDArray[np.float32] | None,
 ) -> None:
-    """See the cell whose centre is the observer's own place."""
+    """Answer the cell whose centre is the observer's own place: it looks straight down there."""
     row, col = scene.post_map.row0, scene.post_map.col0
-    if row == int(row) and col == int(col):
-        state[int(row), int(col)] = VISIBLE
-        if clear is not None:
-            clear[int(row), int(col)] = np.inf
+    if row != int(row) or col != int(col):
+        return
+    at = int(row), int(col)
+    top = float(elevation[at]) + scene.target_height
+    under = (top - scene.foot) * (1.0 - (top - scene.eye_over) * scene.air.inverse_radius)
+    hidden = scene.ground is not None and under < 0.0
+    state[at] = HIDDEN if hidden else VISIBLE
+    if clear is not None:
+        clear[at] = under if hidden else np.inf
 
 
 def _finish(
     state: NDArray[np.uint8],
     clear: NDArray[np.float32],
-    scene: Scene,
-    clearance: bool,
-    needed: bool,
+    eye_height: float,
+    target_height: float,
+    asked: tuple[bool, bool],
 ) -> tuple[NDArray[np.float32] | None, NDArray[np.float32] | None]:
     """Clearance and needed height, with a number also where nothing stands between.
 
     There the sight line has the full height of eye and target to spare. Strip by strip, so that
     nothing as large as the layer is made on the way.
     """
-    spare = np.float32(scene.eye_height + scene.target_height)
-    target = np.float32(scene.target_height)
-    height = np.empty_like(clear) if needed else None
+    spare = np.float32(eye_height + target_height)
+    target = np.float32(target_height)
+    height = np.empty_like(clear) if asked[1] else None
     for first in range(0, state.shape[0], 256):
         rows = slice(first, first + 256)
         part = clear[rows]
@@ -343,4 +401,4 @@ def _finish(
         part[(state[rows] != VISIBLE) & (state[rows] != HIDDEN)] = np.nan
         if height is not None:
             np.maximum(np.float32(0.0), target - part, out=height[rows])
-    return (clear if clearance else None), height
+    return (clear if asked[0] else None), height

@@ -82,13 +82,26 @@ class Octant:
 
 @dataclass(frozen=True)
 class Scene:
-    """Everything a run has in common."""
+    """Everything a run has in common.
 
-    elevation: NDArray[np.float32]
+    Attributes
+    ----------
+    surface : (rows, cols) float32
+        What blocks sight [m].
+    ground : (rows, cols) float32 or None
+        What targets stand on [m]; None where that is the surface.
+    foot : float
+        Surface under the observer [m].
+    eye_over : float
+        Height of the eye over it [m].
+    """
+
+    surface: NDArray[np.float32]
+    ground: NDArray[np.float32] | None
     post_map: PostMap
     air: Air
-    ground: float
-    eye_height: float
+    foot: float
+    eye_over: float
     target_height: float
     range_m: float
     sector: Sector | None
@@ -119,7 +132,7 @@ def _own_cell(
 ) -> tuple[NDArray[np.float64], bool]:
     """Corners of the observer's own cell in an octant, and the differences at the observer."""
     pm = scene.post_map
-    rows, cols = scene.elevation.shape
+    rows, cols = scene.surface.shape
     start = (pm.row0, pm.col0) if by_row else (pm.col0, pm.row0)
     x0, y0 = signs[0] * (base[0] - start[0]), signs[1] * (base[1] - start[1])
     f = np.full((2, 2), np.nan)
@@ -136,9 +149,9 @@ def _own_cell(
                 u[j, i], v[j, i] = x0 + j, y0 + i
             if 0 <= r < rows and 0 <= c < cols:
                 east, north = pm.jacobian @ (p, q)
-                rise = _rise_from_observer(scene.elevation, pm.row0, pm.col0, r, c)
-                curve = 1.0 - float(scene.elevation[r, c]) * scene.air.inverse_radius
-                f[j, i] = (rise - scene.eye_height) * curve - scene.air.drop(east, north)
+                rise = _rise_from_observer(scene.surface, pm.row0, pm.col0, r, c)
+                curve = 1.0 - float(scene.surface[r, c]) * scene.air.inverse_radius
+                f[j, i] = (rise - scene.eye_over) * curve - scene.air.drop(east, north)
     own = np.zeros(k.N_OWN)
     own[k.O_U : k.O_U + 4], own[k.O_V : k.O_V + 4] = u.ravel(), v.ravel()
     own[k.O_F : k.O_F + 4] = f.ravel()
@@ -155,7 +168,7 @@ def _own_cell(
 def _rise_from_observer(
     elevation: NDArray[np.float32], row: float, col: float, r: int, c: int
 ) -> float:
-    """Height of a corner post over the observer's ground [m], without cancelling.
+    """Height of a corner post over the surface under the observer [m], without cancelling.
 
     Written as a sum of differences between posts, each with its weight, so that it stays sharp
     when the observer is a billionth of a cell away from the post.
@@ -188,7 +201,7 @@ def _bilinear(
 def _octant(scene: Scene, by_row: bool, signs: tuple[int, int], clearance: bool) -> Octant:
     """Parameters of the octant whose main axis is rows or columns, with the signs of both axes."""
     pm = scene.post_map
-    rows, cols = scene.elevation.shape
+    rows, cols = scene.surface.shape
     start = (pm.row0, pm.col0) if by_row else (pm.col0, pm.row0)
     base = tuple(
         math.floor(s) if sign > 0 else math.ceil(s) for s, sign in zip(start, signs, strict=True)
@@ -206,7 +219,7 @@ def _octant(scene: Scene, by_row: bool, signs: tuple[int, int], clearance: bool)
     geo[k.X0], geo[k.Y0] = (s * (b - o) for s, b, o in zip(signs, base, start, strict=True))
     geo[k.SCALE] = pm.scale
     geo[k.INV_R] = scene.air.inverse_radius
-    geo[k.Z_EYE] = scene.ground + scene.eye_height
+    geo[k.Z_EYE] = scene.foot + scene.eye_over
     geo[k.TARGET] = scene.target_height
     geo[k.RANGE2] = scene.range_m**2 * (1.0 + 1e-12)
     geo[k.D20] = radii[0] * n[0] ** 2 + radii[1] * e[0] ** 2
@@ -225,6 +238,7 @@ def _octant(scene: Scene, by_row: bool, signs: tuple[int, int], clearance: bool)
     ints[k.DEGREE] = pm.cp.shape[0] - 1
     ints[k.OWN_KNOWN] = own_known
     ints[k.WANT_CLEARANCE] = clearance
+    ints[k.HAS_GROUND] = scene.ground is not None
     ints[k.OWN_DIAGONAL] = not by_row
     ints[k.MARGIN] = 3 + math.ceil(4.0 * _bend(pm, rows, cols))
     _bearing_fields(scene.sector, frame, ints, geo)
@@ -318,13 +332,13 @@ def wedge_count(scene: Scene) -> int:
     """Wedges an octant is cut into."""
     pm = scene.post_map
     step = min(np.hypot(*pm.jacobian[:, 0]), np.hypot(*pm.jacobian[:, 1]))
-    reach = min(scene.range_m / step, max(scene.elevation.shape))
+    reach = min(scene.range_m / step, max(scene.surface.shape))
     return int(max(_MIN_WEDGES, math.ceil(reach / _WEDGE_POSTS)))
 
 
 def wedges(scene: Scene, clearance: bool) -> tuple[list[Wedge], list[Octant]]:
     """Wedges to sweep and axes to walk. They depend on the scene alone, not on the threads."""
-    rows, cols = scene.elevation.shape
+    rows, cols = scene.surface.shape
     pm = scene.post_map
     count = wedge_count(scene)
     spare = _skew(pm, rows, cols)

@@ -256,3 +256,54 @@ def test_threads_give_the_same_bits_on_a_larger_grid():
     for other in layers[1:]:
         assert other.visible.tobytes() == layers[0].visible.tobytes()
         assert other.clearance.tobytes() == layers[0].clearance.tobytes()
+
+
+# --- a surface over the ground --------------------------------------------------------------------
+
+
+def grown_over(scene, seed, height):
+    """A surface over the ground, bare within a cell and a half of the observer."""
+    place = (scene.post_map.row0, scene.post_map.col0)
+    r, c = np.indices(scene.z.shape)
+    far = (np.abs(r - place[0]) > 1.5) | (np.abs(c - place[1]) > 1.5)
+    growth = np.random.default_rng(seed).random(scene.z.shape) * height * far
+    return (scene.z + growth).astype(np.float32)
+
+
+@common
+@given(scenes(), eyes, target_heights, st.integers(0, 999))
+def test_a_higher_surface_never_shows_more(scene, eye, target, seed):
+    low, high = (grown_over(scene, seed, height) for height in (3.0, 12.0))
+    more, less = (
+        answer(scene, eye=eye, target=target, surface=surface) for surface in (low, high)
+    )
+    known = (less.state <= 1) & (more.state <= 1)
+    assert np.all(more.clearance[known] >= less.clearance[known] - HAIR)
+    assert not ((less.state == 1) & (more.state == 0) & (less.clearance > HAIR)).any()
+
+
+@common
+@given(scenes(), eyes, target_heights, st.integers(0, 999))
+def test_a_surface_turns_with_the_grid(scene, eye, target, seed):
+    surface = grown_over(scene, seed, 8.0)
+    plain = answer(scene, eye=eye, target=target, surface=surface)
+    swapped = answer(
+        scene.transposed(), eye=eye, target=target, surface=np.ascontiguousarray(surface.T)
+    )
+    assert_alike(plain, Answer(swapped.state.T, swapped.clearance.T))
+
+
+@common
+@given(scenes(bent=False), eyes, st.integers(0, 999))
+def test_needed_height_is_the_target_that_is_just_seen(scene, eye, seed):
+    """Also over a surface: a target a hair taller than needed is seen, a hair lower is not."""
+    surface = grown_over(scene, seed, 8.0)
+    shared = {"eye_height": eye, "surface": surface, "threads": 1}
+    asked = compute(scene.z, scene.post_map, needed_height=True, **shared)
+    need = np.nan_to_num(asked.needed_height, nan=0.0)
+    hidden = (asked.visible == 0) & (need > 1.0)
+    for at in map(tuple, np.argwhere(hidden)[:3]):
+        height = float(need[at])
+        for change in (-0.05, 0.05):
+            got = compute(scene.z, scene.post_map, target_height=height + change, **shared)
+            assert (got.visible[at] == 0) == (change < 0)

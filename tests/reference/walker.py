@@ -16,10 +16,10 @@ class Walker:
     Parameters
     ----------
     z : (rows, cols) float32
-        Elevation, NaN where void.
+        Elevation of the ground, NaN where void.
     post_map : PostMap
         Post coordinates p, q (sight lines are straight in them) and the metres they stand for.
-    eye_height, target_height, k, range_m, sector
+    surface, eye_height, target_height, k, range_m, sector
         As for `viewshed.visibility.compute`.
     without : set of str
         Bulges left out, to show that they matter: "own" in the observer's cell, "last" in the
@@ -38,6 +38,7 @@ class Walker:
         z,
         post_map,
         *,
+        surface=None,
         eye_height,
         target_height=0.0,
         k=0.13,
@@ -46,7 +47,9 @@ class Walker:
         without=(),
     ):
         self.without = without
-        self.z = z.astype(np.float64)
+        self.foot = z.astype(np.float64)  # what targets stand on
+        self.own_surface = surface is not None
+        self.z = surface.astype(np.float64) if self.own_surface else self.foot  # what blocks
         self.row0, self.col0 = post_map.row0, post_map.col0
         self.target_height, self.range_m, self.sector = target_height, range_m, sector
         self.eye_height = eye_height
@@ -65,12 +68,16 @@ class Walker:
         shift_q = sum(w * self.q[at] for at, w in corners)
         if post_map.cp.shape[0] > 2:
             self.p, self.q = self.p - shift_p, self.q - shift_q
-        self.ground = sum(w * self.z[at] for at, w in corners)
-        self.eye = self.ground + eye_height
+        self.eye = sum(w * self.foot[at] for at, w in corners) + eye_height
+        self.eye_over = eye_height  # over the surface
+        if self.own_surface:
+            self.eye_over = self.eye - sum(w * self.z[at] for at, w in corners)
         self.f = self.flat_height(self.z)
         for at in self.own_posts():  # sharp differences near the observer
-            rise = sum(w * (self.z[at] - self.z[b]) for b, w in corners) - eye_height
+            rise = sum(w * (self.z[at] - self.z[b]) for b, w in corners) - self.eye_over
             self.f[at] = rise * (1 - self.z[at] / self.bent_radius()) - self.drop()[at]
+        # single numbers are taken from lists, where they are several times quicker to get
+        self.listed = self.p.tolist(), self.q.tolist(), self.f.tolist()
 
     def corner_weights(self):
         r0, c0 = math.floor(self.row0), math.floor(self.col0)
@@ -116,9 +123,9 @@ class Walker:
         east, north = self.metres()
         distance = np.hypot(east, north)
         bearing = np.degrees(np.arctan2(east, north))
-        target = self.flat_height(self.z + self.target_height)
+        target = self.flat_height(self.foot + self.target_height)
         for r, c in itertools.product(range(rows), range(cols)):
-            if np.isnan(self.z[r, c]) or distance[r, c] > self.range_m * (1 + 1e-12):
+            if np.isnan(self.foot[r, c]) or distance[r, c] > self.range_m * (1 + 1e-12):
                 continue
             horizon, unknown, length = -math.inf, False, 1.0
             if (r, c) != (self.row0, self.col0):  # the own place lies in every sector
@@ -126,6 +133,10 @@ class Walker:
                     continue
                 horizon, unknown, length = self.walk(r, c)
             clear = target[r, c] - horizon * length
+            if self.own_surface and not np.isnan(self.f[r, c]):
+                own_place = (r, c) == (self.row0, self.col0)
+                over = target[r, c] - self.f[r, c]  # the surface at the target's own post
+                clear = clear if own_place and over >= 0 else min(clear, over)
             if clear == math.inf:  # nothing stands between
                 clear = self.eye_height + self.target_height
             self.margin[r, c] = clear
@@ -144,7 +155,7 @@ class Walker:
         length = math.hypot(self.p[rt, ct], self.q[rt, ct])
         ray = (self.p[rt, ct] / length, self.q[rt, ct] / length)
         points = self.crossings(rt, ct, ray, length)
-        horizon, unknown = -math.inf, False
+        horizon, unknown = -math.inf, bool(np.isnan(self.f[rt, ct]))
         for distance, _, _, height, known in points:
             if known:
                 horizon = max(horizon, height / distance)
@@ -172,13 +183,14 @@ class Walker:
         r_hi = min(rows, max(rt, math.ceil(self.row0)) + 4)
         c_lo = max(0, min(ct, math.floor(self.col0)) - 3)
         c_hi = min(cols, max(ct, math.ceil(self.col0)) + 4)
-        p, q = self.p[r_lo:r_hi, c_lo:c_hi], self.q[r_lo:r_hi, c_lo:c_hi]
-        side = ray[0] * q - ray[1] * p  # of the ray that each post is on
+        around = np.s_[r_lo:r_hi, c_lo:c_hi]
+        side = ray[0] * self.q[around] - ray[1] * self.p[around]  # of the ray that each post is on
         straight = self.p[0, 0] == -self.col0 and self.q[0, 0] == -self.row0
         if straight:  # exact zeros for whole-number ratios
             dp, dq = self.p[rt, ct], self.q[rt, ct]
-            side = np.where(dp * q == dq * p, 0.0, side)
+            side = np.where(dp * self.q[around] == dq * self.p[around], 0.0, side)
         self.grazes[rt, ct] = np.any((side != 0) & (np.abs(side) < 1e-13 * max(1.0, length)))
+        p, q, f = self.listed
         found = {}
         on = np.argwhere(side == 0)
         for a, b in on:  # through a post
@@ -188,25 +200,25 @@ class Walker:
         for axis in (0, 1):
             first = side[:-1] if axis == 0 else side[:, :-1]
             second = side[1:] if axis == 0 else side[:, 1:]
-            for a, b in np.argwhere(first * second < 0):
+            for a, b in np.argwhere(first * second < 0).tolist():
                 r, c = r_lo + a, c_lo + b
                 r2, c2 = (r + 1, c) if axis == 0 else (r, c + 1)
                 if (rt, ct) in ((r, c), (r2, c2)):
                     continue  # an edge of the target is met at its end alone
                 if r <= self.row0 <= r2 and c <= self.col0 <= c2:
                     continue  # and one the observer stands on, where it stands
-                s0, s1 = first[a, b], second[a, b]
-                f0, f1 = self.f[r, c], self.f[r2, c2]
+                s0, s1 = float(first[a, b]), float(second[a, b])
+                f0, f1 = f[r][c], f[r2][c2]
                 height = (f0 * s1 - f1 * s0) / (s1 - s0)
                 # |A x B| / |s1 - s0| is the distance to the crossing of A B, sharp close by
-                spanned = self.p[r, c] * self.q[r2, c2] - self.p[r2, c2] * self.q[r, c]
+                spanned = p[r][c] * q[r2][c2] - p[r2][c2] * q[r][c]
                 distance = abs(spanned / (s1 - s0))
                 part = s0 / (s0 - s1)
                 where = (r + part, float(c)) if axis == 0 else (float(r), c + part)
                 x, y = self.place(*where)
                 if ray[0] * x + ray[1] * y < -1e-12:
                     continue  # behind the observer
-                found[where] = (height, not np.isnan(height), distance)
+                found[where] = (height, not math.isnan(height), distance)
         points = []
         for where, (height, known, distance) in found.items():
             between = 0 < distance < length * (1 - 1e-13)
@@ -229,8 +241,9 @@ class Walker:
         r, c = math.floor(row), math.floor(col)
         a, b = row - r, col - c
         r2, c2 = (r + 1 if a else r), (c + 1 if b else c)
-        x = self.p[r, c] + a * (self.p[r2, c] - self.p[r, c]) + b * (self.p[r, c2] - self.p[r, c])
-        y = self.q[r, c] + a * (self.q[r2, c] - self.q[r, c]) + b * (self.q[r, c2] - self.q[r, c])
+        p, q, _ = self.listed
+        x = p[r][c] + a * (p[r2][c] - p[r][c]) + b * (p[r][c2] - p[r][c])
+        y = q[r][c] + a * (q[r2][c] - q[r][c]) + b * (q[r][c2] - q[r][c])
         return x, y
 
     def own_cell(self, r0, c0):
@@ -312,20 +325,22 @@ class Walker:
             return -math.inf, not along_edge
         rows, cols = self.z.shape
         inside = 0 <= r < rows - 1 and 0 <= c < cols - 1
-        if not inside or np.isnan(self.f[r : r + 2, c : c + 2]).any():
+        f = self.listed[2]
+        box = (*f[r][c : c + 2], *f[r + 1][c : c + 2]) if inside else (math.nan,)
+        if any(map(math.isnan, box)):
             return -math.inf, True
         if start[0] == 0.0:
             return self.own_section(ray, r, c), False
         if not (known1 and known2):
             return -math.inf, False
-        return self.peak(start, end, self.f[r : r + 2, c : c + 2]), False
+        return self.peak(start, end, box), False
 
     @staticmethod
     def peak(start, end, box):
         """Greatest slope between two crossings, strictly inside their cell; -inf without one."""
         d1, r1, c1, f1, _ = start
         d2, r2, c2, f2, _ = end
-        twist = box[1, 1] - box[1, 0] - box[0, 1] + box[0, 0]
+        twist = box[3] - box[2] - box[1] + box[0]
         bulge = -twist * (r2 - r1) * (c2 - c1)  # f rises bulge * s * (1 - s) above its chord
         span = d2 - d1
         if bulge <= 0 or span <= 0:

@@ -17,7 +17,8 @@ The horizon of all lines passed is kept in three parts:
   the polyline and is evaluated exactly at the targets it may decide.
 * `gaps`: disjoint open intervals of t whose sight lines have met something unknown.
 
-All three are merged line by line, so a target costs the same wherever it stands.
+All three are merged line by line, so a target costs the same wherever it stands. Targets stand on
+the surface `z` itself or, with HAS_GROUND, on a ground of their own, under the surface or over it.
 """
 
 import numpy as np
@@ -36,8 +37,8 @@ MAIN_IS_ROW, SIGN_MAIN, SIGN_MINOR, BASE_MAIN, BASE_MINOR, LAST_LINE = 0, 1, 2, 
 DEGREE, OWN_KNOWN, WANT_CLEARANCE, OWN_DIAGONAL, OWN_AXIS, HAS_BEARINGS, WIDE_BEARINGS = (
     6, 7, 8, 9, 10, 11, 12,
 )  # fmt: skip
-MARGIN = 13
-N_INTS = 14
+MARGIN, HAS_GROUND = 13, 14
+N_INTS = 15
 # floats
 X0, Y0, SCALE, INV_R, Z_EYE, TARGET, RANGE2 = 0, 1, 2, 3, 4, 5, 6
 D20, D11, D02, G20, G11, G02, EPS = 7, 8, 9, 10, 11, 12, 13
@@ -925,6 +926,22 @@ def load_line(z, ints, geo, own, j, lo, n, poly, heights, line):
 
 
 @inline
+def stand_on_own_cell(z, ints, geo, f, heights, lo, n, goal):
+    """Work targets at the corners of the own cell from the sharp f of the surface there.
+
+    Else a target at the surface itself could lie a rounding error below it.
+    """
+    for i in range(2):
+        m = i - lo
+        if 0 <= m < n and f[m] == f[m]:
+            main = ints[BASE_MAIN] + ints[SIGN_MAIN]
+            minor = ints[BASE_MINOR] + ints[SIGN_MINOR] * i
+            h = np.float64(z[main, minor] if ints[MAIN_IS_ROW] != 0 else z[minor, main])
+            top = heights[m] + geo[TARGET]
+            goal[m] = f[m] + (top - h) * (1.0 - (top + h - geo[Z_EYE]) * geo[INV_R])
+
+
+@inline
 def open_first_strip(geo, own_known, before, lo_prev, n_prev, here, lo, n):
     """Set the directions of line 0 as seen ahead of the observer.
 
@@ -955,6 +972,7 @@ def answer(
     curved = ints[DEGREE] > 1
     own_known = ints[OWN_KNOWN] != 0
     want_clearance = ints[WANT_CLEARANCE] != 0
+    on_ground = ints[HAS_GROUND] != 0
     main_is_row = ints[MAIN_IS_ROW] != 0
     sign = ints[SIGN_MINOR]
     u_line = geo[X0] + j
@@ -963,9 +981,11 @@ def answer(
     # the questions, and what their own strip says
     for n in range(w_lo, w_hi + 1):
         wants[n] = 0.0
-        if not (f[n] == f[n] and (plain or asked(ints, geo, u[n], v[n]))):
+        if not (goal[n] == goal[n] and (plain or asked(ints, geo, u[n], v[n]))):
             continue
         wants[n] = 1.0
+        if on_ground and not want_clearance and f[n] > goal[n]:
+            continue
         if not want_clearance and goal[n] - at[n] * u[n] < 0.0:
             continue
         a = n - shift
@@ -975,9 +995,10 @@ def answer(
                 for m in range(-2, 3):
                     highest = max(highest, max(g[n + m], pg[a + m]))
             else:
-                if f[n] - f[n - 1] - pf[a] + pf[a - 1] >= -FLAT:
+                twist = f[n] - f[n - 1] - pf[a] + pf[a - 1]
+                if twist >= -FLAT:
                     continue  # the last cell is not concave along the sight line
-                if climbs(
+                if twist == twist and climbs(
                     pf[a - 1], pf[a], f[n - 1], f[n], pu[a], u[n], t[n], t[n]
                 ):
                     continue
@@ -1016,6 +1037,8 @@ def answer(
         r = main if main_is_row else k
         c = k if main_is_row else main
         clear = goal[n] - at[n] * u[n]
+        if on_ground and f[n] == f[n]:
+            clear = min(clear, goal[n] - f[n])  # the surface at the target's own post
         answer = 0
         if clear >= 0.0:
             answer = 1
@@ -1025,7 +1048,7 @@ def answer(
         if want_clearance:
             if answer == 2:
                 clearance[r, c] = np.nan
-            elif at[n] <= -BIG:
+            elif clear >= BIG:
                 clearance[r, c] = np.inf
             else:
                 clearance[r, c] = clear
@@ -1175,13 +1198,15 @@ def add_strip_arcs(
 
 
 @kernel
-def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
+def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
     """Answer every target of one wedge of an octant.
 
     Parameters
     ----------
     z : (rows, cols) float32
-        Elevation [m], NaN where void.
+        Elevation of the surface [m], NaN where void.
+    ground : (rows, cols) float32
+        What targets stand on if ints[HAS_GROUND], else unused.
     state : (rows, cols) uint8
         Written at the targets of this wedge.
     clearance : (rows, cols) float32
@@ -1207,6 +1232,7 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
     curved = degree > 1
     own_known = ints[OWN_KNOWN] != 0
     want_clearance = ints[WANT_CLEARANCE] != 0
+    on_ground = ints[HAS_GROUND] != 0
     main_is_row = ints[MAIN_IS_ROW] != 0
     sign = ints[SIGN_MINOR]
     eps = geo[EPS]
@@ -1335,10 +1361,14 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
         goal = f
         goal_g = g
         top_goal = top
-        if target != 0.0:
+        if target != 0.0 or on_ground:
             goal = post[5]
             goal_g = post[6]
+            if on_ground:
+                fetch(ground, main_is_row, main, minor, sign, heights, count)
             flatten(heights, target, geo, u, v, goal, count)
+            if on_ground and j == 1:
+                stand_on_own_cell(z, ints, geo, f, heights, lo, count, goal)
             for n in range(count):
                 goal_g[n] = goal[n] / u[n]
             top_goal = max(top, greatest(goal_g, w_lo, w_hi + 1))
@@ -1372,7 +1402,7 @@ def sweep(z, state, clearance, ints, geo, coef_u, coef_v, own, piece, work):
         for n in range(w_lo, w_hi + 1):
             if h_lo <= n <= h_hi:
                 continue
-            if f[n] == f[n] and (plain or asked(ints, geo, u[n], v[n])):
+            if goal[n] == goal[n] and (plain or asked(ints, geo, u[n], v[n])):
                 k = minor + sign * n
                 if main_is_row:
                     state[main, k] = 0
@@ -1471,13 +1501,14 @@ def has_edge(z, r, c):
 
 
 @kernel
-def axis(z, state, clearance, ints, geo, coef_u, own):
+def axis(z, ground, state, clearance, ints, geo, coef_u, own):
     """Answer the targets straight along the main axis, on the observer's own row or column.
 
     Only where the map leaves that row or column straight and the observer stands exactly on it:
     there the sight line runs along edges and meets posts alone. Parameters as for `sweep`.
     """
     main_is_row = ints[MAIN_IS_ROW]
+    on_ground = ints[HAS_GROUND] != 0
     minor = ints[BASE_MINOR]
     horizon = -BIG
     broken = False
@@ -1494,19 +1525,22 @@ def axis(z, state, clearance, ints, geo, coef_u, own):
         if geo[G20] * u * u > geo[RANGE2]:
             return
         height = np.float64(z[r, c])
-        if not (height == height):
-            broken = True
-            continue
+        foot = np.float64(ground[r, c]) if on_ground else height
+        known = height == height
+        broken = broken or not known
         drop = geo[D20] * u * u
+        f = (height - geo[Z_EYE]) * (1.0 - height * geo[INV_R]) - drop
         inside = True
         if ints[HAS_BEARINGS]:
             past_from = -geo[B_FROM_V] >= -1e-12
             before_to = geo[B_TO_V] >= -1e-12
             inside = (past_from or before_to) if ints[WIDE_BEARINGS] else past_from and before_to
-        if inside:
-            top = height + geo[TARGET]
+        if inside and foot == foot:
+            top = foot + geo[TARGET]
             ft = (top - geo[Z_EYE]) * (1.0 - top * geo[INV_R]) - drop
             clear = ft - horizon * u
+            if on_ground and known:
+                clear = min(clear, ft - f)  # the surface at the target's own post
             answer = 0
             if clear >= 0.0:
                 answer = 2 if broken else 1
@@ -1514,12 +1548,13 @@ def axis(z, state, clearance, ints, geo, coef_u, own):
             if ints[WANT_CLEARANCE]:
                 if answer == 2:
                     clearance[r, c] = np.nan
-                elif horizon <= -BIG:
+                elif clear >= BIG:
                     clearance[r, c] = np.inf
                 else:
                     clearance[r, c] = clear
+        if not known:
+            continue
         if j == 1:
             horizon = own[O_F0] / u + own[O_FA] * (own[O_X1] / u)
         elif has_edge(z, r, c):
-            f = (height - geo[Z_EYE]) * (1.0 - height * geo[INV_R]) - drop
             horizon = max(horizon, f / u)
