@@ -1,0 +1,209 @@
+"""The cells of one tile as metres, strip by strip."""
+
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from math import isinf, isnan
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from rasterio.windows import Window
+
+from viewshed.errors import DataError
+from viewshed.io import voids
+from viewshed.io._header import check_header, opened
+from viewshed.io.mosaic import Heights, Part, Tile
+
+#: Most cells of a strip that is read at a time.
+_STRIP_CELLS = 1 << 22
+#: Fewest cells of a block that a thread unpacks faster than it is handed the block.
+_WORTH_A_THREAD = 1 << 15
+
+
+@dataclass
+class Noticed:
+    """What was noticed while a part of a tile was read.
+
+    Attributes
+    ----------
+    is_known : bool
+        Whether any height in it is known.
+    undeclared : dict of float to int
+        Cells that hold a habitual void value which is not declared, by that value.
+    missing_blocks : int
+        Blocks that the file does not hold.
+    difference : float
+        Largest difference from the tiles before it where both are known [m], NaN where none is.
+    where : tuple of int
+        Row and column of the window where that is.
+    """
+
+    is_known: bool = False
+    undeclared: dict[float, int] = field(default_factory=dict)
+    missing_blocks: int = 0
+    difference: float = np.nan
+    where: tuple[int, int] = (0, 0)
+
+
+def fill(part: Part, window: Heights) -> Noticed:
+    """Fill the cells of a window that are not known yet from a tile.
+
+    Call it inside `reading_env`.
+
+    Parameters
+    ----------
+    part : Part
+        The tile and where it reaches into the window.
+    window : numpy.ndarray, float32
+        Heights of the window [m], NaN where they are not known yet; changed in place.
+
+    Returns
+    -------
+    Noticed
+        What was noticed.
+
+    Raises
+    ------
+    DataError
+        If the file is missing, truncated or damaged, has changed, or holds an infinite height.
+    """
+    notes = Noticed()
+    tile, row, col = part.tile, part.row, part.col
+    out = window[part.rows, part.cols]
+    with opened(tile.path, **_options(tile)) as file:
+        check_header(tile, file)
+        for first, count in _strips(tile, row, out.shape):
+            heights = _to_metres(tile, file, Window(col, first, out.shape[1], count), notes)
+            top = part.rows.start + first - row
+            _compare(part, window, heights, top, notes)
+            target = out[first - row : first - row + count]
+            if part.shared:
+                np.copyto(target, heights, where=np.isnan(target))
+            else:
+                target[...] = heights
+        notes.missing_blocks = _missing_blocks(tile, file, row, col, out.shape)
+    return notes
+
+
+def _options(tile: Tile) -> dict[str, str]:
+    """Give options for reading a file: handing a small block to a thread takes longer than it."""
+    is_worth_it = tile.is_compressed and tile.block[0] * tile.block[1] >= _WORTH_A_THREAD
+    return {} if is_worth_it or tile.driver != "GTiff" else {"NUM_THREADS": "1"}
+
+
+def height_at(part: Part, row: int, col: int) -> float:
+    """Give the height that a tile has for one cell of the window [m], NaN for a void."""
+    tile = part.tile
+    at_row, at_col = part.row + row - part.rows.start, part.col + col - part.cols.start
+    with opened(tile.path) as file:
+        return float(_to_metres(tile, file, Window(at_col, at_row, 1, 1), Noticed())[0, 0])
+
+
+def _compare(part: Part, window: Heights, heights: Heights, top: int, notes: Noticed) -> None:
+    """Note the largest difference between a strip and what earlier tiles gave for it."""
+    left = part.cols.start
+    for rows, cols in part.shared:
+        first, last = max(rows.start, top), min(rows.stop, top + len(heights))
+        if first >= last:
+            continue
+        own = heights[first - top : last - top, cols.start - left : cols.stop - left]
+        apart = np.abs(window[first:last, cols] - own)
+        largest = float(np.fmax.reduce(apart, axis=None))
+        if isnan(largest) or largest <= notes.difference:
+            continue
+        notes.difference = largest
+        r, c = np.unravel_index(int(np.nanargmax(apart)), apart.shape)
+        notes.where = (first + int(r), cols.start + int(c))
+
+
+def _missing_blocks(tile: Tile, file: Any, row: int, col: int, shape: tuple[int, ...]) -> int:
+    """Count blocks of a window that a GeoTIFF does not hold and that are not read as voids.
+
+    A file whose writer was killed opens cleanly and reads as zeros there.
+    """
+    if file.driver not in {"GTiff", "COG"} or tile.nodata is not None or tile.is_masked:
+        return 0
+    high, wide = tile.block
+    return sum(
+        file.get_tag_item(f"BLOCK_OFFSET_{x}_{y}", "TIFF", 1) is None
+        for y in range(row // high, (row + shape[0] - 1) // high + 1)
+        for x in range(col // wide, (col + shape[1] - 1) // wide + 1)
+    )
+
+
+def _strips(tile: Tile, row: int, shape: tuple[int, ...]) -> Iterator[tuple[int, int]]:
+    """Cut rows of a raster into strips of whole blocks: first row and number of rows."""
+    rows, cols = shape[0], shape[1]
+    block = tile.block[0]
+    step = max(1, _STRIP_CELLS // cols // block) * block
+    first, end = row, row + rows
+    while first < end:
+        stop = min(end, (first // step + 1) * step)
+        yield first, stop - first
+        first = stop
+
+
+def _to_metres(tile: Tile, file: Any, window: Window, notes: Noticed) -> Heights:
+    """Read a strip as metres, NaN for void."""
+    raw = file.read(1, window=window)
+    heights = _converted(tile, raw)
+    for void in _voids(tile, file, raw, window):
+        np.copyto(heights, np.float32(np.nan), where=void)
+    low, high = _bounds(heights)
+    if voids.may_hold_undeclared(tile, low, high):
+        for value, void in voids.undeclared(tile, raw, heights):
+            np.copyto(heights, np.float32(np.nan), where=void)
+            cells = int(np.count_nonzero(void))
+            notes.undeclared[value] = notes.undeclared.get(value, 0) + cells
+        low, high = _bounds(heights)
+    if isinf(low) or isinf(high):
+        r, c = (int(v[0]) for v in np.nonzero(np.isinf(heights)))
+        msg = (
+            f"{tile.path}: the height at row {r + window.row_off}, column {c + window.col_off} is "
+            "infinite; declare it as nodata or correct it"
+        )
+        raise DataError(msg)
+    notes.is_known |= not isnan(low)
+    return heights
+
+
+def _converted(tile: Tile, raw: NDArray[Any]) -> Heights:
+    with np.errstate(over="ignore", invalid="ignore"):
+        if (tile.scale, tile.offset, tile.height_factor) == (1.0, 0.0, 1.0):
+            return raw.astype(np.float32)
+        metres = raw.astype(np.float64)
+        metres *= tile.scale
+        metres += tile.offset
+        metres *= tile.height_factor
+        return metres.astype(np.float32)
+
+
+def _voids(
+    tile: Tile, file: Any, raw: NDArray[Any], window: Window
+) -> Iterator[NDArray[np.bool_]]:
+    """Give masks of the cells that the file says are void."""
+    declared = voids.declared(raw, tile.nodata)
+    if declared is not None:
+        yield declared
+    if tile.is_masked:
+        yield file.read_masks(1, window=window) == 0
+    if tile.pieces and tile.nodata is None and not tile.is_masked:
+        yield _between_pieces(tile, window)
+
+
+def _between_pieces(tile: Tile, window: Window) -> NDArray[np.bool_]:
+    """Tell which cells of a virtual raster no file fills: it reads them as zeros."""
+    empty = np.ones((window.height, window.width), dtype=np.bool_)
+    for piece in tile.pieces:
+        if piece.rows is None or piece.cols is None:
+            return np.zeros_like(empty)
+        rows = (max(0, edge - window.row_off) for edge in piece.rows)
+        cols = (max(0, edge - window.col_off) for edge in piece.cols)
+        empty[slice(*rows), slice(*cols)] = False
+    return empty
+
+
+def _bounds(heights: Heights) -> tuple[float, float]:
+    """Give the lowest and highest known height of a strip, NaN if none is known."""
+    low = float(np.fmin.reduce(heights, axis=None))
+    return low, float(np.fmax.reduce(heights, axis=None))
