@@ -18,11 +18,17 @@ from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike
-from pyproj import CRS, Geod, Transformer
+from pyproj import CRS, Geod, Transformer, proj_version_str
 from pyproj.exceptions import CRSError, ProjError
 
 from viewshed.errors import InputError
 from viewshed.grid import FloatArray, Grid
+
+
+def proj_version() -> str:
+    """Give the version of PROJ that carries coordinates from one CRS to another."""
+    return str(proj_version_str)
+
 
 # --- coordinate reference systems ---------------------------------------------------------------
 
@@ -128,6 +134,41 @@ def vertical_unit_factor(crs: CRS) -> float | None:
         msg = f"heights of CRS {crs.name!r} count downwards; convert them to count upwards"
         raise InputError(msg)
     return float(axes[0].unit_conversion_factor)
+
+
+def vertical_part(crs: CRS) -> CRS | None:
+    """Give the part of a CRS that says what its heights are counted from.
+
+    Parameters
+    ----------
+    crs : pyproj.CRS
+        Any CRS that `crs_from_user` lets pass.
+
+    Returns
+    -------
+    pyproj.CRS or None
+        The vertical CRS; the CRS itself where its third axis is the height above its ellipsoid;
+        None where it does not say.
+    """
+    if crs.is_bound and crs.source_crs is not None:
+        return vertical_part(crs.source_crs)
+    if crs.is_compound:
+        part = crs.sub_crs_list[1]
+        return part.source_crs if part.is_bound and part.source_crs is not None else part
+    return crs if len(crs.axis_info) == 3 else None
+
+
+def height_datum(crs: CRS) -> str | None:
+    """Name what the heights of a CRS are counted from, None where it does not say."""
+    part = vertical_part(crs)
+    if part is None:
+        return None
+    return str(part.name) if part.is_vertical else f"ellipsoid of {part.name}"
+
+
+def is_same_place(one: CRS, other: CRS) -> bool:
+    """Tell whether two CRSs give every place on the ground the same x and y."""
+    return bool(_horizontal(one).equals(_horizontal(other), ignore_axis_order=True))
 
 
 # --- from coordinates to geodesics --------------------------------------------------------------
@@ -288,6 +329,48 @@ def transform_point(x: float, y: float, from_crs: CRS, to_crs: CRS) -> tuple[flo
     return float(moved[0]), float(moved[1])
 
 
+def wgs84(crs: CRS, x: ArrayLike, y: ArrayLike) -> tuple[FloatArray, FloatArray]:
+    """Carry points to longitude and latitude on WGS 84, datum shift included.
+
+    Parameters
+    ----------
+    crs : pyproj.CRS
+        Projected or geographic; a vertical part plays no role.
+    x, y : array_like
+        Coordinates [CRS units]. Broadcast. A latitude past a pole counts as the pole.
+
+    Returns
+    -------
+    lon, lat : numpy.ndarray
+        Longitude and latitude [degrees].
+
+    Raises
+    ------
+    InputError
+        If a point has no place on WGS 84.
+    """
+    xs, ys = np.broadcast_arrays(np.asarray(x, np.float64), np.asarray(y, np.float64))
+    frame = frame_of(crs)
+    if frame.is_lonlat:
+        pole = 90.0 / frame.degrees_per_unit
+        ys = np.clip(ys, -pole, pole)
+    lon, lat = transform_points(xs, ys, crs, CRS.from_user_input("OGC:CRS84"))
+    if not (np.all(np.isfinite(lon)) and np.all(np.isfinite(lat))):
+        msg = f"part of the grid in {crs.name!r} has no place in longitude and latitude of WGS 84"
+        raise InputError(msg)
+    return lon, lat
+
+
+def authority_code(crs: CRS) -> str | None:
+    """Give the code under which an authority knows a CRS, like ``EPSG:32633``; None without one."""
+    found = crs.to_authority()
+    if found is None:
+        return None
+    code = ":".join(found)
+    same = CRS.from_user_input(code).equals(crs, ignore_axis_order=True)
+    return code if same else None
+
+
 def _keep_ties(crs: CRS) -> CRS:
     """Take the horizontal part but keep its tie to another datum."""
     return _keep_ties(crs.sub_crs_list[0]) if crs.is_compound else crs
@@ -397,3 +480,45 @@ def direct(
         End points [degrees], longitudes from -180 to 180.
     """
     return frame_of(crs).direct(lon, lat, bearing, distance)
+
+
+def transform_points(
+    x: ArrayLike, y: ArrayLike, from_crs: CRS, to_crs: CRS
+) -> tuple[FloatArray, FloatArray]:
+    """Carry many points from one CRS to another, datum shift included.
+
+    Parameters
+    ----------
+    x, y : array_like
+        Coordinates [units of `from_crs`]. Broadcast together.
+    from_crs, to_crs : pyproj.CRS
+        Where the points come from and go to; vertical parts play no role.
+
+    Returns
+    -------
+    x, y : numpy.ndarray
+        Coordinates [units of `to_crs`], infinite where a point has no place there.
+
+    Raises
+    ------
+    InputError
+        If no way leads from one CRS to the other.
+    """
+    xs, ys = np.broadcast_arrays(np.asarray(x, np.float64), np.asarray(y, np.float64))
+    try:
+        way = _way(_keep_ties(from_crs).to_wkt(), _keep_ties(to_crs).to_wkt())
+    except ProjError as error:
+        msg = f"no way leads from CRS {from_crs.name!r} to {to_crs.name!r}; warp one to the other"
+        raise InputError(msg) from error
+    right, up = way.transform(xs.ravel(), ys.ravel())
+    return np.reshape(right, xs.shape), np.reshape(up, xs.shape)
+
+
+@lru_cache(maxsize=8)
+def _way(from_wkt: str, to_wkt: str) -> Transformer:
+    return Transformer.from_crs(CRS.from_wkt(from_wkt), CRS.from_wkt(to_wkt), always_xy=True)
+
+
+def unit_name(crs: CRS) -> str:
+    """Give the name of the unit of x and y."""
+    return str(_horizontal(crs).axis_info[0].unit_name)

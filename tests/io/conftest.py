@@ -47,3 +47,18 @@ def make_dem(tmp_path):
         return path
 
     return make
+
+
+@pytest.fixture
+def tiles(make_dem, tmp_path):
+    """Folder of six tiles, 2 by 3, and their whole."""
+    whole = np.random.default_rng(1).random((40, 60)).astype(np.float32)
+    north_up = Affine(30, 0, 400_000, 0, -30, 6_000_000)
+    folder = tmp_path / "tiles"
+    folder.mkdir()
+    for r in (0, 20):
+        for c in (0, 20, 40):
+            part = whole[r : r + 20, c : c + 20]
+            place = north_up @ Affine.translation(c, r)
+            make_dem(f"tiles/{r:02d}-{c:02d}.tif", part, transform=place)
+    return folder, whole

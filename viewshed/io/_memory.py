@@ -1,7 +1,7 @@
 """How much memory there is, and the refusal of a run that needs more."""
 
 import os
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from math import isfinite, sqrt
 from pathlib import Path
 
@@ -16,6 +16,10 @@ except ImportError:  # pragma: no cover  (no such module on Windows)
 _NO_LIMIT = 1 << 60
 #: What is assumed where nothing tells [bytes].
 _FALLBACK = 2 << 30
+#: Bytes a cell of the layers that gather several observers.
+_GATHERED_BYTES = {"count": 2, "count-unresolved": 2, "who": 4}
+#: Memory of the page, the writers and the scratch arrays, beside the arrays of the window [bytes].
+_OVERHEAD = 500e6
 
 
 def available_memory(root: Path = Path("/")) -> int:
@@ -42,7 +46,48 @@ def available_memory(root: Path = Path("/")) -> int:
     return max(0, min(found, default=_FALLBACK))
 
 
-def check_memory(need_bytes: float, have_bytes: float, range_m: float) -> None:
+def run_bytes(
+    cells: float,
+    layers: Sequence[str] = ("visible",),
+    *,
+    own_cells: float | None = None,
+    surface: bool = False,
+    kept_cells: float = 0.0,
+) -> float:
+    """Say how much memory a map takes.
+
+    Parameters
+    ----------
+    cells : float
+        Cells of the window that all ranges reach.
+    layers : sequence of str, optional
+        Layers that are asked for.
+    own_cells : float, optional
+        Of several observers, the cells of the largest window of one.
+    surface : bool, optional
+        Whether a surface is read beside the ground.
+    kept_cells : float, optional
+        Cells of the answers of single observers that are kept.
+
+    Returns
+    -------
+    float
+        Memory [bytes]: that of the arrays of the window, and of the page, the writers and the
+        scratch arrays beside them.
+    """
+    heights = 8 if surface else 4
+    clear = 6 if {"clearance", "needed-height"} & set(layers) else 0
+    need = 4 if "needed-height" in layers else 0
+    gathered = sum(_GATHERED_BYTES.get(name, 0) for name in layers)
+    each = heights + 3 + clear + need
+    if own_cells is None:
+        return cells * (each + gathered) + _OVERHEAD
+    return cells * (each + gathered) + own_cells * each + kept_cells + _OVERHEAD
+
+
+def check_memory(
+    need_bytes: float, have_bytes: float, range_m: float, cure: str | None = None
+) -> None:
     """Refuse a run that does not fit in memory.
 
     Parameters
@@ -53,19 +98,22 @@ def check_memory(need_bytes: float, have_bytes: float, range_m: float) -> None:
         Memory that there is [bytes], as from `available_memory`.
     range_m : float
         Range of the run [m].
+    cure : str, optional
+        What to do instead of narrowing the range.
 
     Raises
     ------
     MemoryLimitError
-        If the need is greater; it names both and the range that would fit.
+        If the need is greater; it names both and the cure.
     """
     if need_bytes <= have_bytes:
         return
     fits = _round_down(range_m * sqrt(max(0.0, have_bytes) / need_bytes))
-    cure = f"a range of {_length(fits)} would fit" if fits > 0 else "free some memory"
+    if cure is None:
+        cure = f"a range of {_length(fits)} would fit" if fits > 0 else "free some memory"
     msg = (
-        f"range {_length(range_m)} needs {_size(need_bytes)} of memory and there are "
-        f"{_size(max(0.0, have_bytes))}; {cure}"
+        f"range {_length(range_m)} needs {told_size(need_bytes)} of memory and there are "
+        f"{told_size(max(0.0, have_bytes))}; {cure}"
     )
     raise MemoryLimitError(msg)
 
@@ -82,7 +130,8 @@ def _length(metres: float) -> str:
     return f"{metres / 1000.0:g} km" if metres >= 1000.0 else f"{metres:g} m"
 
 
-def _size(count: float) -> str:
+def told_size(count: float) -> str:
+    """Give a number of bytes in words."""
     if count < 1e6:
         return f"{count / 1e3:.3g} kB"
     return f"{count / 1e9:.3g} GB" if count >= 1e9 else f"{count / 1e6:.3g} MB"
