@@ -42,6 +42,8 @@ def _finite(value: float, what: str, cure: str) -> float:
 
 #: Heights beyond this are slips of the pen [m].
 _GREATEST_HEIGHT = 100_000.0
+#: Half way round the Earth, about [m].
+GREATEST_RANGE = 2e7
 
 
 def _height(value: float, what: str) -> float:
@@ -55,9 +57,19 @@ def _height(value: float, what: str) -> float:
     return number
 
 
+def _range(value: float) -> float:
+    number = _finite(value, "range", "give it in metres")
+    if not 0.0 < number <= GREATEST_RANGE:
+        msg = f"range {number:g} m: give a length above 0 and up to {GREATEST_RANGE / 1e3:g} km"
+        raise InputError(msg)
+    return number
+
+
 @dataclass(frozen=True)
 class Observer:
     """The point that sight lines start from.
+
+    Target height, range and sector are those of the run where the observer has none of its own.
 
     Parameters
     ----------
@@ -71,12 +83,18 @@ class Observer:
         Coordinate reference system of `x` and `y`; that of the DEM if none.
     eye_elevation : float, optional
         Elevation of the eye in the DEM's datum [m], instead of `eye_height`, which is then None.
+    target_height : float, optional
+        Height above the ground of what this observer looks at [m].
+    range_m : float, optional
+        Farthest ground distance this observer considers [m], above 0.
+    sector : Sector, optional
+        Bearings this observer looks over.
 
     Raises
     ------
     InputError
-        If a number is not finite, the height is negative, both heights are given, or the name is
-        empty.
+        If a number is not finite, a height is negative, both heights of the eye are given, the
+        range is not above 0 and up to 2e7 m, the sector is no `Sector`, or the name is empty.
     """
 
     x: float
@@ -85,15 +103,30 @@ class Observer:
     name: str = "observer"
     crs: str | None = None
     eye_elevation: float | None = None
+    target_height: float | None = None
+    range_m: float | None = None
+    sector: "Sector | None" = None
 
     def __post_init__(self) -> None:
-        """Check every value and settle the height of the eye."""
+        """Check every value."""
         for axis in ("x", "y"):
             value = _finite(getattr(self, axis), f"observer {axis}", "give the position as X,Y")
             object.__setattr__(self, axis, value)
         if not (isinstance(self.name, str) and self.name.strip()):
             msg = f"observer name {self.name!r} is empty; give it a word"
             raise InputError(msg)
+        if self.target_height is not None:
+            height = _height(self.target_height, "target height")
+            object.__setattr__(self, "target_height", height)
+        if self.range_m is not None:
+            object.__setattr__(self, "range_m", _range(self.range_m))
+        if not (self.sector is None or isinstance(self.sector, Sector)):
+            msg = f"sector {self.sector!r} is no sector; make it as Sector(from_deg, to_deg)"
+            raise InputError(msg)
+        self._settle_eye()
+
+    def _settle_eye(self) -> None:
+        """Check the height or elevation of the eye; 1.7 m above ground where neither is given."""
         if self.eye_elevation is None:
             given = DEFAULT_EYE_HEIGHT if self.eye_height is None else self.eye_height
             object.__setattr__(self, "eye_height", _height(given, "eye height"))
@@ -286,3 +319,48 @@ def parse_sector(text: str) -> Sector:
     20.0
     """
     return Sector(*_parse_pair(text, "sector", "give it as FROM,TO in degrees, like 350,10"))
+
+
+#: Square metres in each unit of area that a text can name.
+AREA_UNITS = {
+    "m2": 1.0,
+    "ha": 10_000.0,
+    "km2": 1_000_000.0,
+    "ft2": 0.3048**2,
+    "acre": 4046.8564224,
+}
+_AREA = re.compile(rf"\s*({_NUMBER})\s*([A-Za-z]+2?)?\s*")
+
+
+def parse_area(text: str) -> float:
+    """Read an area such as ``2ha``.
+
+    Parameters
+    ----------
+    text : str
+        A number and a unit: m2 (also when no unit is given), ha, km2, ft2 (of 0.3048 m), acre
+        (4046.8564224 m2).
+
+    Returns
+    -------
+    float
+        Area [m2], with its sign.
+
+    Raises
+    ------
+    InputError
+        If it is not a finite number with one of these units.
+
+    Examples
+    --------
+    >>> parse_area("2ha"), parse_area("900"), parse_area("0.5 km2")
+    (20000.0, 900.0, 500000.0)
+    """
+    match = _AREA.fullmatch(str(text))
+    factor = AREA_UNITS.get(match[2] or "m2") if match else None
+    square_metres = float(match[1]) * factor if match and factor else float("nan")
+    if not isfinite(square_metres):
+        units = ", ".join(AREA_UNITS)
+        msg = f"area {text!r} is not a number with a unit; give it like 2ha (units: {units})"
+        raise InputError(msg)
+    return square_metres

@@ -8,6 +8,7 @@ from viewshed.places import (
     Observer,
     Sector,
     Target,
+    parse_area,
     parse_length,
     parse_point,
     parse_sector,
@@ -26,6 +27,13 @@ def test_observer_with_an_elevation_has_no_height():
     assert observer.eye_elevation == -3.0
 
 
+def test_observer_takes_what_is_the_run_s_unless_told():
+    plain = Observer(1, 2)
+    assert (plain.target_height, plain.range_m, plain.sector) == (None, None, None)
+    own = Observer(1, 2, target_height=0, range_m="2e7", sector=Sector(350, 10))
+    assert (own.target_height, own.range_m, own.sector) == (0.0, 2e7, Sector(350, 10))
+
+
 @pytest.mark.parametrize(
     ("changes", "match"),
     [
@@ -37,6 +45,13 @@ def test_observer_with_an_elevation_has_no_height():
         ({"eye_elevation": float("nan")}, "eye elevation nan"),
         ({"eye_height": 1.7, "eye_elevation": 5.0}, "exclude each other"),
         ({"name": " "}, "name ' ' is empty"),
+        ({"target_height": -2.0}, "target height -2 m is below ground"),
+        ({"target_height": "tall"}, "target height 'tall' is not a finite number"),
+        ({"range_m": 0.0}, "range 0 m: give a length above 0"),
+        ({"range_m": -5.0}, "range -5 m: give a length above 0"),
+        ({"range_m": 2.1e7}, r"range 2.1e\+07 m: .* up to 20000 km"),
+        ({"range_m": float("nan")}, "range nan is not a finite number"),
+        ({"sector": (350, 10)}, r"sector \(350, 10\) is no sector"),
     ],
 )
 def test_unusable_observers_are_refused(changes, match):
@@ -133,3 +148,26 @@ def test_unusable_pairs_are_refused(text):
         parse_point(text)
     with pytest.raises(InputError, match="sector"):
         parse_sector(text)
+
+
+@pytest.mark.parametrize(
+    ("text", "square_metres"),
+    [
+        ("2ha", 20_000.0),
+        ("0.5 km2", 500_000.0),
+        ("900", 900.0),
+        (" 1e3 m2 ", 1000.0),
+        ("1acre", 4046.8564224),
+        ("43560ft2", 4046.8564224),
+        ("-1ha", -10_000.0),
+        (12, 12.0),
+    ],
+)
+def test_areas(text, square_metres):
+    assert parse_area(text) == pytest.approx(square_metres, rel=1e-14)
+
+
+@pytest.mark.parametrize("text", ["", "ha", "5 km", "5 HA", "nan", "1e999", "1,5ha", "2 h a"])
+def test_unusable_areas_are_refused(text):
+    with pytest.raises(InputError, match=r"area .* is not a number with a unit; .* like 2ha"):
+        parse_area(text)
