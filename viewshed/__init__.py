@@ -30,6 +30,10 @@ if TYPE_CHECKING:
     )
     from viewshed.grid import Grid
     from viewshed.io.elevation import Terrain, open_terrain
+    from viewshed.io.features import read_observers
+    from viewshed.io.polygons import Patches, polygonise
+    from viewshed.io.record import read_record
+    from viewshed.io.surface import Surface, open_surface
     from viewshed.places import Observer, Sector, Target
     from viewshed.result import MapResult
 
@@ -41,16 +45,22 @@ __all__ = [
     "MemoryLimitError",
     "Observer",
     "OutputError",
+    "Patches",
     "Refraction",
     "Sector",
+    "Surface",
     "Target",
     "Terrain",
     "ViewshedError",
     "ViewshedWarning",
     "__version__",
     "map_visibility",
+    "open_surface",
     "open_terrain",
     "parse_refraction",
+    "polygonise",
+    "read_observers",
+    "read_record",
 ]
 
 _HOME = {
@@ -61,15 +71,21 @@ _HOME = {
     "MemoryLimitError": "errors",
     "Observer": "places",
     "OutputError": "errors",
+    "Patches": "io.polygons",
     "Refraction": "atmosphere",
     "Sector": "places",
+    "Surface": "io.surface",
     "Target": "places",
     "Terrain": "io.elevation",
     "ViewshedError": "errors",
     "ViewshedWarning": "errors",
     "map_visibility": "api",
+    "open_surface": "io.surface",
     "open_terrain": "io.elevation",
     "parse_refraction": "atmosphere",
+    "polygonise": "io.polygons",
+    "read_observers": "io.features",
+    "read_record": "io.record",
 }
 
 

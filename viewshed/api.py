@@ -1,95 +1,433 @@
-"""From files to a result and back to files: what the command line and Python callers use.
+"""From files to a result: what the command line and Python callers use.
 
-A map is made in four steps: place the observer on the grid, read what the range reaches, compute
-(`viewshed.visibility`), and say in words and numbers what came out.
+A map is made in four steps: place the observers on the grid, read what their ranges reach,
+compute what each sees (`viewshed.visibility`), and put the answers together.
 """
 
 from __future__ import annotations
 
+import logging
 import math
 import warnings
+from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from viewshed import geodesy
+from viewshed.areas import cell_areas
 from viewshed.atmosphere import Refraction, parse_refraction
-from viewshed.constants import DEFAULT_RANGE, LAYERS, NODATA, SURVEY_K
+from viewshed.combine import Combination
+from viewshed.constants import DEFAULT_RANGE, LAYERS, NODATA, SURVEY_K, WHO_OBSERVERS
 from viewshed.errors import InputError, ViewshedWarning
-from viewshed.places import Observer, Sector, Target, parse_length
-from viewshed.postmap import fit_post_map, range_window
-from viewshed.result import MapResult, told_length, told_number
-from viewshed.visibility import compute, ground_at
+from viewshed.places import GREATEST_RANGE, Observer, Sector, Target, parse_length
+from viewshed.placing import Placed, Window, common_window, named, place, told
+from viewshed.postmap import fit_post_map
+from viewshed.result import Inputs, MapResult, Question, View
+from viewshed.tally import tally_up
+from viewshed.visibility import compute, ground_at, usable_threads
+from viewshed.wording import told_length, told_lengths, told_span
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Sequence
 
     from numpy.typing import NDArray
 
-    from viewshed.grid import Grid, PostMap
+    from viewshed.grid import PostMap
     from viewshed.io.elevation import Terrain
+    from viewshed.io.surface import Surface
     from viewshed.visibility import Visibility
+
+    Progress = Callable[[float, float], None]
 
 __all__ = ["MapResult", "map_visibility"]
 
 #: A target this tall [m] looked for by eyes this low [m] is a structure entered as a target.
 _TALL_TARGET, _LOW_EYE = 20.0, 3.0
-#: Memory of the page, the writers and the scratch arrays, beside the arrays of the window [bytes].
-_OVERHEAD = 500e6
-#: A position this near to a post is that post [cells].
-_SAME_POST = 1e-6
 #: Clearance is told up to here [m]: an obstacle a hair's breadth before the eye gives millions.
 _GREATEST_CLEARANCE = np.float32(10_000.0)
-#: Half way round the Earth, about [m].
-_GREATEST_RANGE = 2e7
+#: What a cell costs on one thread, about [s], and how long a run may take without being announced.
+_CELL_SECONDS, _LONG_RUN = 4e-8, 120.0
+
+_log = logging.getLogger("viewshed")
 
 
+def map_visibility(  # noqa: PLR0913 - one name for each thing a question is made of
+    terrain: Terrain,
+    observers: Observer | Sequence[Observer],
+    *,
+    target: Target | float = 0.0,
+    range_m: float | str = DEFAULT_RANGE,
+    refraction: Refraction | float | str = SURVEY_K,
+    sector: Sector | None = None,
+    layers: Sequence[str] | None = None,
+    each: bool = False,
+    surface: Surface | None = None,
+    threads: int | None = None,
+    progress: Progress | None = None,
+) -> MapResult:
+    """Map what observers see of a terrain.
 
-def _place(terrain: Terrain, observer: Observer) -> tuple[float, float, float, float]:
-    """Post coordinates (row, col) of the observer, and its x and y in the grid's CRS."""
-    grid = terrain.grid
-    x, y = observer.x, observer.y
-    if observer.crs is not None:
-        given, own = (geodesy.crs_from_user(crs) for crs in (observer.crs, grid.crs_wkt))
-        x, y = geodesy.transform_point(x, y, given, own)
-    row, col = geodesy.post_position(grid, x, y)
-    # positions and cell sizes are written in decimals: within their rounding a post is meant
-    row, col = (round(v) if abs(v - round(v)) < _SAME_POST else v for v in (row, col))
-    if 0 <= row <= grid.rows - 1 and 0 <= col <= grid.cols - 1:
-        return float(row), float(col), x, y
-    told = f"the observer {told_number(observer.x)},{told_number(observer.y)}"
-    if observer.crs is not None:
-        told += f" (here x {told_number(x)}, y {told_number(y)})"
-    if -0.5 <= row <= grid.rows - 0.5 and -0.5 <= col <= grid.cols - 0.5:
-        msg = (
-            f"{told} is in the rim of the elevation grid, less than half a cell from its edge, "
-            "where the ground is not known between cell centres: move it inward"
+    Parameters
+    ----------
+    terrain : Terrain
+        Elevation grid, from `viewshed.open_terrain`: what observers and targets stand on.
+    observers : Observer or sequence of Observer
+        Where the sight lines start. Target height, range and sector of an observer go before
+        those given here.
+    target : Target or float
+        What is looked at in each cell: height above ground [m].
+    range_m : float or str
+        Farthest ground distance considered [m], or a text such as ``"30km"``.
+    refraction : Refraction, float or str
+        The air: k, or a text such as ``"K=4/3"`` or ``"survey"``.
+    sector : Sector or None
+        Bearings looked over; None is all around.
+    layers : sequence of str, optional
+        Any of ``visible`` (always there), ``clearance``, ``needed-height``, ``count`` (how many
+        observers surely see a cell), ``count-unresolved`` and ``who`` (a bit for each observer, at
+        most 32). Default: ``visible``, and ``count`` where there are several observers.
+    each : bool
+        Whether what each observer sees is kept beside the common answer.
+    surface : Surface or None
+        What blocks sight, from `viewshed.open_surface`; None is the ground.
+    threads : int or None
+        Threads to use; None is one a processor. The answer is the same to the bit.
+    progress : callable or None
+        Called now and then with work done and work in all.
+
+    Returns
+    -------
+    MapResult
+        Arrays, grid and record; `MapResult.write` writes the files.
+
+    Raises
+    ------
+    InputError
+        If a value cannot be used: a range that is not positive, an observer outside the grid, on
+        a void, under ground or under the surface, an unknown layer.
+    DataError
+        If the elevation cannot be read, is void all over, or was replaced while it was read.
+    MemoryLimitError
+        If the window does not fit in memory; nothing was read then.
+
+    Examples
+    --------
+    >>> import viewshed
+    >>> terrain = viewshed.open_terrain("sample_dem/elevation.tif")
+    >>> result = viewshed.map_visibility(
+    ...     terrain, viewshed.Observer(410385, 6204255), range_m=2000, refraction="survey"
+    ... )
+    >>> result.counts["unresolved"], result.refraction.describe()
+    (0, 'k = 0.13 (K = 1.149)')
+    """
+    reach = parse_length(range_m) if isinstance(range_m, str) else float(range_m)
+    if not 0.0 < reach <= GREATEST_RANGE:
+        msg = f"range {reach:g} m: give a length above 0 and up to {told_length(GREATEST_RANGE)}"
+        raise InputError(msg)
+    given = named(observers)
+    question = Question(
+        target=target if isinstance(target, Target) else Target(float(target)),
+        range_m=reach,
+        sector=sector,
+        refraction=(
+            refraction if isinstance(refraction, Refraction) else parse_refraction(refraction)
+        ),
+        layers=_layers(layers, len(given)),
+        each=each,
+    )
+    placed = [
+        place(terrain.grid, one, target=question.target, range_m=reach, sector=sector)
+        for one in given
+    ]
+    window = common_window([one.window for one in placed])
+    _check_memory(window, placed, question, with_surface=surface is not None)
+    _say_cost(placed, usable_threads(threads))
+    heights, notes = _read(terrain, surface, window)
+    run = _Run(terrain, heights, window, question, placed)
+    run.look(threads, progress)
+    notes = [*_notes(placed, run.views), *notes]
+    for note in notes:
+        warnings.warn(note, ViewshedWarning, stacklevel=2)
+    for fingerprint in heights.fingerprints:
+        fingerprint.confirm()
+    if (run.arrays["visible"] == NODATA).all():
+        where = "" if all(one.sector is None for one in placed) else " and the sector"
+        reaches = told_lengths(one.range_m for one in placed)
+        msg = f"no known cell centre lies within the range of {reaches}{where}: widen it"
+        raise InputError(msg)
+    return run.result(terrain, surface, tuple(notes))
+
+
+@dataclass(frozen=True)
+class _Heights:
+    """What was read: arrays of the common window and what is to be told of them."""
+
+    ground: NDArray[np.float32]
+    surface: NDArray[np.float32] | None
+    median: float | None
+    fingerprints: tuple[Any, ...]
+    facts: dict[str, Any]
+
+
+class _Run:
+    """The arrays of one run, filled observer by observer."""
+
+    def __init__(
+        self,
+        terrain: Terrain,
+        heights: _Heights,
+        window: Window,
+        question: Question,
+        placed: list[Placed],
+    ) -> None:
+        self.grid = terrain.grid.window(*window)
+        self.heights = heights
+        self.window = window
+        self.question = question
+        self.placed = placed
+        self.areas = cell_areas(self.grid)
+        self.views: list[View] = []
+        self.kept: Window = (0, 0, 0, 0)
+        self.arrays: dict[str, NDArray[Any]] = {}
+
+    def look(self, threads: int | None, progress: Progress | None) -> None:
+        """Compute what each observer sees and gather it."""
+        single = len(self.placed) == 1 and not _needs_gathering(self.question.layers)
+        common = None if single else Combination(self.grid.shape, self.question.layers)
+        weights = [one.window[2] * one.window[3] for one in self.placed]
+        for n, one in enumerate(self.placed):
+            tell = _share_of(progress, sum(weights[:n]), weights[n], sum(weights))
+            seen, view, at = self._see(one, threads, tell)
+            self.views.append(view)
+            if common is None:
+                self.arrays = {
+                    "visible": seen.visible,
+                    **({} if seen.clearance is None else {"clearance": seen.clearance}),
+                    **({} if seen.needed_height is None else {"needed-height": seen.needed_height}),
+                }
+            else:
+                common.add(seen, *at)
+        if common is not None:
+            self.arrays = common.layers()
+        self.kept = common_window([view.window for view in self.views])
+
+    def _see(
+        self, one: Placed, threads: int | None, progress: Progress | None
+    ) -> tuple[Visibility, View, tuple[int, int]]:
+        """Compute for one observer; also where its window begins in the common one."""
+        row0, col0 = one.window[0] - self.window[0], one.window[1] - self.window[1]
+        rows, cols = one.window[2:]
+        part = np.s_[row0 : row0 + rows, col0 : col0 + cols]
+        ground = np.ascontiguousarray(self.heights.ground[part])
+        surface = self.heights.surface
+        layers = self.question.layers
+        at = (one.row - one.window[0], one.col - one.window[1])
+        foot = _ground_under(ground, at, one)
+        eye = _eye_height(one.observer, foot)
+        post_map = fit_post_map(self.grid.window(row0, col0, rows, cols), *at, range_m=one.range_m)
+        try:
+            seen = compute(
+                ground,
+                post_map,
+                surface=None if surface is None else np.ascontiguousarray(surface[part]),
+                eye_height=eye,
+                target_height=one.target_height,
+                refraction_k=self.question.refraction.k,
+                range_m=one.range_m,
+                sector=one.sector,
+                clearance="clearance" in layers,
+                needed_height="needed-height" in layers,
+                threads=threads,
+                progress=progress,
+            )
+        except InputError as error:
+            msg = f"{told(one.observer, one.x, one.y)}: {error}"
+            raise InputError(msg) from error
+        if seen.clearance is not None:
+            np.minimum(seen.clearance, _GREATEST_CLEARANCE, out=seen.clearance)
+        trimmed = _trim(post_map, (rows, cols), one.range_m)
+        areas = self.areas.window(row0, col0, rows, cols)
+        keep = self.question.each and len(self.placed) > 1
+        inner = np.s_[trimmed[0] : trimmed[0] + trimmed[2], trimmed[1] : trimmed[1] + trimmed[3]]
+        view = View(
+            placed=one,
+            ground=foot,
+            eye_height=eye,
+            post_map=post_map.moved(-row0, -col0),
+            window=(row0 + trimmed[0], col0 + trimmed[1], *trimmed[2:]),
+            tally=tally_up(seen.visible, post_map, areas, one.range_m).moved(-row0, -col0),
+            visible=np.ascontiguousarray(seen.visible[inner]) if keep else None,
         )
-    else:
-        left, bottom, right, top = (told_number(v) for v in grid.bounds)
-        msg = (
-            f"{told} is outside the elevation grid (x {left} to {right}, y {bottom} to {top}): "
-            "move it, add tiles, or say in which CRS it is given"
+        return seen, view, (row0, col0)
+
+    def result(
+        self, terrain: Terrain, surface: Surface | None, notes: tuple[str, ...]
+    ) -> MapResult:
+        """Cut everything to the rows and columns that hold cells within range."""
+        row0, col0, rows, cols = self.kept
+        part = np.s_[row0 : row0 + rows, col0 : col0 + cols]
+        return MapResult(
+            arrays={name: array[part] for name, array in self.arrays.items()},
+            elevation=self.heights.ground[part],
+            grid=self.grid.window(*self.kept),
+            areas=self.areas.window(*self.kept),
+            views=tuple(view.moved(row0, col0) for view in self.views),
+            asked=self.question,
+            inputs=Inputs(
+                terrain=terrain,
+                surface=surface,
+                median_over_ground=self.heights.median,
+                files=tuple(f.entries for f in self.heights.fingerprints),
+                heights=self.heights.facts,
+            ),
+            warnings=notes,
         )
-    raise InputError(msg)
+
+
+def _layers(layers: Sequence[str] | None, observers: int) -> tuple[str, ...]:
+    if layers is None:
+        return ("visible",) if observers == 1 else ("visible", "count")
+    unknown = [name for name in layers if name not in LAYERS]
+    if unknown:
+        msg = f"unknown layer {unknown[0]!r}: choose from {', '.join(LAYERS)}"
+        raise InputError(msg)
+    if "who" in layers and observers > WHO_OBSERVERS:
+        msg = (
+            f"layer 'who' has {WHO_OBSERVERS} bits and there are {observers} observers: ask for "
+            "'count', keep what each sees, or map fewer at a time"
+        )
+        raise InputError(msg)
+    return tuple(name for name in LAYERS if name in layers or name == "visible")
+
+
+def _needs_gathering(layers: tuple[str, ...]) -> bool:
+    return bool({"count", "count-unresolved", "who"} & set(layers))
+
+
+def _share_of(
+    progress: Progress | None, before: float, own: float, total: float
+) -> Progress | None:
+    """Turn the progress of one observer into that of the run."""
+    if progress is None:
+        return None
+    return lambda done, pieces: progress(before + own * done / pieces, total)
 
 
 def _check_memory(
-    window: tuple[int, int, int, int], layers: tuple[str, ...], range_m: float
+    window: Window, placed: list[Placed], question: Question, *, with_surface: bool
 ) -> None:
-    from viewshed.io._memory import available_memory, check_memory
+    """Refuse a run whose arrays do not fit in memory."""
+    from viewshed.io._memory import available_memory, check_memory, run_bytes
 
-    cells = window[2] * window[3]
-    each = 4 + 1 + 2
-    if len(layers) > 1:
-        each += 6
-    if "needed-height" in layers:
-        each += 4
-    check_memory(cells * each + _OVERHEAD, available_memory(), range_m)
+    cells = [float(one.window[2] * one.window[3]) for one in placed]
+    need = run_bytes(
+        float(window[2] * window[3]),
+        question.layers,
+        own_cells=max(cells) if len(placed) > 1 else None,
+        surface=with_surface,
+        kept_cells=sum(cells) if question.each and len(placed) > 1 else 0.0,
+    )
+    cure = None if len(placed) == 1 else "map fewer or nearer observers at a time"
+    check_memory(need, available_memory(), max(one.range_m for one in placed), cure)
 
 
-def _trim(post_map: PostMap, shape: tuple[int, int], range_m: float) -> tuple[slice, slice]:
-    """Rows and columns of the window that hold cells within range."""
+def _say_cost(placed: list[Placed], threads: int) -> None:
+    """Say before a long run what it will cost."""
+    cells = sum(float(one.window[2] * one.window[3]) for one in placed)
+    seconds = cells * _CELL_SECONDS / threads
+    if len(placed) > 1 and seconds > _LONG_RUN:
+        minutes = seconds / 60.0
+        time = f"{minutes:.0f} minutes" if minutes < 120 else f"{minutes / 60.0:.1f} hours"
+        _log.warning(
+            "%d observers look at %.3g cells in all: about %s; Ctrl-C stops it, nothing is left",
+            len(placed),
+            cells,
+            time,
+        )
+
+
+def _read(terrain: Terrain, surface: Surface | None, window: Window) -> tuple[_Heights, list[str]]:
+    """Read the common window; what the reader warns of becomes notes."""
+    fingerprints = [terrain.fingerprint(*window)]
+    if surface is not None:
+        fingerprints.append(surface.fingerprint(*window))
+    with warnings.catch_warnings(record=True) as caught:
+        warnings.simplefilter("always", ViewshedWarning)
+        reading = terrain.load(*window)
+        over, median = None, None
+        if surface is not None:
+            from viewshed.io.surface import compare
+
+            over = surface.read(*window)
+            median = compare(over, reading.elevation)
+    notes = [str(w.message) for w in caught if issubclass(w.category, ViewshedWarning)]
+    facts: dict[str, Any] = {
+        "voids_set": reading.voids_set,
+        "undeclared_voids": reading.undeclared_voids,
+    }
+    if reading.overlap is not None:
+        first, second, difference = reading.overlap
+        facts["overlap"] = {"first": first, "second": second, "difference_m": difference}
+    return _Heights(reading.elevation, over, median, tuple(fingerprints), facts), notes
+
+
+def _ground_under(
+    elevation: NDArray[np.float32], at: tuple[float, float], one: Placed
+) -> float:
+    try:
+        return ground_at(elevation, *at)
+    except InputError:
+        msg = (
+            f"{told(one.observer, one.x, one.y)} stands on or beside a void, so the ground under "
+            "it is not known: move it or fill the void"
+        )
+        raise InputError(msg) from None
+
+
+def _eye_height(observer: Observer, ground: float) -> float:
+    if observer.eye_elevation is None:
+        return float(observer.eye_height or 0.0)
+    height = observer.eye_elevation - ground
+    if height < 0.0:
+        who = "" if observer.name == "observer" else f" of {observer.name!r}"
+        msg = (
+            f"the eye{who} at {observer.eye_elevation:g} m is {-height:.2f} m below the ground "
+            f"under it ({ground:.2f} m): raise it"
+        )
+        raise InputError(msg)
+    return height
+
+
+def _notes(placed: list[Placed], views: list[View]) -> list[str]:
+    """Say what the user should know of the question itself."""
+    notes = []
+    past = [one for one in placed if one.past]
+    if past:
+        whose = "the range" if len(placed) == 1 else f"the range of {len(past)} observers"
+        if len(placed) == 1:
+            whose += f" of {told_length(past[0].range_m)}"
+        verb = "reaches" if len(placed) == 1 else "reach"
+        notes.append(
+            f"{whose} {verb} past the elevation grid; what lies beyond is not in the result"
+        )
+    tall = [
+        view
+        for view in views
+        if view.placed.target_height > _TALL_TARGET and view.eye_height < _LOW_EYE
+    ]
+    if tall:
+        targets = told_span(view.placed.target_height for view in tall)
+        eyes = told_span(round(view.eye_height, 2) for view in tall)
+        notes.append(
+            f"a target {targets} m tall seen from an eye at {eyes} m: this maps where such a thing "
+            "could be seen from here, not where one such thing is seen from; for the zone of "
+            "visibility of a structure make its top the observer"
+        )
+    return notes
+
+
+def _trim(post_map: PostMap, shape: tuple[int, int], range_m: float) -> Window:
+    """Find the part of a window that holds cells within range; the observer's cell stays in."""
     rows, cols = shape
 
     def reached(row: Any, col: Any) -> bool:
@@ -106,200 +444,6 @@ def _trim(post_map: PostMap, shape: tuple[int, int], range_m: float) -> tuple[sl
         left += 1
     while right > left and not reached(every_row, float(right)):
         right -= 1
-    return slice(top, bottom + 1), slice(left, right + 1)
-
-
-def _layers(layers: Sequence[str]) -> tuple[str, ...]:
-    unknown = [name for name in layers if name not in LAYERS]
-    if unknown:
-        msg = f"unknown layer {unknown[0]!r}: choose from {', '.join(LAYERS)}"
-        raise InputError(msg)
-    return tuple(name for name in LAYERS if name in layers or name == "visible")
-
-
-def _ground_under(
-    elevation: NDArray[np.float32], at: tuple[float, float], place: tuple[float, float]
-) -> float:
-    try:
-        return ground_at(elevation, *at)
-    except InputError:
-        msg = (
-            f"the observer {told_number(place[0])},{told_number(place[1])} stands on or beside a "
-            "void, so the ground under it is not known: move it or fill the void"
-        )
-        raise InputError(msg) from None
-
-
-def _eye_height(observer: Observer, ground: float) -> float:
-    if observer.eye_elevation is None:
-        return float(observer.eye_height or 0.0)
-    height = observer.eye_elevation - ground
-    if height < 0.0:
-        msg = (
-            f"the eye at {observer.eye_elevation:g} m is {-height:.2f} m below the ground under it "
-            f"({ground:.2f} m): raise it"
-        )
-        raise InputError(msg)
-    return height
-
-
-def map_visibility(  # noqa: PLR0913 - one name for each thing a question is made of
-    terrain: Terrain,
-    observer: Observer,
-    *,
-    target: Target | float = 0.0,
-    range_m: float | str = DEFAULT_RANGE,
-    refraction: Refraction | float | str = SURVEY_K,
-    sector: Sector | None = None,
-    layers: Sequence[str] = ("visible",),
-    threads: int | None = None,
-    progress: Callable[[int, int], None] | None = None,
-) -> MapResult:
-    """Map what one observer sees of a terrain.
-
-    Parameters
-    ----------
-    terrain : Terrain
-        Elevation grid, from `viewshed.open_terrain`.
-    observer : Observer
-        Where the sight lines start.
-    target : Target or float
-        What is looked at in each cell: height above ground [m].
-    range_m : float or str
-        Farthest ground distance considered [m], or a text such as ``"30km"``.
-    refraction : Refraction, float or str
-        The air: k, or a text such as ``"K=4/3"`` or ``"survey"``.
-    sector : Sector or None
-        Bearings looked over; None is all around.
-    layers : sequence of str
-        Any of ``visible`` (always there), ``clearance`` and ``needed-height``.
-    threads : int or None
-        Threads to use; None is one a processor. The answer is the same to the bit.
-    progress : callable or None
-        Called now and then with pieces of work done and in all.
-
-    Returns
-    -------
-    MapResult
-        Arrays, grid and record; `MapResult.write` writes the files.
-
-    Raises
-    ------
-    InputError
-        If a value cannot be used: a range that is not positive, an observer outside the grid, on
-        a void or under ground, an unknown layer.
-    DataError
-        If the elevation cannot be read or is void all over.
-    MemoryLimitError
-        If the window does not fit in memory; nothing was read then.
-
-    Examples
-    --------
-    >>> import viewshed
-    >>> terrain = viewshed.open_terrain("sample_dem/elevation.tif")
-    >>> result = viewshed.map_visibility(
-    ...     terrain, viewshed.Observer(410385, 6204255), range_m=2000, refraction="survey"
-    ... )
-    >>> result.counts["unresolved"], result.refraction.describe()
-    (0, 'k = 0.13 (K = 1.149)')
-    """
-    range_m = parse_length(range_m) if isinstance(range_m, str) else float(range_m)
-    if not 0.0 < range_m <= _GREATEST_RANGE:
-        msg = f"range {range_m:g} m: give a length above 0 and up to {told_length(_GREATEST_RANGE)}"
-        raise InputError(msg)
-    wanted = _layers(layers)
-    goal = target if isinstance(target, Target) else Target(float(target))
-    air = refraction if isinstance(refraction, Refraction) else parse_refraction(refraction)
-    row, col, x, y = _place(terrain, observer)
-    notes: list[str] = []
-    window, past = range_window(terrain.grid, row, col, range_m)
-    if past:
-        notes.append(
-            f"the range of {told_length(range_m)} reaches past the elevation grid; what lies "
-            "beyond is not in the result"
-        )
-    _check_memory(window, wanted, range_m)
-    with warnings.catch_warnings(record=True) as caught:
-        warnings.simplefilter("always", ViewshedWarning)
-        elevation = terrain.read(*window)
-    notes += [str(w.message) for w in caught if issubclass(w.category, ViewshedWarning)]
-    at = (row - window[0], col - window[1])
-    eye_height = _eye_height(observer, _ground_under(elevation, at, (x, y)))
-    if goal.height > _TALL_TARGET and eye_height < _LOW_EYE:
-        notes.append(
-            f"a target {goal.height:g} m tall seen from an eye at {eye_height:g} m: this maps "
-            "where such a thing could be seen from here, not where one such thing is seen from; "
-            "for the zone of visibility of a structure make its top the observer"
-        )
-    for note in notes:
-        warnings.warn(note, ViewshedWarning, stacklevel=2)
-    grid = terrain.grid.window(*window)
-    post_map = fit_post_map(grid, *at, range_m=range_m)
-    seen = compute(
-        elevation,
-        post_map,
-        eye_height=eye_height,
-        target_height=goal.height,
-        refraction_k=air.k,
-        range_m=range_m,
-        sector=sector,
-        clearance="clearance" in wanted,
-        needed_height="needed-height" in wanted,
-        threads=threads,
-        progress=progress,
-    )
-    if seen.clearance is not None:
-        np.minimum(seen.clearance, _GREATEST_CLEARANCE, out=seen.clearance)
-    if (seen.visible == NODATA).all():
-        where = "" if sector is None else " and the sector"
-        reach = f"{told_length(range_m)}{where}"
-        msg = f"no known cell centre lies within the range of {reach}: widen it"
-        raise InputError(msg)
-    return _cropped(
-        seen,
-        elevation,
-        grid,
-        post_map,
-        {
-            "terrain": terrain,
-            "observer": observer,
-            "position": (x, y),
-            "eye_height": eye_height,
-            "target": goal,
-            "range_m": range_m,
-            "refraction": air,
-            "sector": sector,
-            "layers": wanted,
-            "warnings": tuple(notes),
-        },
-    )
-
-
-def _cropped(
-    seen: Visibility,
-    elevation: NDArray[np.float32],
-    grid: Grid,
-    post_map: PostMap,
-    facts: dict[str, Any],
-) -> MapResult:
-    """Cut the result to the rows and columns that hold cells within range."""
-    rows, cols = _trim(post_map, elevation.shape, facts["range_m"])
-    # the observer's cell stays in, so that the ground under it stays known
-    r0, c0 = post_map.row0, post_map.col0
-    rows = slice(min(rows.start, math.floor(r0)), max(rows.stop, math.ceil(r0) + 1))
-    cols = slice(min(cols.start, math.floor(c0)), max(cols.stop, math.ceil(c0) + 1))
-
-    def cut(array: NDArray[Any] | None) -> Any:
-        return None if array is None else array[rows, cols]
-
-    return MapResult(
-        visible=cut(seen.visible),
-        clearance=cut(seen.clearance),
-        needed_height=cut(seen.needed_height),
-        elevation=cut(elevation),
-        grid=grid.window(
-            rows.start, cols.start, rows.stop - rows.start, cols.stop - cols.start
-        ),
-        post_map=post_map.moved(rows.start, cols.start),
-        **facts,
-    )
+    top, bottom = min(top, math.floor(post_map.row0)), max(bottom, math.ceil(post_map.row0))
+    left, right = min(left, math.floor(post_map.col0)), max(right, math.ceil(post_map.col0))
+    return top, left, bottom + 1 - top, right + 1 - left

@@ -19,7 +19,11 @@ UNRESOLVED = 2
 NODATA = 255
 
 #: Layers a map can have; the file of a layer is its name with the hyphen as an underscore.
-LAYERS = ("visible", "clearance", "needed-height")
+LAYERS = ("visible", "clearance", "needed-height", "count", "count-unresolved", "who")
+#: No data in the layers `count` and `count-unresolved`.
+COUNT_NODATA = 65535
+#: Most observers of one map, and most that the bits of the layer `who` can tell apart.
+MOST_OBSERVERS, WHO_OBSERVERS = COUNT_NODATA - 1, 32
 
 #: Cautions that go with every result.
 CAUTIONS = (

@@ -294,6 +294,14 @@ class CellAreas:
         """Rows and columns of the grid."""
         return self.row_factors.shape[0], self.col_factors.shape[1]
 
+    def window(self, row_off: int, col_off: int, rows: int, cols: int) -> "CellAreas":
+        """Give the same areas for a window of the grid."""
+        return CellAreas(
+            self.row_factors[row_off : row_off + rows],
+            self.col_factors[:, col_off : col_off + cols],
+            self.error,
+        )
+
     def at(self, rows: ArrayLike, cols: ArrayLike) -> FloatArray:
         """Give the areas of single cells.
 

@@ -22,7 +22,7 @@ from viewshed.grid import FloatArray, Grid, PostMap
 
 _MAX_DEGREE = 10
 _WANTED_ERROR = 0.001  # [cells]
-_ALLOWED_ERROR = 0.01  # [cells]
+ALLOWED_ERROR = 0.01  # [cells]
 _FIT_NODES = 24
 _CHECK_NODES = 41
 _WINDOW_MARGIN = 2
@@ -157,7 +157,14 @@ class _Exact(NamedTuple):
         return self.frame.lonlat(*self.grid.xy(y + self.row0, x + self.col0))
 
 
-def fit_post_map(grid: Grid, row0: float, col0: float, *, range_m: float) -> PostMap:
+def fit_post_map(
+    grid: Grid,
+    row0: float,
+    col0: float,
+    *,
+    range_m: float,
+    allowed_cells: float = ALLOWED_ERROR,
+) -> PostMap:
     """Fit the map from posts to true local coordinates about an observer.
 
     Exact geodesics [1]_ on a lattice are fitted by polynomials of the least total degree, 1 to 10,
@@ -172,6 +179,8 @@ def fit_post_map(grid: Grid, row0: float, col0: float, *, range_m: float) -> Pos
     range_m : float
         Farthest geodesic distance [m]. The map holds for the posts of
         ``range_window(grid, row0, col0, range_m)`` and means nothing beyond them.
+    allowed_cells : float
+        Largest error accepted [cells]; only a drawing can bear more than the default.
 
     Returns
     -------
@@ -211,20 +220,20 @@ def fit_post_map(grid: Grid, row0: float, col0: float, *, range_m: float) -> Pos
             best = replace(found, error_m=error, error_cells=error / side)
         if error <= _WANTED_ERROR * side:
             break
-    return _accepted(best, range_m)
+    return _accepted(best, range_m, allowed_cells)
 
 
-def _accepted(found: PostMap | None, range_m: float) -> PostMap:
+def _accepted(found: PostMap | None, range_m: float, allowed: float) -> PostMap:
     """Pass a map that is good enough; else say what range would be."""
-    if found is not None and found.error_cells <= _ALLOWED_ERROR:
+    if found is not None and found.error_cells <= allowed:
         return found
     if found is None or not np.isfinite(found.error_cells):
         msg = f"the places of posts within {range_m:g} m cannot be told; give a smaller range"
         raise InputError(msg)
-    cure = 0.8 * range_m * (_ALLOWED_ERROR / found.error_cells) ** (1.0 / (_MAX_DEGREE + 1))
+    cure = 0.8 * range_m * (ALLOWED_ERROR / found.error_cells) ** (1.0 / (_MAX_DEGREE + 1))
     msg = (
         f"the places of posts within {range_m / 1000:g} km are only known to "
-        f"{found.error_cells:.2g} of a cell ({found.error_m:.2g} m), not to {_ALLOWED_ERROR:g}; "
+        f"{found.error_cells:.2g} of a cell ({found.error_m:.2g} m), not to {ALLOWED_ERROR:g}; "
         f"give a range of {cure / 1000:.2g} km"
     )
     raise InputError(msg)

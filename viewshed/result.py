@@ -1,99 +1,260 @@
-"""What one observer sees of a terrain, in arrays, words and files."""
+"""What observers see of a terrain, in arrays and in words."""
 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
-from pathlib import Path
+from pathlib import PurePath
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from viewshed import geodesy
-from viewshed._version import __version__
-from viewshed.areas import cell_areas
 from viewshed.constants import HIDDEN, NODATA, UNRESOLVED, VISIBLE
-from viewshed.errors import OutputError
-from viewshed.visibility import ground_at
+from viewshed.wording import (
+    told_area,
+    told_distance,
+    told_lengths,
+    told_number,
+    told_span,
+)
 
 if TYPE_CHECKING:
     import os
-    from collections.abc import Mapping, Sequence
+    from collections.abc import Mapping
+    from pathlib import Path
 
     from numpy.typing import NDArray
 
     from viewshed.atmosphere import Refraction
-    from viewshed.grid import Grid, PostMap
+    from viewshed.grid import CellAreas, Grid, PostMap
     from viewshed.io.elevation import Terrain
+    from viewshed.io.polygons import Patches
+    from viewshed.io.surface import Surface
     from viewshed.places import Observer, Sector, Target
+    from viewshed.placing import Placed, Window
+    from viewshed.tally import Tally
 
-__all__ = ["MapResult", "told_length", "told_number"]
+__all__ = ["Inputs", "MapResult", "Question", "View"]
 
-_BANDS = {
-    "visible": ("visible (1), hidden (0), unresolved (2)", "", NODATA),
-    "clearance": ("height of the target above the line of its horizon", "m", math.nan),
-    "needed-height": ("least height above ground at which something is seen", "m", math.nan),
-}
+_STATES = {"visible": VISIBLE, "hidden": HIDDEN, "unresolved": UNRESOLVED, "nodata": NODATA}
+
+
+@dataclass(frozen=True)
+class Question:
+    """What a run asks.
+
+    Attributes
+    ----------
+    target, range_m, sector
+        For observers that have none of their own.
+    refraction : Refraction
+        The air.
+    layers : tuple of str
+        Layers to answer with.
+    each : bool
+        Whether what each observer sees is kept.
+    """
+
+    target: Target
+    range_m: float
+    sector: Sector | None
+    refraction: Refraction
+    layers: tuple[str, ...]
+    each: bool = False
+
+
+@dataclass(frozen=True)
+class Inputs:
+    """What a result was made from.
+
+    Attributes
+    ----------
+    terrain : Terrain
+        The elevation grid.
+    surface : Surface or None
+        What blocks sight; None is the ground.
+    median_over_ground : float or None
+        Median of surface minus ground [m].
+    files : tuple of list of dict
+        Path, size and SHA-256 of every file read: of the terrain, then of the surface.
+    heights : dict
+        What became of voids and overlapping tiles.
+    """
+
+    terrain: Terrain
+    surface: Surface | None
+    median_over_ground: float | None
+    files: tuple[list[dict[str, Any]], ...]
+    heights: dict[str, Any]
+
+
+@dataclass(frozen=True)
+class View:
+    """What one observer sees.
+
+    Attributes
+    ----------
+    placed : Placed
+        The observer on the grid, with what it asks.
+    ground, eye_height : float
+        Ground under it [m] and height of its eye above that [m].
+    post_map : PostMap
+        True local coordinates of the posts of the result's grid.
+    window : tuple of int
+        First row and column, rows and columns of its range in the result's grid.
+    tally : Tally
+        Sums by state and distance.
+    visible : numpy.ndarray or None
+        Its own `visible` layer in `window`, where that is kept.
+    """
+
+    placed: Placed
+    ground: float
+    eye_height: float
+    post_map: PostMap
+    window: Window
+    tally: Tally
+    visible: NDArray[np.uint8] | None = field(default=None, repr=False)
+
+    @property
+    def observer(self) -> Observer:
+        """The observer, as it was given."""
+        return self.placed.observer
+
+    @property
+    def position(self) -> tuple[float, float]:
+        """Place of the observer [CRS units of the grid]."""
+        return self.placed.x, self.placed.y
+
+    @property
+    def covered(self) -> float:
+        """Share of range and sector that lies on known ground, so that it has an answer."""
+        sector = self.placed.sector
+        width = 360.0 if sector is None else sector.width_deg
+        asked = math.pi * self.placed.range_m**2 * width / 360.0
+        return min(1.0, sum(self.tally.areas_m2.values()) / asked)
+
+    def moved(self, row_off: int, col_off: int) -> View:
+        """Give the same view for a grid that begins at another post."""
+        row, col = self.window[:2]
+        return replace(
+            self,
+            post_map=self.post_map.moved(row_off, col_off),
+            window=(row - row_off, col - col_off, *self.window[2:]),
+            tally=self.tally.moved(row_off, col_off),
+        )
 
 
 @dataclass(frozen=True)
 class MapResult:
-    """What one observer sees, on the elevation grid cropped to the range.
+    """What observers see, on the elevation grid cropped to their ranges.
 
     Attributes
     ----------
-    visible : (rows, cols) uint8
-        1 visible, 0 hidden, 2 unresolved, 255 void or outside range, sector or grid.
-    clearance, needed_height : (rows, cols) float32 or None
-        Further layers [m] if asked for; NaN at 2 and 255.
+    arrays : mapping of str to (rows, cols) array
+        The layers by name; see the properties.
     elevation : (rows, cols) float32
         The ground [m], NaN where void.
     grid : Grid
         Grid of all these arrays.
-    post_map : PostMap
-        True local coordinates of the posts.
-    observer : Observer
-        The observer, where it was put.
+    areas : CellAreas
+        True areas of its cells.
+    views : tuple of View
+        What each observer sees, in the order given.
+    asked : Question
+        What was asked.
+    inputs : Inputs
+        What it was made from.
     warnings : tuple of str
         What the user should know.
     """
 
-    visible: NDArray[np.uint8]
-    clearance: NDArray[np.float32] | None
-    needed_height: NDArray[np.float32] | None
+    arrays: Mapping[str, NDArray[Any]]
     elevation: NDArray[np.float32]
     grid: Grid
-    post_map: PostMap
-    terrain: Terrain
-    observer: Observer
-    position: tuple[float, float]
-    eye_height: float
-    target: Target
-    range_m: float
-    refraction: Refraction
-    sector: Sector | None
-    layers: tuple[str, ...]
-    warnings: tuple[str, ...] = field(default=())
+    areas: CellAreas
+    views: tuple[View, ...]
+    asked: Question
+    inputs: Inputs
+    warnings: tuple[str, ...] = ()
 
     @property
+    def visible(self) -> NDArray[np.uint8]:
+        """1 visible, 0 hidden, 2 unresolved, 255 void or outside range, sector or grid."""
+        return self.arrays["visible"]
+
+    @property
+    def clearance(self) -> NDArray[np.float32] | None:
+        """Height of the target above the line of its horizon [m]; NaN at 2 and 255."""
+        return self.arrays.get("clearance")
+
+    @property
+    def needed_height(self) -> NDArray[np.float32] | None:
+        """Least height above ground at which something is seen [m]; NaN at 2 and 255."""
+        return self.arrays.get("needed-height")
+
+    @property
+    def count(self) -> NDArray[np.uint16] | None:
+        """How many observers surely see a cell; 65535 where none has a word on it."""
+        return self.arrays.get("count")
+
+    @property
+    def who(self) -> NDArray[np.uint32] | None:
+        """Bit n for observer n (counted from 0) where it surely sees a cell."""
+        return self.arrays.get("who")
+
+    @property
+    def terrain(self) -> Terrain:
+        """The elevation grid."""
+        return self.inputs.terrain
+
+    @property
+    def refraction(self) -> Refraction:
+        """The air."""
+        return self.asked.refraction
+
+    @property
+    def layers(self) -> tuple[str, ...]:
+        """Names of the layers."""
+        return tuple(self.arrays)
+
+    @cached_property
     def question(self) -> str:
         """The question that the result answers, in words."""
-        x, y = self.position
-        name = "" if self.observer.name == "observer" else f"{self.observer.name}, "
-        if self.observer.eye_elevation is None:
-            eye = f"{self.eye_height:g} m above ground"
-        else:
-            eye = f"{self.observer.eye_elevation:g} m elevation"
-        low = self.target.height == 0
-        what = "the ground" if low else f"{self.target.height:g} m above ground"
-        where = f"within {told_length(self.range_m)}"
-        if self.sector is not None:
-            where += f", bearings {self.sector.from_deg:g} to {self.sector.to_deg:g} degrees"
+        placed = [view.placed for view in self.views]
+        targets = {one.target_height for one in placed}
+        what = "the ground" if targets == {0.0} else f"{told_span(targets)} m above ground"
+        where = f"within {told_lengths(one.range_m for one in placed)}"
+        sectors = {one.sector for one in placed}
+        sector = next(iter(sectors))
+        if len(sectors) > 1:
+            where += ", each over its own bearings"
+        elif sector is not None:
+            where += f", bearings {sector.from_deg:g} to {sector.to_deg:g} degrees"
+        surface = self.inputs.surface
+        over = "" if surface is None else f", over the surface {grid_name(surface)}"
         return (
-            f"from {eye} at {name}{told_number(x)}, {told_number(y)} to {what} everywhere {where}, "
+            f"from {self._eyes()} at {self._places()} to {what} everywhere {where}{over}, "
             f"{self.refraction.describe()}"
         )
+
+    def _eyes(self) -> str:
+        elevations = [view.observer.eye_elevation for view in self.views]
+        known = [e for e in elevations if e is not None]
+        if not known:
+            return f"{told_span(view.eye_height for view in self.views)} m above ground"
+        if len(known) == len(elevations):
+            return f"{told_span(known)} m elevation"
+        return f"{told_span(round(view.eye_height, 2) for view in self.views)} m above ground"
+
+    def _places(self) -> str:
+        if len(self.views) > 1:
+            return f"{len(self.views)} points"
+        view = self.views[0]
+        name = "" if view.observer.name == "observer" else f"{view.observer.name}, "
+        x, y = view.position
+        return f"{name}{told_number(x)}, {told_number(y)}"
 
     @cached_property
     def counts(self) -> dict[str, int]:
@@ -106,59 +267,73 @@ class MapResult:
     @cached_property
     def areas_m2(self) -> dict[str, float]:
         """True area of the cells of each state on the ellipsoid [m2]."""
-        areas = cell_areas(self.grid)
         return {
-            name: round(areas.total(self.visible == value), 1)
+            name: round(self.areas.total(self.visible == value), 1)
             for name, value in _STATES.items()
             if value != NODATA
         }
 
     @cached_property
-    def farthest_visible(self) -> dict[str, float] | None:
-        """The farthest visible cell: x, y, distance [m] and true bearing [degrees]."""
-        best = None
-        seen = self.visible == VISIBLE
-        for row in np.flatnonzero(seen.any(axis=1)):
-            # along a row distance has no greatest between its ends
-            for col in {int(seen[row].argmax()), seen.shape[1] - 1 - int(seen[row, ::-1].argmax())}:
-                east, north = (float(v) for v in self.post_map.en(float(row), float(col)))
-                distance = math.hypot(east, north)
-                if best is None or distance > best[0]:
-                    best = (distance, math.degrees(math.atan2(east, north)) % 360.0, row, col)
-        if best is None:
-            return None
-        x, y = (float(v) for v in self.grid.xy(best[2], best[3]))
-        return {"x": x, "y": y, "distance_m": round(best[0], 2), "bearing_deg": round(best[1], 4)}
+    def farthest_visible(self) -> dict[str, Any] | None:
+        """The visible cell farthest from an observer that sees it: x, y, distance, bearing."""
+        found = [self.farthest_of(view) for view in self.views]
+        known = [one for one in found if one is not None]
+        return max(known, key=lambda one: one["distance_m"]) if known else None
 
-    @property
-    def covered(self) -> float:
-        """Share of range and sector that lies on known ground, so that it has an answer."""
-        width = 360.0 if self.sector is None else self.sector.width_deg
-        asked = math.pi * self.range_m**2 * width / 360.0
-        return min(1.0, sum(self.areas_m2.values()) / asked)
+    def farthest_of(self, view: View) -> dict[str, Any] | None:
+        """Give the farthest visible cell of one observer: x, y, distance [m], bearing [degrees]."""
+        if view.tally.farthest is None:
+            return None
+        row, col, distance, bearing = view.tally.farthest
+        x, y = (float(v) for v in self.grid.xy(row, col))
+        return {
+            "observer": view.observer.name,
+            "x": x,
+            "y": y,
+            "distance_m": round(distance, 2),
+            "bearing_deg": round(bearing, 4),
+        }
 
     @cached_property
     def summary(self) -> list[tuple[str, str]]:
         """Short table of the result: rows of label and value."""
         total = sum(self.areas_m2.values())
+        many = len(self.views) > 1
         rows = []
         for name, area in self.areas_m2.items():
             share = f" ({100 * area / total:.1f} %)" if total else ""
-            told = f"{area / 1e6:,.2f} km2" if total >= 1e5 else f"{area:,.0f} m2"
-            rows.append((name.capitalize(), told + share))
-        if self.covered < 0.99:
-            rows.append(("Range on known ground", f"{100 * self.covered:.0f} % of it"))
+            of_any = " from any" if many and name == "visible" else ""
+            label = name.capitalize() + of_any
+            rows.append((label, told_area(area, small=total < 1e5) + share))
+        if many:
+            rows.append(("Observers", str(len(self.views))))
+        covered = min(view.covered for view in self.views)
+        if covered < 0.99:
+            least = "as little as " if many else ""
+            rows.append(("Range on known ground", f"{least}{100 * covered:.0f} % of it"))
         far = self.farthest_visible
         if far is not None:
-            metres = far["distance_m"]
-            distance = f"{metres / 1000:.1f} km" if metres >= 1000 else f"{metres:.0f} m"
-            told = f"{distance} off at {far['bearing_deg']:.0f} degrees"
-            rows.append(("Farthest visible", told))
+            told = f"{told_distance(far['distance_m'])} off at {far['bearing_deg']:.0f} degrees"
+            rows.append(("Farthest visible", told + (f" from {far['observer']}" if many else "")))
         rows.append(("Refraction", self.refraction.describe()))
-        rows.append(("Ground at the observer", f"{self._ground:.1f} m"))
+        return [*rows, *self._ground_rows()]
+
+    def _ground_rows(self) -> list[tuple[str, str]]:
+        rows = []
+        if len(self.views) == 1:
+            rows.append(("Ground at the observer", f"{self.views[0].ground:.1f} m"))
+        surface = self.inputs.surface
+        if surface is not None:
+            median = self.inputs.median_over_ground
+            told = "" if median is None else f", {median:.1f} m over the ground in the median"
+            rows.append(("Surface", f"{grid_name(surface)} ({surface.method}){told}"))
         if self.terrain.height_unit_origin == "assumed metres":
             rows.append(("Heights", "in metres, as assumed"))
-        error = self.post_map.error_m
+        void_height = self.terrain.stated.get("void_height_m")
+        if void_height is not None:
+            cells = self.inputs.heights["voids_set"]
+            rows.append(("Voids stated to be", f"{void_height:g} m ({cells:,} cells)"))
+        error = max(view.post_map.error_m for view in self.views)
         told = f"up to {error:.2g} m" if error >= 1e-3 else "under 1 mm"
         rows.append(("Map position error", told))
         return rows
@@ -166,68 +341,34 @@ class MapResult:
     @cached_property
     def record(self) -> dict[str, Any]:
         """Everything needed to run it again, as plain JSON values (outputs when written)."""
-        from viewshed.io.record import build_record
+        from viewshed.recording import record_of
 
-        return build_record(
-            {
-                "version": __version__,
-                "question": self.question,
-                "options": self._options(),
-                "crs": self.grid.crs_wkt,
-                "grid": {"shape": self.grid.shape, "transform": tuple(self.grid.transform)[:6]},
-                "dem": self.terrain.fingerprints(),
-                "heights": {
-                    "metres_per_unit": self.terrain.height_factor,
-                    "unit_from": self.terrain.height_unit_origin,
-                    "nodata": self.terrain.nodata,
-                },
-                "observer": {
-                    "name": self.observer.name,
-                    "x": self.position[0],
-                    "y": self.position[1],
-                    "eye_height_m": self.eye_height,
-                    "ground_m": self._ground,
-                },
-                "refraction": {
-                    "k": self.refraction.k,
-                    "K": self.refraction.K,
-                    "m": self.refraction.m,
-                    "origin": self.refraction.origin,
-                },
-                "geometry": {
-                    "error_m": self.post_map.error_m,
-                    "error_cells": self.post_map.error_cells,
-                    "degree": self.post_map.degree,
-                    "radius_meridian_m": self.post_map.radius_meridian,
-                    "radius_prime_vertical_m": self.post_map.radius_prime_vertical,
-                },
-                "counts": self.counts,
-                "areas_m2": self.areas_m2,
-                "range_on_known_ground": round(self.covered, 4),
-                "farthest_visible": self.farthest_visible,
-                "warnings": list(self.warnings),
-                "outputs": {},
-            }
-        )
+        return record_of(self)
 
-    @property
-    def _ground(self) -> float:
-        return ground_at(self.elevation, self.post_map.row0, self.post_map.col0)
+    def polygons(
+        self,
+        *,
+        states: tuple[str, ...] = ("visible", "unresolved"),
+        min_patch_m2: float = 0.0,
+    ) -> Patches:
+        """Give the patches of the answer as polygons along the edges of cells.
 
-    def _options(self) -> dict[str, Any]:
-        sector = self.sector
-        return {
-            "observer": [self.observer.x, self.observer.y],
-            "observer_crs": self.observer.crs,
-            "eye_height_m": self.observer.eye_height,
-            "eye_elevation_m": self.observer.eye_elevation,
-            "target_height_m": self.target.height,
-            "range_m": self.range_m,
-            "sector_deg": None if sector is None else [sector.from_deg, sector.to_deg],
-            "refraction_k": self.refraction.k,
-            "layers": list(self.layers),
-            **self.terrain.stated,
-        }
+        Parameters
+        ----------
+        states : tuple of str
+            Any of ``visible``, ``unresolved`` and ``hidden``.
+        min_patch_m2 : float
+            Patches smaller than this are left out [m2].
+
+        Returns
+        -------
+        Patches
+            ``frame``, a GeoDataFrame; ``dropped`` and ``dropped_m2``, what was left out. With a
+            question that keeps each observer's answer, theirs follow the common one.
+        """
+        from viewshed.writing import patches_of
+
+        return patches_of(self, states=states, min_patch_m2=min_patch_m2)
 
     def write(
         self,
@@ -235,9 +376,12 @@ class MapResult:
         *,
         overwrite: bool = False,
         picture: bool = True,
+        polygons: str = "none",
+        min_patch_m2: float = 0.0,
+        stac: bool = False,
         creation_options: Mapping[str, str] | None = None,
     ) -> list[Path]:
-        """Write the layers, the page and the record into a folder, all or nothing.
+        """Write the layers, the page, the table and the record into a folder, all or nothing.
 
         Parameters
         ----------
@@ -247,6 +391,12 @@ class MapResult:
             Whether an earlier result there is replaced.
         picture : bool
             Whether map.png is drawn.
+        polygons : {"none", "shp", "gpkg", "fgb", "parquet"}
+            Format of the polygons.
+        min_patch_m2 : float
+            Polygons smaller than this are left out [m2].
+        stac : bool
+            Whether a STAC item is written beside the results.
         creation_options : mapping of str to str, optional
             Options of the COG driver, like ``{"COMPRESS": "ZSTD"}``.
 
@@ -259,113 +409,26 @@ class MapResult:
         ------
         OutputError
             If something could not be written whole; the folder is as it was.
+        InputError
+            If the name of an observer cannot name a file that is asked for.
         """
-        from viewshed.io._atomic import check_out_dir, file_sha256, staged
-        from viewshed.io.raster import write_cog
-        from viewshed.io.record import build_record, write_record
+        from viewshed.writing import Wanted, write_result
 
-        check_out_dir(out_dir, overwrite)
-        folder = Path(out_dir)
-        self._spare_the_inputs(folder)
-        outputs: dict[str, Any] = {}
-        with staged(folder, overwrite=overwrite) as stage:
-            for layer, array in self._arrays():
-                name = f"{layer.replace('-', '_')}.tif"
-                description, unit, nodata = _BANDS[layer]
-                written = write_cog(
-                    stage.path(name),
-                    array,
-                    self.grid,
-                    nodata=nodata,
-                    description=description,
-                    unit=unit,
-                    tags=self._tags(layer),
-                    overview="mode" if layer == "visible" else "nearest",
-                    creation_options=creation_options or {},
-                )
-                outputs[name] = {**written, "layer": layer}
-            if picture:
-                self._draw(stage.path("map.png"))
-                outputs["map.png"] = {"sha256": file_sha256(stage.path("map.png")), "layer": None}
-            options = {
-                **self.record["options"],
-                "picture": picture,
-                "creation_options": dict(creation_options or {}),
-            }
-            record = build_record(
-                {**self.record, "options": options, "outputs": outputs}, folder=folder.resolve()
-            )
-            write_record(stage.path("record.json"), record)
-        names = sorted(outputs, key=lambda n: (n != "map.png", list(outputs).index(n)))
-        return [folder / name for name in [*names, "record.json"]]
-
-    def _spare_the_inputs(self, folder: Path) -> None:
-        """Refuse to write over the elevation that was read."""
-        from viewshed.io._atomic import RESULT_NAMES
-
-        for path in self.terrain.paths:
-            if path.resolve().parent == folder.resolve() and path.name in RESULT_NAMES:
-                msg = f"{path}: is the elevation grid itself; choose another folder for the results"
-                raise OutputError(msg)
-
-    def _arrays(self) -> list[tuple[str, NDArray[Any]]]:
-        arrays = {
-            "visible": self.visible,
-            "clearance": self.clearance,
-            "needed-height": self.needed_height,
-        }
-        return [(name, arrays[name]) for name in self.layers if arrays[name] is not None]  # type: ignore[misc]
-
-    def _tags(self, layer: str) -> dict[str, str]:
-        return {
-            "VERSION": __version__,
-            "LAYER": layer,
-            "QUESTION": self.question,
-            "REFRACTION_K": repr(self.refraction.k),
-            "EARTH_FACTOR": repr(self.refraction.K),
-            "GEOMETRY_ERROR_M": f"{self.post_map.error_m:.3g}",
-            "CAUTION": "A model of the terrain it was given. Not for navigation or flight safety.",
-        }
-
-    def _draw(self, path: Path) -> None:
-        from viewshed.io.picture import Scene, Words, draw_map
-
-        crs = geodesy.crs_from_user(self.grid.crs_wkt)
-        unit = crs.axis_info[0].unit_name if crs.axis_info else ""
-        name = "" if self.observer.name == "observer" else self.observer.name
-        scene = Scene(
-            elevation=self.elevation,
-            visible=self.visible,
-            grid=self.grid,
-            post_map=self.post_map,
-            observers=[(*self.position, name)],
-            range_m=self.range_m,
-            sector=self.sector,
+        wanted = Wanted(
+            picture=picture,
+            polygons=polygons,
+            min_patch_m2=min_patch_m2,
+            stac=stac,
+            creation_options=dict(creation_options or {}),
         )
-        words = Words(
-            question=self.question,
-            refraction=self.refraction.describe(),
-            dem_name=_dem_name(self.terrain.paths),
-            crs_name=f"{crs.name}, {unit}" if unit else crs.name,
-            summary=self.summary,
-            made_with=f"viewshed {__version__}",
-        )
-        draw_map(path, scene, words)
+        return write_result(self, out_dir, overwrite=overwrite, wanted=wanted)
 
 
-_STATES = {"visible": VISIBLE, "hidden": HIDDEN, "unresolved": UNRESOLVED, "nodata": NODATA}
-
-
-def _dem_name(paths: Sequence[Path]) -> str:
-    first = Path(paths[0]).name
-    return first if len(paths) == 1 else f"{first} and {len(paths) - 1} more"
-
-
-def told_length(metres: float) -> str:
-    """Write a length with the unit that suits it."""
-    return f"{metres / 1000.0:g} km" if metres >= 1000.0 else f"{metres:g} m"
-
-
-def told_number(value: float) -> str:
-    """Write a coordinate without needless digits."""
-    return f"{value:.8f}".rstrip("0").rstrip(".") if abs(value) < 1000 else f"{value:.10g}"
+def grid_name(grid: Terrain | Surface) -> str:
+    """Name a grid or surface by what was given: its first file, its folder or its pattern."""
+    first, files = PurePath(grid.given[0]).name or grid.given[0], len(grid.paths)
+    if files == 1:
+        return grid.paths[0].name
+    if len(grid.given) == 1:
+        return f"{first} ({files} files)"
+    return f"{first} and {len(grid.given) - 1} more"

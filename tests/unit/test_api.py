@@ -10,8 +10,7 @@ import rasterio
 from affine import Affine
 
 import viewshed
-from viewshed import geodesy
-from viewshed import result as result_module
+from viewshed import geodesy, wording
 from viewshed.io.record import matching
 
 CELL = 30.0
@@ -79,7 +78,7 @@ def test_farthest_visible_is_the_farthest(terrain):
     with pytest.warns(viewshed.ViewshedWarning, match="past the elevation grid"):
         result = viewshed.map_visibility(terrain, viewshed.Observer(x, y, eye_height=20))
     rows, cols = np.nonzero(result.visible == 1)
-    distances = np.hypot(*result.post_map.en(rows, cols))
+    distances = np.hypot(*result.views[0].post_map.en(rows, cols))
     far = result.farthest_visible
     assert far["distance_m"] == pytest.approx(distances.max(), abs=0.01)
     assert math.hypot(far["x"] - x, far["y"] - y) == pytest.approx(distances.max(), rel=1e-3)
@@ -100,7 +99,7 @@ def test_the_position_may_be_given_in_another_crs(terrain):
     two = viewshed.map_visibility(
         terrain, viewshed.Observer(lon, lat, crs="EPSG:4326"), range_m=600
     )
-    assert two.position == pytest.approx(one.position, abs=1e-6)
+    assert two.views[0].position == pytest.approx(one.views[0].position, abs=1e-6)
     assert (one.visible != two.visible).mean() < 0.001
 
 
@@ -166,7 +165,7 @@ def test_an_unknown_layer_is_refused(terrain):
 def test_a_window_that_does_not_fit_is_refused_before_it_is_read(terrain, monkeypatch):
     monkeypatch.setattr("viewshed.io._memory.available_memory", lambda: 1000)
     monkeypatch.setattr(
-        type(terrain), "read", lambda *_: pytest.fail("read although it does not fit")
+        type(terrain), "load", lambda *_: pytest.fail("read although it does not fit")
     )
     with pytest.raises(viewshed.MemoryLimitError, match=r"range 600 m needs .* there are"):
         viewshed.map_visibility(terrain, viewshed.Observer(*post(30, 40)), range_m=600)
@@ -188,7 +187,8 @@ def test_written_files_say_the_question_and_repeat_to_the_byte(terrain, tmp_path
         )
         paths = result.write(folder)
         assert [p.name for p in paths] == [
-            "map.png", "visible.tif", "clearance.tif", "needed_height.tif", "record.json",
+            "map.png", "clearance.tif", "needed_height.tif", "visible.tif", "summary.csv",
+            "record.json",
         ]  # fmt: skip
         assert matching(folder)
     for path in paths:
@@ -219,7 +219,7 @@ def test_overwriting_leaves_no_stale_layer(terrain, tmp_path):
         few.write(tmp_path / "out", picture=False)
     few.write(tmp_path / "out", picture=False, overwrite=True)
     left = {p.name for p in (tmp_path / "out").iterdir() if not p.name.startswith(".")}
-    assert left == {"visible.tif", "record.json"}
+    assert left == {"visible.tif", "summary.csv", "record.json"}
 
 
 def test_an_option_of_the_format_is_passed_on_or_refused(terrain, tmp_path):
@@ -256,20 +256,20 @@ def test_a_range_that_reaches_no_cell_is_refused(terrain):
 
 def test_a_range_may_be_a_text_and_has_an_end(terrain):
     observer = viewshed.Observer(*post(30, 40))
-    assert viewshed.map_visibility(terrain, observer, range_m="0.3km").range_m == 300.0
+    assert viewshed.map_visibility(terrain, observer, range_m="0.3km").asked.range_m == 300.0
     with pytest.raises(viewshed.InputError, match="up to 20000 km"):
         viewshed.map_visibility(terrain, observer, range_m=1e12)
 
 
 def test_the_page_says_how_much_of_the_range_is_known(terrain):
     whole = viewshed.map_visibility(terrain, viewshed.Observer(*post(30, 40)), range_m=600)
-    assert whole.covered == pytest.approx(1.0, abs=0.01)
+    assert whole.views[0].covered == pytest.approx(1.0, abs=0.01)
     assert "Range on known ground" not in dict(whole.summary)
     with pytest.warns(viewshed.ViewshedWarning, match="past"):
         part = viewshed.map_visibility(terrain, viewshed.Observer(*post(0, 40)), range_m=600)
-    assert part.covered == pytest.approx(0.5, abs=0.05)
+    assert part.views[0].covered == pytest.approx(0.5, abs=0.05)
     assert dict(part.summary)["Range on known ground"].startswith("5")
-    assert part.record["range_on_known_ground"] == pytest.approx(part.covered, abs=1e-4)
+    assert part.record["observers"][0]["range_on_known_ground"] == pytest.approx(0.5, abs=0.05)
 
 
 def test_clearance_stays_fit_for_a_display(terrain):
@@ -314,9 +314,9 @@ def test_turned_and_south_up_grids_give_the_same_places(tmp_path, hills):
 
 
 def test_numbers_are_written_without_needless_digits():
-    assert result_module.told_number(410385.0) == "410385"
-    assert result_module.told_number(-84.2) == "-84.2"
-    assert result_module.told_number(0.0) == "0"
+    assert wording.told_number(410385.0) == "410385"
+    assert wording.told_number(-84.2) == "-84.2"
+    assert wording.told_number(0.0) == "0"
 
 
 def test_nothing_warns_on_an_ordinary_run(terrain):

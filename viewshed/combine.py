@@ -1,0 +1,93 @@
+"""The answer of several observers together, gathered one by one."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from viewshed.constants import COUNT_NODATA, NODATA, UNRESOLVED, WHO_OBSERVERS
+from viewshed.kernels import gather
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from viewshed.visibility import Visibility
+
+__all__ = ["Combination"]
+
+#: Layers beside `visible`, in the order of the kernel's flags, with type and empty value.
+_KEPT: tuple[tuple[str, type, float], ...] = (
+    ("count", np.uint16, COUNT_NODATA),
+    ("count-unresolved", np.uint16, COUNT_NODATA),
+    ("who", np.uint32, 0),
+    ("clearance", np.float32, np.nan),
+    ("needed-height", np.float32, np.nan),
+)
+#: Rows that one call of the kernel merges.
+_STRIP_ROWS = 1024
+
+
+class Combination:
+    """Layers of several observers on one grid.
+
+    Observers for whom a cell is no data have no word on it. Else a cell is visible if any sees it,
+    unresolved if any is unresolved, hidden if none. Clearance is the greatest and needed height
+    the least that is known.
+
+    Parameters
+    ----------
+    shape : tuple of int
+        Rows and columns of the grid.
+    layers : sequence of str
+        Layers to keep beside `visible`.
+    """
+
+    def __init__(self, shape: tuple[int, int], layers: tuple[str, ...]) -> None:
+        self.visible = np.full(shape, NODATA, dtype=np.uint8)
+        self._keep = np.array([name in layers for name, _, _ in _KEPT], dtype=np.uint8)
+        self._arrays: dict[str, NDArray[Any]] = {
+            name: np.full(shape if kept else (1, 1), empty, dtype=dtype)
+            for (name, dtype, empty), kept in zip(_KEPT, self._keep, strict=True)
+        }
+        self._added = 0
+
+    def add(self, seen: Visibility, row0: int, col0: int) -> None:
+        """Add the next observer.
+
+        Parameters
+        ----------
+        seen : Visibility
+            What it sees.
+        row0, col0 : int
+            Where its first cell lies in the grid.
+        """
+        rows = seen.visible.shape[0]
+        nothing = np.zeros((1, 1), dtype=np.float32)
+        clear = nothing if seen.clearance is None else seen.clearance
+        need = nothing if seen.needed_height is None else seen.needed_height
+        bit = np.uint32(1 << (self._added % WHO_OBSERVERS))
+        for start in range(0, rows, _STRIP_ROWS):
+            part = slice(start, start + _STRIP_ROWS)
+            gather.merge(
+                seen.visible[part],
+                clear if clear is nothing else clear[part],
+                need if need is nothing else need[part],
+                row0 + start,
+                col0,
+                bit,
+                self._keep,
+                self.visible,
+                *self._arrays.values(),
+            )
+        self._added += 1
+
+    def layers(self) -> dict[str, NDArray[Any]]:
+        """Give the layers kept, `visible` first; what is not known is NaN."""
+        for name in ("clearance", "needed-height"):
+            if self._keep[[kept for kept, _, _ in _KEPT].index(name)]:
+                for start in range(0, self.visible.shape[0], _STRIP_ROWS):
+                    part = slice(start, start + _STRIP_ROWS)
+                    self._arrays[name][part][self.visible[part] == UNRESOLVED] = np.nan
+        kept = (name for (name, _, _), keep in zip(_KEPT, self._keep, strict=True) if keep)
+        return {"visible": self.visible, **{name: self._arrays[name] for name in kept}}
