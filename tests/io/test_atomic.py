@@ -13,26 +13,19 @@ from pathlib import Path
 
 import pytest
 
+from tests.io.records import sections
 from viewshed.errors import OutputError
 from viewshed.io import _atomic
 from viewshed.io._atomic import check_out_dir, file_sha256, is_plain_name, staged
-from viewshed.io.record import matching
+from viewshed.io.record import build_record, matching, relative_path
 
 ROOT = Path(__file__).parents[2]
 
 
 def a_record(folder, names):
-    """Give the least that counts as a record of files made in a folder."""
-    dicts = ("options", "grid", "observer", "refraction", "geometry", "counts", "areas_m2")
-    return {
-        "format": "viewshed record",
-        "version": "0",
-        "question": "?",
-        "crs": "",
-        **{key: {} for key in (*dicts, "libraries")},
-        **{key: [] for key in ("dem", "warnings", "cautions")},
-        "outputs": {name: {"sha256": file_sha256(folder / name)} for name in names},
-    }
+    """Give the record of files made in a folder."""
+    outputs = {name: {"sha256": file_sha256(folder / name)} for name in names}
+    return build_record(sections(outputs=outputs))
 
 
 def fill(stage, files):
@@ -495,3 +488,123 @@ def test_a_zombie_is_dead(tmp_path):
     child.wait()
     assert not _atomic._is_process(child.pid)
     assert _atomic._start(child.pid) == ""
+
+
+RACER = """
+import sys
+sys.path[:0] = [sys.argv[1], sys.argv[2]]
+from test_atomic import run
+from viewshed.errors import OutputError
+from viewshed.io._atomic import check_out_dir
+out, name, overwrite = sys.argv[3], sys.argv[4], sys.argv[5] == "overwrite"
+print("ready", flush=True)
+sys.stdin.readline()
+try:
+    check_out_dir(out, overwrite)
+    run(out, {"visible.tif": name, f"{name}.tif": name}, overwrite=overwrite)
+except OutputError as error:
+    print(error)
+else:
+    print("done")
+"""
+
+
+@pytest.mark.parametrize("how", ["keep", "overwrite"])
+def test_runs_that_start_together_leave_one_whole_result(tmp_path, how):
+    out, here = tmp_path / "new/ü out", str(Path(__file__).parent)
+    racers = [
+        subprocess.Popen(
+            [sys.executable, "-c", RACER, str(ROOT), here, str(out), name, how],
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            text=True,
+        )
+        for name in "abcd"
+    ]
+    for racer in racers:
+        assert racer.stdout.readline() == "ready\n"
+    for racer in racers:
+        racer.stdin.write("go\n")
+        racer.stdin.flush()
+    told = [racer.communicate()[0].splitlines() for racer in racers]
+    winners = [name for name, lines in zip("abcd", told, strict=True) if lines == ["done"]]
+    assert len(winners) == 1 if how == "keep" else winners
+    for lines in told:
+        assert len(lines) == 1
+        assert lines == ["done"] or "is writing into this folder" in lines[0] or (
+            how == "keep" and "exists; use --overwrite" in lines[0]
+        )  # fmt: skip
+    last = (out / "visible.tif").read_text()
+    assert last in winners
+    assert content(out) == {"visible.tif": last, f"{last}.tif": last}
+    assert matching(out)
+    assert not list(out.glob(".viewshed*"))
+
+
+def test_a_folder_that_a_failing_run_takes_away_is_made_again(tmp_path, monkeypatch):
+    make = _atomic._make_folders
+
+    def vanishing(folder):
+        made = make(folder)
+        folder.rmdir()
+        return made
+
+    monkeypatch.setattr(_atomic, "_make_folders", vanishing)
+    run(tmp_path / "out", NEW)
+    assert matching(tmp_path / "out")
+
+
+# --- another disk -------------------------------------------------------------------------------
+
+
+@pytest.fixture
+def other_disk(tmp_path):
+    """Give a folder on another file system than the one of temporary files."""
+    memory = Path("/dev/shm")
+    if not os.access(memory, os.W_OK) or memory.stat().st_dev == tmp_path.stat().st_dev:
+        pytest.skip("there is no second file system to write to")
+    with tempfile.TemporaryDirectory(dir=memory, prefix="viewshed ü ") as folder:
+        yield Path(folder)
+
+
+def test_a_folder_on_another_disk(tmp_path, other_disk, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    run(other_disk / "out", OLD)
+    run(other_disk / "out", NEW, overwrite=True)
+    assert content(other_disk / "out") == NEW
+    assert matching(other_disk / "out")
+
+
+def test_a_link_to_a_folder_on_another_disk(tmp_path, other_disk):
+    (tmp_path / "link").symlink_to(other_disk)
+    run(tmp_path / "link", OLD)
+    with pytest.raises(Oops), staged(tmp_path / "link", overwrite=True) as stage:  # noqa: PT012
+        fill(stage, NEW)
+        raise Oops
+    assert content(other_disk) == OLD
+    assert matching(tmp_path / "link")
+
+
+def test_a_record_on_another_disk_finds_its_inputs(tmp_path, other_disk):
+    (tmp_path / "ü dem.tif").write_text("heights")
+    found = relative_path(tmp_path / "ü dem.tif", other_disk / "out")
+    (other_disk / "out").mkdir()
+    assert (other_disk / "out" / found).read_text() == "heights"
+
+
+# --- single files -------------------------------------------------------------------------------
+
+
+def test_write_text(tmp_path):
+    path = tmp_path / "å table.csv"
+    assert _atomic.write_text(path, "å;1\n") == file_sha256(path)
+    assert path.read_bytes() == "å;1\n".encode()
+    with pytest.raises(OutputError, match=r"^[^\n]*a\.csv: cannot be written: No such file[^\n]*$"):
+        _atomic.write_text(tmp_path / "no/a.csv", "")
+
+
+def test_a_text_that_does_not_read_back(tmp_path, monkeypatch):
+    monkeypatch.setattr(Path, "read_bytes", lambda _: b"")
+    with pytest.raises(OutputError, match=r"a\.csv: cannot be written: it does not read back"):
+        _atomic.write_text(tmp_path / "a.csv", "x")
+    assert not list(tmp_path.iterdir())

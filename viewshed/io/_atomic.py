@@ -9,7 +9,6 @@ One run at a time works in a folder: a lock that dies with its process says whic
 
 import contextlib
 import errno
-import hashlib
 import json
 import os
 import shutil
@@ -21,17 +20,32 @@ from typing import Any
 
 from viewshed.constants import LAYERS
 from viewshed.errors import OutputError
+from viewshed.io._files import file_sha256, is_plain_name, write_text
 
 try:
     import fcntl
 except ImportError:  # pragma: no cover  (no such module on Windows)
     fcntl = None  # type: ignore[assignment]
 
+__all__ = [
+    "RECORD_FORMAT", "RECORD_NAME", "RESULT_NAMES", "Stage", "check_out_dir", "file_sha256",
+    "is_plain_name", "staged", "write_text",
+]  # fmt: skip
+
 RECORD_NAME = "record.json"
 #: What a record says in its section ``format``.
 RECORD_FORMAT = "viewshed record"
+#: Endings of the polygons in every format, those of a shapefile first.
+_POLYGONS = ("shp", "shx", "dbf", "prj", "cpg", "gpkg", "fgb", "parquet")
 #: Files whose presence means that a folder holds results.
-RESULT_NAMES = (RECORD_NAME, *(f"{n.replace('-', '_')}.tif" for n in LAYERS), "map.png")
+RESULT_NAMES = (
+    RECORD_NAME,
+    *(f"{layer.replace('-', '_')}.tif" for layer in LAYERS),
+    *(f"visible.{ending}" for ending in _POLYGONS),
+    "map.png",
+    "summary.csv",
+    "stac_item.json",
+)
 
 _PREFIX = ".viewshed-"
 _LOCK = ".viewshed-lock"
@@ -41,26 +55,6 @@ _NO_LOCKS = {errno.ENOLCK, errno.ENOTSUP, errno.ENOSYS, errno.EINVAL}
 
 #: Hidden folders this process works in.
 _active: set[str] = set()
-
-
-def file_sha256(path: str | os.PathLike[str]) -> str:
-    """Give the SHA-256 of a file, read piece by piece, as hexadecimal digits."""
-    digest = hashlib.sha256()
-    with Path(path).open("rb") as file:
-        while piece := file.read(1 << 20):
-            digest.update(piece)
-    return digest.hexdigest()
-
-
-def is_plain_name(name: object) -> bool:
-    """Tell whether a value is the name of a visible file, without any folder."""
-    return (
-        isinstance(name, str)
-        and bool(name)
-        and name == Path(name).name
-        and not name.startswith(".")
-        and not set("/\\\0") & set(name)
-    )
 
 
 class Stage:
@@ -131,19 +125,13 @@ def staged(out_dir: str | os.PathLike[str], *, overwrite: bool = False) -> Itera
     try:
         with _as_output_error(folder):
             made = _make_folders(folder)
-        with _locked(folder):
+        with locked(folder):
             _refuse_existing(folder, overwrite=overwrite, names=RESULT_NAMES)
             stage = Stage(folder, overwrite=overwrite)
-            try:
-                with _as_output_error(folder):
-                    _open_stage(stage)
-                    yield stage
-                    _publish(stage)
-                done = True
-            finally:
-                with _as_output_error(folder):
-                    _recover(stage.folder)
-                _active.discard(stage.folder.name)
+            with opened(stage):
+                yield stage
+                _publish(stage)
+            done = True
     finally:
         if not done:
             for parent in reversed(made):
@@ -189,7 +177,7 @@ def check_out_dir(
         msg = f"{place}: is a folder that cannot be written into; choose another one"
         raise OutputError(msg)
     if present:
-        with _locked(folder):
+        with locked(folder):
             _refuse_existing(folder, overwrite=overwrite, names=names)
 
 
@@ -198,7 +186,7 @@ def _refuse_existing(folder: Path, *, overwrite: bool, names: tuple[str, ...]) -
     if found and not overwrite:
         msg = f"{folder / found[0]}: exists; use --overwrite to replace the results in this folder"
         raise OutputError(msg)
-    ours = set(_listed(folder))
+    ours = set(listed(folder))
     for name in found:
         if name not in ours:
             msg = (
@@ -208,7 +196,7 @@ def _refuse_existing(folder: Path, *, overwrite: bool, names: tuple[str, ...]) -
             raise OutputError(msg)
 
 
-def _listed(folder: Path) -> list[str]:
+def listed(folder: Path) -> list[str]:
     """Give the files that the record in a folder lists, itself first."""
     path = folder / RECORD_NAME
     if not os.path.lexists(path):
@@ -252,14 +240,25 @@ def _make_folders(folder: Path) -> list[Path]:
 def _publish(stage: Stage) -> None:
     """Move the files to their places; if this stops half-way `_recover` undoes it."""
     out, names = stage.out_dir, stage.names
+    _refuse_existing(out, overwrite=stage.overwrite, names=tuple(names))
+    old = [name for name in [*listed(out), *names] if os.path.lexists(out / name)]
+    move(stage, list(dict.fromkeys(old)))
+
+
+def move(stage: Stage, old: list[str]) -> None:
+    """Move what stands in the way aside and the files of a stage to their places.
+
+    Raises
+    ------
+    OutputError
+        If a file was not made, or a folder stands in the way.
+    """
+    out, names = stage.out_dir, stage.names
     for name in names:
         if not (stage.folder / name).is_file():
             msg = f"{out / name}: was not made; nothing of this result is kept"
             raise OutputError(msg)
         _sync(stage.folder / name)
-    _refuse_existing(out, overwrite=stage.overwrite, names=tuple(names))
-    old = [name for name in [*_listed(out), *names] if os.path.lexists(out / name)]
-    old = list(dict.fromkeys(old))
     for name in old:
         if (out / name).is_dir() and not (out / name).is_symlink():
             msg = f"{out / name}: is a folder and stands where a result belongs; move it away"
@@ -343,7 +342,7 @@ def _sync(path: Path) -> None:
 
 
 @contextlib.contextmanager
-def _locked(folder: Path) -> Iterator[None]:
+def locked(folder: Path) -> Iterator[None]:
     """Hold the folder's lock and sweep what dead runs left.
 
     The lock goes away with the process that holds it, however it ends. Where the file system
@@ -364,7 +363,11 @@ def _locked(folder: Path) -> Iterator[None]:
 def _take_lock(folder: Path) -> int:
     path = folder / _LOCK
     while True:
-        handle = os.open(path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o666)
+        try:
+            handle = os.open(path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o666)
+        except FileNotFoundError:  # another run failed and took the folder it had made with it
+            folder.mkdir(parents=True)
+            continue
         try:
             if fcntl is None:  # pragma: no cover
                 return handle
@@ -392,6 +395,19 @@ def _is_same_file(handle: int, path: Path) -> bool:
 
 def _busy(folder: Path, who: str = "another run") -> str:
     return f"{folder}: {who} is writing into this folder; wait for it or choose another one"
+
+
+@contextlib.contextmanager
+def opened(stage: Stage) -> Iterator[None]:
+    """Keep the hidden folder of a stage for as long as files are made; the folder is locked."""
+    try:
+        with _as_output_error(stage.out_dir):
+            _open_stage(stage)
+            yield
+    finally:
+        with _as_output_error(stage.out_dir):
+            _recover(stage.folder)
+        _active.discard(stage.folder.name)
 
 
 def _open_stage(stage: Stage) -> None:

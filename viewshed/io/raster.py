@@ -107,7 +107,7 @@ def write_cog(  # noqa: PLR0913 - path, cells, place, and what the file says of 
     tags: Mapping[str, str],
     overview: str = "nearest",
     creation_options: Mapping[str, str] | None = None,
-) -> dict[str, str]:
+) -> dict[str, Any]:
     """Write an array as a Cloud Optimized GeoTIFF and prove that it is whole.
 
     Same array, same grid and same tags give the same bytes, whatever the number of threads.
@@ -134,7 +134,9 @@ def write_cog(  # noqa: PLR0913 - path, cells, place, and what the file says of 
     Returns
     -------
     dict
-        ``sha256`` of the file and ``pixel_sha256`` of its cells.
+        What a record says of the file: ``sha256``, ``size`` [bytes], ``pixel_sha256`` of its
+        cells, ``data_type``, ``nodata`` (``"nan"`` where it is not a number), ``unit`` and
+        ``description``.
 
     Raises
     ------
@@ -159,7 +161,15 @@ def write_cog(  # noqa: PLR0913 - path, cells, place, and what the file says of 
             _sync(made)
             pixels = _read_back(made, array, grid, facts)
             _read_overviews(made)
-        found = {"sha256": file_sha256(made), "pixel_sha256": pixels}
+        found = {
+            "sha256": file_sha256(made),
+            "size": made.stat().st_size,
+            "pixel_sha256": pixels,
+            "data_type": array.dtype.name,
+            "nodata": "nan" if nodata is not None and nodata != nodata else nodata,  # noqa: PLR0124
+            "unit": unit,
+            "description": description,
+        }
         made.replace(final)
     except OutputError as error:
         msg = f"{final}: {error}"

@@ -1,46 +1,67 @@
 """The record of a run: everything needed to run it again and to know its files.
 
-The record is JSON with sorted keys. It holds no durations and no absolute paths; dates only where
-the caller puts them. A folder whose record and files agree holds a whole result.
+The record is JSON with sorted keys; its shape is the JSON Schema `record_schema.json` beside this
+module. It holds no dates, no durations and no absolute paths. A folder whose record and files
+agree holds a whole result.
 """
 
+import glob
 import json
 import math
 import os
-from collections.abc import Mapping
-from importlib import metadata
-from pathlib import Path
+import platform
+from collections.abc import Iterator, Mapping
+from functools import cache
+from importlib import metadata, resources
+from pathlib import Path, PurePosixPath
 from typing import Any
 
-from viewshed.constants import CAUTIONS
-from viewshed.errors import DataError, OutputError
-from viewshed.io._atomic import RECORD_FORMAT, RECORD_NAME, file_sha256, is_plain_name
+import rasterio
 
-#: Sections that a record must hold, with their JSON type.
-_SECTIONS: dict[str, type] = {
-    "format": str,
-    "version": str,
-    "question": str,
-    "options": dict,
-    "crs": str,
-    "grid": dict,
-    "dem": list,
-    "observer": dict,
-    "refraction": dict,
-    "geometry": dict,
-    "counts": dict,
-    "areas_m2": dict,
-    "warnings": list,
-    "outputs": dict,
-    "libraries": dict,
-    "cautions": list,
-}
-_LIBRARIES = ("affine", "numba", "numpy", "pyproj", "rasterio")
+from viewshed import geodesy
+from viewshed.constants import CAUTIONS
+from viewshed.errors import DataError
+from viewshed.io._atomic import (
+    RECORD_FORMAT,
+    RECORD_NAME,
+    file_sha256,
+    is_plain_name,
+    write_text,
+)
+from viewshed.io._schema import problem
+
+try:
+    from llvmlite.binding import get_host_cpu_name
+except (ImportError, OSError):  # pragma: no cover  (numba brings it)
+    get_host_cpu_name = None
+
+#: Version of the shape of the record; a record without one is of version 1.
+FORMAT_VERSION = 2
+_LIBRARIES = (
+    "affine", "geopandas", "llvmlite", "matplotlib", "numba", "numpy", "pyogrio", "pyproj",
+    "rasterio", "shapely",
+)  # fmt: skip
+
+
+def schema() -> dict[str, Any]:
+    """Give the JSON Schema (2020-12) of the record, with a description of every section."""
+    return dict(json.loads(_schema_text()))
+
+
+@cache
+def _schema_text() -> str:
+    return (resources.files(__package__) / "record_schema.json").read_text(encoding="utf-8")
 
 
 def library_versions() -> dict[str, str]:
-    """Give the versions of the libraries that the numbers depend on, without importing them."""
-    found = {}
+    """Give the versions of the libraries that the results depend on.
+
+    Returns
+    -------
+    dict of str to str
+        Packages, and ``GDAL`` and ``PROJ`` as they read the rasters and measure the ground.
+    """
+    found = {"GDAL": str(rasterio.__gdal_version__), "PROJ": geodesy.proj_version()}
     for name in _LIBRARIES:
         try:
             found[name] = metadata.version(name)
@@ -49,12 +70,57 @@ def library_versions() -> dict[str, str]:
     return found
 
 
+def platform_facts() -> dict[str, str]:
+    """Give machine, processor, Python and operating system, which may move a last bit.
+
+    Returns
+    -------
+    dict of str to str
+        ``machine``, ``processor`` (the one that the engine is compiled for), ``python`` and
+        ``system``.
+    """
+    return {
+        "machine": platform.machine() or "unknown",
+        "processor": _processor(),
+        "python": platform.python_version(),
+        "system": platform.system() or "unknown",
+    }
+
+
+def _processor() -> str:
+    """Give the name of the processor that numba compiles for."""
+    stated = os.environ.get("NUMBA_CPU_NAME")
+    if stated or get_host_cpu_name is None:
+        return stated or platform.processor() or "unknown"
+    return str(get_host_cpu_name())
+
+
 def relative_path(path: str | os.PathLike[str], folder: str | os.PathLike[str]) -> str:
-    """Give a path as seen from a folder, with forward slashes; only its name if that fails."""
+    """Give a path as seen from a folder, with forward slashes; only its name if that fails.
+
+    Links on the way are followed, so that ``..`` leads where it should; the last name is kept.
+    """
+    given = Path(path)
+    place = given.parent.resolve() / given.name
     try:
-        return Path(os.path.relpath(path, folder)).as_posix()
+        return Path(os.path.relpath(place, Path(folder).resolve())).as_posix()
     except ValueError:
-        return Path(path).name
+        return given.name
+
+
+def relative_pattern(text: str, folder: str | os.PathLike[str]) -> str:
+    """Give a path or pattern as seen from a folder; what is put before a pattern is no pattern."""
+    path = Path(text)
+    first = next((i for i, part in enumerate(path.parts) if set("*?[") & set(part)), None)
+    if first is None or path.exists():
+        return relative_path(text, folder)
+    start = relative_path(Path(*path.parts[:first]), folder)
+    return PurePosixPath(glob.escape(start), *path.parts[first:]).as_posix()
+
+
+def output_entry(path: str | os.PathLike[str], *, layer: str | None = None) -> dict[str, Any]:
+    """Give what the section ``outputs`` says of a file that is no raster."""
+    return {"sha256": file_sha256(path), "size": Path(path).stat().st_size, "layer": layer}
 
 
 def build_record(
@@ -65,12 +131,10 @@ def build_record(
     Parameters
     ----------
     sections : mapping
-        ``version``, ``question``, ``options``, ``crs`` (WKT), ``grid``, ``dem`` (list of ``path``,
-        ``size`` [bytes], ``sha256``), ``observer``, ``refraction``, ``geometry``, ``counts``,
-        ``areas_m2`` [m2], ``warnings``, ``outputs`` and whatever else belongs. ``format``,
-        ``libraries`` and ``cautions`` are added where missing.
+        The sections that `schema` describes. ``format``, ``format_version``, ``libraries``,
+        ``platform`` and ``cautions`` are added where missing.
     folder : path, optional
-        Folder the record will lie in; the paths of the elevation files become relative to it.
+        Folder the record will lie in; paths of input files become relative to it.
 
     Returns
     -------
@@ -81,22 +145,47 @@ def build_record(
     Raises
     ------
     ValueError
-        If a section is missing or of the wrong type: a mistake in the calling code.
+        If a section is missing or not as the schema says: a mistake in the calling code.
     """
     filled = {
         "format": RECORD_FORMAT,
+        "format_version": FORMAT_VERSION,
         "libraries": library_versions(),
+        "platform": platform_facts(),
         "cautions": CAUTIONS,
         **sections,
     }
     record: dict[str, Any] = _plain(filled)
+    wrong = _problem(record)
+    if wrong:
+        raise ValueError(wrong)
     if folder is not None:
-        for entry in record.get("dem", []):
-            entry["path"] = relative_path(entry["path"], folder)
-    problem = _problem(record)
-    if problem:
-        raise ValueError(problem)
+        _make_relative(record, folder)
     return record
+
+
+def _make_relative(record: dict[str, Any], folder: str | os.PathLike[str]) -> None:
+    """Write the paths of all inputs as seen from a folder, in the warnings too."""
+    moved: dict[str, str] = {}
+    for holder, key in _paths(record):
+        path = holder[key]
+        moved[path] = holder[key] = relative_pattern(path, folder)
+    for old in sorted(filter(os.path.isabs, moved), key=len, reverse=True):
+        record["warnings"] = [text.replace(old, moved[old]) for text in record["warnings"]]
+
+
+def _paths(record: dict[str, Any]) -> Iterator[tuple[Any, Any]]:
+    """Yield the object or list and the key under which each path of an input stands."""
+    options, heights = record["options"], record["heights"]
+    for entry in [*record["dem"], *(record["surface"] or {"files": []})["files"]]:
+        yield entry, "path"
+    for names in (options["dem"], options.get("surface") or []):
+        yield from ((names, index) for index in range(len(names)))
+    single = (options, "void_mask"), (options, "observers_file")
+    pair = heights.get("overlap") or {}
+    for holder, key in (*single, (pair, "first"), (pair, "second")):
+        if holder.get(key):
+            yield holder, key
 
 
 def write_record(path: str | os.PathLike[str], record: Mapping[str, Any]) -> None:
@@ -107,19 +196,8 @@ def write_record(path: str | os.PathLike[str], record: Mapping[str, Any]) -> Non
     OutputError
         If it cannot be written whole; nothing is left behind.
     """
-    target = Path(path)
-    text = json.dumps(_plain(record), indent=2, sort_keys=True, ensure_ascii=False) + "\n"
-    data = text.encode("utf-8", "backslashreplace")
-    try:
-        target.write_bytes(data)
-        if target.read_bytes() == data:
-            return
-        reason = "it does not read back as it was written"
-    except OSError as error:
-        reason = error.strerror or str(error)
-    target.unlink(missing_ok=True)
-    msg = f"{target}: the record cannot be written: {reason}; free some space or choose another"
-    raise OutputError(msg)
+    text = json.dumps(_plain(record), indent=2, sort_keys=True, ensure_ascii=False)
+    write_text(path, text + "\n")
 
 
 def read_record(path: str | os.PathLike[str]) -> dict[str, Any]:
@@ -133,24 +211,30 @@ def read_record(path: str | os.PathLike[str]) -> dict[str, Any]:
     Raises
     ------
     DataError
-        If it is missing, is no record of viewshed, or lacks a section.
+        If it is missing, is no record of viewshed, has another format version, or a section is
+        missing or not as the schema says. Keys that the schema does not name are let pass.
     """
     source = Path(path)
     if source.is_dir():
         source /= RECORD_NAME
     try:
-        record = json.loads(source.read_bytes())
+        record = json.loads(source.read_bytes(), parse_constant=_refuse_constant)
     except OSError as error:
         msg = f"{source}: the record cannot be read: {error.strerror or error}"
         raise DataError(msg) from error
-    except ValueError as error:
+    except (ValueError, RecursionError) as error:
         msg = f"{source}: is not JSON ({error}); run the map again"
         raise DataError(msg) from error
-    problem = _problem(record)
-    if problem:
-        msg = f"{source}: {problem}; run the map again"
+    wrong = _problem(record)
+    if wrong:
+        msg = f"{source}: {wrong}; run the map again"
         raise DataError(msg)
     return dict(record)
+
+
+def _refuse_constant(name: str) -> None:
+    msg = f"{name} is no number"
+    raise ValueError(msg)
 
 
 def mismatches(out_dir: str | os.PathLike[str]) -> list[str]:
@@ -182,14 +266,15 @@ def _problem(record: object) -> str | None:
     """Say in words why this is no record, or give None."""
     if not isinstance(record, dict) or record.get("format") != RECORD_FORMAT:
         return "is not a record of viewshed"
-    for name, kind in _SECTIONS.items():
-        if not isinstance(record.get(name), kind):
-            return f"the section {name!r} of the record is missing or not a {kind.__name__}"
-    for name, entry in record["outputs"].items():
-        if not is_plain_name(name) or not isinstance(entry, dict):
+    version = record.get("format_version", 1)
+    if version != FORMAT_VERSION:
+        return f"the record has format version {version!r}, this viewshed reads {FORMAT_VERSION}"
+    wrong = problem(record, schema())
+    if wrong:
+        return f"in the record {wrong}"
+    for name in record["outputs"]:
+        if not is_plain_name(name):
             return f"the record lists an output {name!r} that is not a file beside it"
-        if not isinstance(entry.get("sha256"), str):
-            return f"the record has no SHA-256 for {name!r}"
     return None
 
 
