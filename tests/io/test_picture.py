@@ -2,16 +2,18 @@
 
 import struct
 import zlib
-from dataclasses import replace
 
 import numpy as np
 import pytest
 from affine import Affine
 
 from viewshed.constants import CAUTIONS
+from viewshed.geodesy import crs_from_user, frame_of
 from viewshed.grid import Grid, PostMap
-from viewshed.io import _ground, _page, picture
+from viewshed.io import _ground, _page, _round, picture
+from viewshed.io._steps import step_colours
 from viewshed.places import Sector
+from viewshed.postmap import fit_post_map
 
 WORDS = picture.Words(
     question="from 20 m above ground at the observer to the ground everywhere, k = 0.13",
@@ -31,7 +33,18 @@ def flat_map(row0, col0, jacobian):
     )
 
 
-def scene(rows=120, cols=120, *, visible=None, elevation=None, jacobian=None, **changes):
+def scene(
+    rows=120,
+    cols=120,
+    *,
+    visible=None,
+    elevation=None,
+    jacobian=None,
+    name="observer",
+    range_m=5000.0,
+    sector=None,
+    **changes,
+):
     """Flat ground in 100 m cells, observer in the middle, everything hidden unless said."""
     jacobian = [[100.0, 0.0], [0.0, -100.0]] if jacobian is None else jacobian
     (a, b), (d, e) = jacobian
@@ -43,10 +56,9 @@ def scene(rows=120, cols=120, *, visible=None, elevation=None, jacobian=None, **
         "visible": np.zeros((rows, cols), np.uint8) if visible is None else visible,
         "grid": grid,
         "post_map": flat_map(row0, col0, jacobian),
-        "observers": [(x, y, "observer")],
-        "range_m": 5000.0,
         **changes,
     }
+    facts.setdefault("observers", [picture.Marker(x, y, name, range_m, sector)])
     return picture.Scene(**facts)
 
 
@@ -138,7 +150,7 @@ def test_shares_and_heights_of_blocks(monkeypatch):
     elevation = rng.random((23, 31), dtype=np.float32)
     elevation[(visible == 255) & (rng.random((23, 31)) < 0.5)] = np.nan
     for by, bx in [(1, 1), (4, 3), (1, 5), (7, 1), (40, 40)]:
-        shares, heights = _ground.blocks(visible, elevation, by, bx)
+        shares, heights = _ground.blocks(_ground.Kinds(visible), elevation, by, bx)
         for i in range(shares.shape[0]):
             for j in range(shares.shape[1]):
                 cut = np.s_[i * by : (i + 1) * by, j * bx : (j + 1) * bx]
@@ -251,10 +263,13 @@ LONG = picture.Words(
     ],
 )
 def test_no_text_is_cut_off_or_written_over_another(tmp_path, boxes, changes, words):
-    drawn = scene(**changes)
-    x, y, _ = drawn.observers[0]
-    named = replace(drawn, observers=[(x, y, "A lookout with quite a long name")])
-    picture.draw_map(tmp_path / "page.png", named, words, dpi=100)
+    drawn = scene(name="A lookout with quite a long name", **changes)
+    picture.draw_map(tmp_path / "page.png", drawn, words, dpi=100)
+    check_texts(boxes)
+
+
+def check_texts(boxes):
+    """Every text is on the page and clear of every other."""
     *texts, (_, _, _, width, height) = boxes
     assert len(texts) > 12
     for text, left, bottom, right, top in texts:
@@ -271,10 +286,8 @@ def test_no_text_is_cut_off_or_written_over_another(tmp_path, boxes, changes, wo
 
 
 def test_odd_characters_are_written_as_they_are_or_as_boxes(tmp_path, boxes):
-    drawn = scene()
-    x, y, _ = drawn.observers[0]
-    odd = replace(drawn, observers=[(x, y, "Übersicht $x^2$ \t東")])
-    picture.draw_map(tmp_path / "page.png", odd, WORDS, dpi=80)
+    drawn = scene(name="Übersicht $x^2$ \t東")
+    picture.draw_map(tmp_path / "page.png", drawn, WORDS, dpi=80)
     assert "Übersicht $x^2$  □" in [text for text, *_ in boxes]
 
 
@@ -294,9 +307,183 @@ def test_a_folder_that_is_not_there_is_an_os_error(tmp_path):
     ],
 )
 def test_rings_are_round_and_the_range_is_the_last(range_m, rings):
-    assert _page.ring_distances(range_m) == rings
+    assert _round.ring_distances(range_m) == rings
 
 
 @pytest.mark.parametrize(("room", "length"), [(7_300.0, 5_000.0), (10.0, 10.0), (0.19, 0.1)])
 def test_scale_bar_has_a_round_length(room, length):
-    assert _page.round_down(room) == length
+    assert _round.round_down(room) == length
+
+
+# --- several observers --------------------------------------------------------------------------
+
+
+def real_scene(places, *, count=None, crs="EPSG:32633", cell=100.0, **changes):
+    """Flat ground on a real grid of 120 by 120 cells, observers at rows and columns of it."""
+    wkt = crs_from_user(crs).to_wkt()
+    corner = (500_000.0, 4_600_000.0) if cell > 1 else (9.0, 47.0)
+    grid = Grid((120, 120), Affine(cell, 0, corner[0], 0, -cell, corner[1]), wkt)
+    markers = []
+    for i, (row, col, *more) in enumerate(places):
+        x, y = (float(v) for v in grid.xy(row, col))
+        options = {"name": f"Site {i + 1}", "range_m": 3000.0} | (more[0] if more else {})
+        markers.append(picture.Marker(x, y, **options))
+    facts = {
+        "elevation": np.zeros((120, 120), np.float32),
+        "visible": np.zeros((120, 120), np.uint8),
+        "grid": grid,
+        "post_map": fit_post_map(grid, 59.5, 59.5, range_m=30_000.0),
+        "observers": markers,
+        "count": count,
+        **changes,
+    }
+    return picture.Scene(**facts)
+
+
+@pytest.mark.parametrize(("crs", "cell"), [("EPSG:32633", 100.0), ("EPSG:4326", 0.001)])
+def test_each_range_is_a_true_circle_about_its_own_observer(crs, cell):
+    sector = Sector(30, 120)
+    drawn = real_scene([(20, 90), (100, 10, {"sector": sector})], crs=crs, cell=cell)
+    frame, middle = frame_of(drawn.grid.crs_wkt), drawn.post_map
+    for marker, rim in zip(drawn.observers, drawn.reach.outlines, strict=True):
+        arc = rim if marker.sector is None else rim[:, 1:-1]
+        bearing = np.arctan2(arc[0], arc[1])
+        ends = frame.direct(middle.lon, middle.lat, bearing, np.hypot(*arc))
+        start = frame.lonlat(marker.x, marker.y)
+        distance, back = frame.inverse(*start, *ends)
+        np.testing.assert_allclose(distance, 3000.0, atol=1e-3)
+        if marker.sector is not None:
+            np.testing.assert_allclose(np.degrees(back[[0, -1]]), [30, 120], atol=1e-3)
+            np.testing.assert_array_equal(rim[:, 0], drawn.reach.places[1])
+    near = drawn.post_map.en(20.0, 90.0)
+    np.testing.assert_allclose(drawn.reach.places[0], near, atol=1.0)
+
+
+def test_the_map_holds_all_ranges_within_the_grid():
+    middle = _ground.view_of(real_scene([(60, 60)]), 400, 400)
+    assert middle.width * middle.pixel == pytest.approx(6000, rel=0.1)
+    apart = _ground.view_of(real_scene([(10, 60), (110, 60)]), 400, 400)
+    assert apart.height * apart.pixel == pytest.approx(12_000, rel=0.1)
+    assert apart.width * apart.pixel == pytest.approx(6000, rel=0.2)
+
+
+def test_counts_are_drawn_in_the_colours_of_their_steps():
+    count = np.zeros((120, 120), np.uint16)
+    count[:, 60:] = np.repeat([1, 2, 3, 4, 6, 12], 20)[:, None]
+    visible = (count > 0).astype(np.uint8)
+    drawn = real_scene([(60, 60, {"range_m": 20_000.0})], count=count, visible=visible)
+    assert drawn.steps == [(1, 1), (2, 2), (3, 3), (4, 5), (6, 8), (9, 12)]
+    places = [(3000, 5000 - 2000 * i) for i in range(6)]
+    colours, _, _ = colours_at(drawn, [*places, (-3000, 0)])
+    np.testing.assert_allclose(colours[:6], step_colours(6), atol=0.02)
+    greys = [grey(c) for c in colours]
+    assert (np.diff(greys[:6]) < -0.05).all()
+    assert greys[6] > greys[0] + 0.15  # hidden ground is lighter than any step
+
+
+def test_steps_stay_apart_on_slopes():
+    light = np.array([[0.3, 1.0]], np.float32)
+    for steps in range(2, 7):
+        ramp, found = step_colours(steps), []
+        for i in range(steps):
+            shares = np.zeros((1, 2, steps + 4), np.float32)
+            shares[..., i] = 1
+            rgb = np.ones((1, 2, 3), np.float32)
+            _ground.colour(rgb, shares, light, 0, ramp)
+            found.append([grey(c) for c in rgb[0]])
+        dark, bright = np.array(found).T
+        assert (dark[:-1] > bright[1:]).all()  # each step in shade over the next in light
+
+
+def test_shares_of_steps_within_a_pixel_are_mixed():
+    rgb = np.ones((1, 1, 3), np.float32)
+    shares = np.array([[[0.5, 0.5, 0, 0, 0, 0]]], np.float32)
+    _ground.colour(rgb, shares, np.full((1, 1), 0.8, np.float32), 0, step_colours(2))
+    np.testing.assert_allclose(rgb[0, 0], step_colours(2).mean(axis=0), atol=0.02)
+
+
+def test_shares_of_blocks_with_a_count():
+    rng = np.random.default_rng(6)
+    count = rng.integers(0, 9, (23, 31)).astype(np.uint16)
+    visible = np.where(count > 0, 1, rng.choice([0, 2, 255], count.shape)).astype(np.uint8)
+    count[visible == 255] = 65535
+    steps = [(1, 1), (2, 3), (4, 5), (6, 8)]
+    kinds = _ground.Kinds(visible, count, steps)
+    shares, _ = _ground.blocks(kinds, np.zeros(count.shape, np.float32), 23, 31)
+    counts = [((count >= a) & (count <= b)).sum() for a, b in steps]
+    counts += [(visible == 2).sum(), (visible == 0).sum(), 0, (visible == 255).sum()]
+    assert shares[0, 0].tolist() == [int(np.ceil(255 * c / count.size)) for c in counts]
+
+
+ROW = [(60, 40 + 4 * i) for i in range(8)]
+
+
+@pytest.mark.parametrize(
+    "places",
+    [
+        [(30, 30), (90, 90)],
+        [(30, 30, {"range_m": 2000.0}), (80, 90, {"sector": Sector(200, 20)}), (90, 20)],
+        ROW,
+        [(60, 60, {"name": "One"}), (60, 60, {"name": "Other"}), (60, 60, {"name": "Third"})],
+        [(3 + 7 * (i // 10) * 2, 4 + 11 * (i % 10)) for i in range(60)],
+    ],
+)
+@pytest.mark.parametrize("words", [WORDS, LONG])
+def test_names_of_several_observers_cover_nothing(tmp_path, boxes, places, words):
+    count = np.tile(np.arange(120, dtype=np.uint16), (120, 1))
+    drawn = real_scene(places, count=count, visible=(count > 0).astype(np.uint8))
+    picture.draw_map(tmp_path / "page.png", drawn, words, dpi=100)
+    check_texts(boxes)
+    texts = {text for text, *_ in boxes}
+    if words is WORDS:
+        assert {marker.name for marker in drawn.observers} <= texts
+        assert f"{len(places)} observers" in texts
+    assert {"seen by so many observers", "1\u201320", "101\u2013119"} <= texts
+
+
+def test_ranges_that_differ_are_told(tmp_path, boxes):
+    places = [(30, 30, {"range_m": 2000.0}), (80, 80, {"range_m": 4000.0})]
+    picture.draw_map(tmp_path / "page.png", real_scene(places), WORDS, dpi=100)
+    assert {"2 km", "4 km", "range, 2 km to 4 km"} <= {text for text, *_ in boxes}
+
+
+def test_observers_that_have_no_name_show_their_number(tmp_path, boxes):
+    places = [(30, 30, {"name": "observer 1"}), (80, 80, {"name": "observer 2nd"})]
+    picture.draw_map(tmp_path / "page.png", real_scene(places), WORDS, dpi=100)
+    texts = {text for text, *_ in boxes}
+    assert {"1", "observer 2nd"} <= texts
+    assert "observer 1" not in texts
+
+
+@pytest.mark.parametrize(("number", "line"), [(300, 1), (1500, 0)])
+def test_of_many_observers_there_are_marks_alone(tmp_path, boxes, number, line):
+    rng = np.random.default_rng(2)
+    places = [(float(r), float(c)) for r, c in rng.uniform(5, 115, (number, 2))]
+    picture.draw_map(tmp_path / "page.png", real_scene(places), WORDS, dpi=100)
+    texts = [text for text, *_ in boxes]
+    assert f"{number} observers" in texts
+    assert texts.count("edge of all ranges, 3 km each") == line
+    assert not any(text and text.startswith("Site") for text in texts)
+
+
+def test_names_without_room_are_left_out_and_the_key_says_so(tmp_path, boxes):
+    places = [(60 + 0.1 * i, 60, {"name": f"A rather long name {i}"}) for i in range(90)]
+    picture.draw_map(tmp_path / "page.png", real_scene(places), WORDS, dpi=100)
+    check_texts(boxes)
+    texts = [text for text, *_ in boxes]
+    assert 5 < sum(text is not None and text.startswith("A rather") for text in texts) < 90
+    assert "90 observers, not all named" in texts
+
+
+def test_the_first_row_of_the_table_stands_out(tmp_path, boxes):
+    picture.draw_map(tmp_path / "page.png", scene(), WORDS, dpi=100)
+    height = {text: top - bottom for text, _, bottom, _, top in boxes}
+    assert height["12.3 km²"] > 1.15 * height["45.6 km²"]
+
+
+def test_several_observers_give_the_same_bytes(tmp_path):
+    drawn = [real_scene(ROW, count=np.ones((120, 120), np.uint16)) for _ in range(2)]
+    paths = [tmp_path / "a.png", tmp_path / "b.png"]
+    for path, one in zip(paths, drawn, strict=True):
+        picture.draw_map(path, one, WORDS, dpi=60)
+    assert paths[0].read_bytes() == paths[1].read_bytes()

@@ -1,11 +1,12 @@
 """What is under the ink of the map: the ground in its light and the classes laid over it.
 
-A `View` is a part of the observer's local plane in pixels. For each pixel the cells under it are
+A `View` is a part of the map's local plane in pixels. For each pixel the cells under it are
 found through the post map, summed in blocks, shaded and coloured.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -13,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from viewshed.constants import HIDDEN, UNRESOLVED, VISIBLE
+from viewshed.io._steps import Step, step_colours
 
 if TYPE_CHECKING:
     from viewshed.io.picture import Scene
@@ -68,10 +70,9 @@ def view_of(scene: Scene, width: int, height: int) -> View:
     rim_r = np.concatenate([edge_r, edge_r, np.full(33, -0.5), np.full(33, rows - 0.5)])
     rim_c = np.concatenate([np.full(33, -0.5), np.full(33, cols - 0.5), edge_c, edge_c])
     rim = scene.post_map.en(rim_r, rim_c)
-    east, north = _wedge(scene)
     sides = []
-    for reach, data in zip((east, north), rim, strict=True):
-        low, high = max(reach.min(), data.min()), min(reach.max(), data.max())
+    for (least, most), data in zip(scene.reach.box, rim, strict=True):
+        low, high = max(least, data.min()), min(most, data.max())
         sides.append([min(low, high), max(low, high)])
     long = max(high - low for low, high in sides)
     for side in sides:
@@ -108,9 +109,10 @@ def paint(scene: Scene, view: View) -> tuple[Rgb, frozenset[str]]:
     cell = np.hypot(*scene.post_map.jacobian)[::-1]
     fine = view.pixel / SUPERSAMPLE
     by, bx = (max(1, int(np.ceil(fine / size - 1e-6))) for size in cell)
-    counts, height = blocks(
-        scene.visible[top:bottom, left:end], scene.elevation[top:bottom, left:end], by, bx
-    )
+    cut = np.s_[top:bottom, left:end]
+    count = None if scene.count is None else scene.count[cut]
+    kinds = Kinds(scene.visible[cut], count, scene.steps)
+    counts, height = blocks(kinds, scene.elevation[cut], by, bx)
     steps = scene.post_map.jacobian * np.array([bx, by])
     light = _hillshade(height, steps)
     mixed = by * bx > 1 or fine > 0.75 * cell.min()
@@ -122,24 +124,10 @@ def paint(scene: Scene, view: View) -> tuple[Rgb, frozenset[str]]:
         col = (_spread(lat_col, right, here) - left + 0.5) / bx
         shares = _average(_nearest(counts, row, col)) / np.float32(255)
         shade = _average(_bilinear(light, row - 0.5, col - 0.5)[..., None])[..., 0]
-        found |= colour(rgb[first : first + BAND], shares, shade, first)
+        found |= colour(rgb[first : first + BAND], shares, shade, first, kinds.ramp)
     if mixed:
         found.add("mixed")
     return rgb, frozenset(found)
-
-
-def _wedge(scene: Scene) -> tuple[Floats, Floats]:
-    """Local coordinates of the outline of what is in reach, observers included."""
-    start, width = (0.0, 360.0)
-    if scene.sector is not None:
-        start, width = scene.sector.from_deg, scene.sector.width_deg
-    bearing = np.radians(start + np.linspace(0.0, width, 361))
-    x, y = (np.array([place[i] for place in scene.observers], float) for i in (0, 1))
-    own = scene.post_map.en(*scene.grid.rowcol(x, y))
-    return (
-        np.concatenate([scene.range_m * np.sin(bearing), np.ravel(own[0])]),
-        np.concatenate([scene.range_m * np.cos(bearing), np.ravel(own[1])]),
-    )
 
 
 def _index_lattice(scene: Scene, view: View) -> tuple[Floats, Floats, Floats, Floats]:
@@ -197,28 +185,74 @@ def _covered(scene: Scene, row: Floats, col: Floats) -> tuple[int, int, int, int
     return (top, left, bottom, end) if top < bottom and left < end else None
 
 
-#: Visible, unresolved and hidden are counted at once, 21 bits each in one whole number.
+class Kinds:
+    """What cells are told apart: steps of the count (or visible as one), unresolved, hidden.
+
+    Parameters
+    ----------
+    visible : numpy.ndarray, shape (rows, cols)
+        The visible layer.
+    count : numpy.ndarray, shape (rows, cols), optional
+        How many observers see each cell.
+    steps : sequence of (first, last)
+        Steps of the count.
+
+    Attributes
+    ----------
+    number : int
+        How many kinds there are.
+    ramp : numpy.ndarray or None
+        Colours of the steps; None for visible as one.
+    """
+
+    def __init__(
+        self,
+        visible: NDArray[np.uint8],
+        count: NDArray[np.uint16] | None = None,
+        steps: Sequence[Step] = (),
+    ) -> None:
+        self.visible, self.count = visible, count
+        self.ramp = step_colours(len(steps)) if steps else None
+        self.number = max(1, len(steps)) + 2
+        self._of_state = np.full(256, self.number, np.uint8)
+        self._of_state[[VISIBLE, UNRESOLVED, HIDDEN]] = [0, self.number - 2, self.number - 1]
+        self._of_count = np.zeros(1 << 16, np.uint8)
+        for i, (first, last) in enumerate(steps):
+            self._of_count[first : last + 1] = i
+
+    def rows(self, part: slice) -> NDArray[np.uint8]:
+        """Kinds of the cells of some rows; `number` where there is no answer."""
+        kind = self._of_state[self.visible[part]]
+        if self.count is not None:
+            seen = kind == 0
+            kind[seen] = self._of_count[self.count[part][seen]]
+        return kind
+
+
+#: Three kinds are counted at once, 21 bits each in one whole number.
 _SHIFTS = (0, 21, 42)
-_PACKED = np.zeros(256, np.uint64)
-_PACKED[[VISIBLE, UNRESOLVED, HIDDEN]] = [1 << shift for shift in _SHIFTS]
 
 
 def blocks(
-    visible: NDArray[np.uint8], elevation: NDArray[np.float32], by: int, bx: int
+    kinds: Kinds, elevation: NDArray[np.float32], by: int, bx: int
 ) -> tuple[NDArray[np.uint8], NDArray[np.float32]]:
-    """Shares (visible, unresolved, hidden, void, outside; 255 is all) and mean height of blocks."""
-    rows, cols = visible.shape
+    """Shares (of each kind, void, outside; 255 is all) and mean height of blocks."""
+    rows, cols = elevation.shape
     out_rows, out_cols = -(-rows // by), -(-cols // bx)
-    shares = np.zeros((out_rows, out_cols, 5), np.uint8)
+    shares = np.zeros((out_rows, out_cols, kinds.number + 2), np.uint8)
     heights = np.full((out_rows, out_cols), np.nan, np.float32)
     strip = max(1, STRIP_CELLS // (cols * by))
     lengths = [np.minimum(b, n - np.arange(0, n, b)) for n, b in ((rows, by), (cols, bx))]
+    packed = [np.zeros(256, np.uint64) for _ in range(0, kinds.number, 3)]
+    for i in range(kinds.number):
+        packed[i // 3][i] = 1 << _SHIFTS[i % 3]
     for first in range(0, out_rows, strip):
         part = slice(first * by, min(rows, (first + strip) * by))
         here = slice(first, min(out_rows, first + strip))
         cells = np.outer(lengths[0][here], lengths[1])
-        counts = _block_sums(_PACKED[visible[part]], by, bx)
-        counted = [(counts >> shift) & 0x1FFFFF for shift in _SHIFTS]
+        kind = kinds.rows(part)
+        sums = [_block_sums(table[kind], by, bx) for table in packed]
+        counted = [(sums[i // 3] >> _SHIFTS[i % 3]) & 0x1FFFFF for i in range(kinds.number)]
         ground = elevation[part]
         known = np.isfinite(ground)
         some = cells
@@ -226,10 +260,10 @@ def blocks(
             some = _block_sums(known.astype(np.uint32), by, bx)
             ground = np.where(known, ground, np.float32(0))
         counted += [cells - some, np.maximum(some - sum(c.astype(np.int64) for c in counted), 0)]
-        for layer, count in enumerate(counted):
-            shares[here, :, layer] = -(-255 * count.astype(np.int64) // cells)
-        sums = _block_sums(ground, by, bx)
-        heights[here] = np.where(some > 0, sums / np.maximum(some, 1), np.nan)
+        for layer, number in enumerate(counted):
+            shares[here, :, layer] = -(-255 * number.astype(np.int64) // cells)
+        total = _block_sums(ground, by, bx)
+        heights[here] = np.where(some > 0, total / np.maximum(some, 1), np.nan)
     return shares, heights
 
 
@@ -317,9 +351,17 @@ def tint(share: Floats) -> Floats:
     return np.where(share > 0, np.maximum(np.sqrt(share), np.float32(LEAST_TINT)), np.float32(0))
 
 
-def colour(rgb: Rgb, shares: Rgb, shade: NDArray[np.float32], first_row: int) -> set[str]:
-    """Fill a band of the page; tell which classes occur in it."""
-    seen, unsure, hidden, void, outside = np.moveaxis(shares, -1, 0)
+def colour(
+    rgb: Rgb, shares: Rgb, shade: NDArray[np.float32], first_row: int, ramp: Rgb | None = None
+) -> set[str]:
+    """Fill a band of the page; tell which classes occur in it.
+
+    With a ramp, the colours of steps, the light on the ground is held back so that it cannot turn
+    one step into the next.
+    """
+    steps = shares[..., :-4]
+    unsure, hidden, void, outside = np.moveaxis(shares[..., -4:], -1, 0)
+    seen = steps.sum(axis=-1)
     judged = seen + unsure + hidden
     any_judged = np.maximum(judged, np.float32(1e-6))
     y, x = np.ogrid[first_row : first_row + rgb.shape[0], : rgb.shape[1]]
@@ -330,14 +372,19 @@ def colour(rgb: Rgb, shares: Rgb, shade: NDArray[np.float32], first_row: int) ->
         strength = np.asarray(mask, np.float32)[..., None]
         rgb[:] = rgb * (1 - strength) + np.asarray(colour, np.float32) * strength
 
+    if ramp is None:
+        bare, ink = 0.50 + 0.47 * light, np.array(PLUM, np.float32) * (0.5 + 0.75 * light)
+    else:
+        mix = steps @ ramp / np.maximum(seen, np.float32(1e-6))[..., None]
+        bare, ink = 0.76 + 0.20 * light, mix * (0.88 + 0.15 * light)
     rgb[:] = PAPER
-    lay(outside > 0, 0.93 + 0.05 * light)
+    lay(outside > 0, (0.93 if ramp is None else 0.95) + 0.05 * light)
     lay((void > 0.5) & (judged < 0.5) & dot, DOT)
-    lay(judged > 0, (0.50 + 0.47 * light) * np.array([1.0, 0.995, 0.975], np.float32))
+    lay(judged > 0, bare * np.array([1.0, 0.995, 0.975], np.float32))
     unsure_tint = tint(unsure / any_judged)
     lay(unsure_tint, np.array(OCHRE, np.float32) * (0.82 + 0.2 * light).clip(0, 1))
     lay(unsure_tint * stripe, STRIPE)
-    lay(tint(seen / any_judged), np.array(PLUM, np.float32) * (0.5 + 0.75 * light))
+    lay(tint(seen / any_judged), ink)
     np.clip(rgb, 0, 1, out=rgb)
     kinds = {"unresolved": unsure, "void": void, "outside": outside}
     return {name for name, share in kinds.items() if bool((share > 0).any())}

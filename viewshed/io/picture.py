@@ -1,26 +1,57 @@
 """The page a person looks at first: ground, what is seen of it, and the question in words.
 
-The map is drawn in true local coordinates of the first observer (geodesic distance and true
-bearing), so north is up, the range is a circle and a ruler laid through the observer is right,
-whatever CRS, cell shape or rotation the grid has. Only this drawing is resampled, never a result.
+The map is drawn in true local coordinates about its middle (geodesic distance and true bearing), so
+north is up, the range is a circle and a ruler laid through the observer is right, whatever CRS,
+cell shape or rotation the grid has. Among several observers the middle is a place between them.
+Only this drawing is resampled, never a result.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from viewshed.constants import CAUTIONS
-from viewshed.io._page import PAGE_HEIGHT, PAGE_WIDTH, Page
+from viewshed.constants import CAUTIONS, VISIBLE
+from viewshed.io._page import Page
+from viewshed.io._reach import Reach, reach_of
+from viewshed.io._sheet import PAGE_HEIGHT, PAGE_WIDTH
+from viewshed.io._steps import Step, steps_of
 
 if TYPE_CHECKING:
     from viewshed.grid import Grid, PostMap
     from viewshed.places import Sector
+
+#: Rows whose counts are looked at at a time.
+STRIP_ROWS = 256
+
+
+@dataclass(frozen=True)
+class Marker:
+    """An observer on the map.
+
+    Parameters
+    ----------
+    x, y : float
+        Its place [CRS units].
+    name : str
+        Written beside it where there is room; nothing for "" and for a lone "observer".
+    range_m : float
+        Its range [m].
+    sector : Sector, optional
+        Bearings it looks over; None is all round.
+    """
+
+    x: float
+    y: float
+    name: str
+    range_m: float
+    sector: Sector | None = None
 
 
 @dataclass(frozen=True)
@@ -34,24 +65,40 @@ class Scene:
     visible : numpy.ndarray, shape (rows, cols)
         The visible layer: 1, 0, 2 or 255.
     grid : Grid
-        Grid of both arrays.
+        Grid of all arrays.
     post_map : PostMap
-        True local coordinates seen from the observer in the middle of the map.
-    observers : sequence of (x, y, name)
-        Places of the observers [CRS units]; the first is the one of `post_map`.
-    range_m : float
-        Range [m].
-    sector : Sector, optional
-        Bearings looked over; None is all round.
+        True local coordinates about the middle of the map, fitted over the whole grid: the one
+        observer, or a place among several.
+    observers : sequence of Marker
+        The observers, at least one.
+    count : numpy.ndarray, shape (rows, cols), optional
+        How many observers surely see each cell, 65535 for no data; where given, the map shows it
+        in steps.
     """
 
     elevation: NDArray[np.float32]
     visible: NDArray[np.uint8]
     grid: Grid
     post_map: PostMap
-    observers: Sequence[tuple[float, float, str]]
-    range_m: float
-    sector: Sector | None = None
+    observers: Sequence[Marker]
+    count: NDArray[np.uint16] | None = None
+
+    @cached_property
+    def reach(self) -> Reach:
+        """Places and outlines of the observers in the local plane."""
+        return reach_of(self)
+
+    @cached_property
+    def steps(self) -> list[Step]:
+        """Steps of the count that are told apart; none where there is no count."""
+        if self.count is None:
+            return []
+        cells = np.zeros(1 << 16, dtype=np.int64)
+        for first in range(0, self.count.shape[0], STRIP_ROWS):
+            part = slice(first, first + STRIP_ROWS)
+            seen = self.count[part][self.visible[part] == VISIBLE]
+            cells += np.bincount(seen, minlength=1 << 16)
+        return steps_of(cells)
 
 
 @dataclass(frozen=True)
@@ -69,7 +116,7 @@ class Words:
     crs_name : str
         Name of its CRS with the unit of its coordinates.
     summary : sequence of (label, value)
-        Rows of the short table.
+        Rows of the short table; the first stands out.
     cautions : sequence of str
         Sentences at the foot.
     made_with : str
@@ -111,17 +158,22 @@ def draw_map(path: str | Path, scene: Scene, words: Words, *, dpi: int = 200) ->
     Where several cells share a pixel its tint grows with the square root of their share, and is
     at least a quarter: a ridge one cell wide stays on the page (a linear share would fade it) and
     scattered single cells do not look like solid ground (as they would if any cell gave full
-    colour).
+    colour). Steps of a count are mixed in proportion within a pixel, and tinted alike.
     """
     import matplotlib
     from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
 
-    if scene.sector is not None and scene.sector.width_deg >= 360:
-        scene = replace(scene, sector=None)
+    whole = [
+        replace(m, sector=None) if m.sector is not None and m.sector.width_deg >= 360 else m
+        for m in scene.observers
+    ]
+    scene = replace(scene, observers=whole)
     with matplotlib.rc_context():
         matplotlib.rcdefaults()
         figure = Figure(figsize=(PAGE_WIDTH, PAGE_HEIGHT), dpi=dpi, facecolor="white")
         renderer: Any = FigureCanvasAgg(figure).get_renderer()  # type: ignore[no-untyped-call]
         Page(figure, renderer, dpi).compose(scene, words)
         figure.savefig(path, format="png", dpi=dpi, metadata={"Software": None})
+
+
