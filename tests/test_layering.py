@@ -18,17 +18,25 @@ LAYERS = {
     "constants": 0,
     "_jit": 1,
     "areas": 2,
+    "extent": 2,
     "atmosphere": 2,
     "geodesy": 2,
     "grid": 2,
     "places": 2,
+    "wording": 2,
     "postmap": 2,
     "kernels": 3,
     "wedges": 4,
     "visibility": 4,
+    "combine": 4,
+    "tally": 4,
+    "placing": 4,
     "io": 5,
+    "recording": 6,
     "result": 6,
+    "writing": 6,
     "api": 6,
+    "rerun": 6,
     "cli": 7,
     "__init__": 8,
     "__main__": 8,
@@ -42,7 +50,7 @@ LIBRARIES = {
     4: {"numpy", "scipy"},
     5: {
         "numpy", "affine", "rasterio", "geopandas", "pandas", "pyogrio", "shapely", "matplotlib",
-        "mpl_toolkits",
+        "mpl_toolkits", "llvmlite",
     },
     6: {"numpy", "affine"},
     7: {"click"},
@@ -131,7 +139,13 @@ def is_type_checking(node):
     return isinstance(node, ast.If) and "TYPE_CHECKING" in ast.dump(node.test)
 
 
-@pytest.mark.parametrize("words", [[], ["--help"], ["--version"], ["map", "--help"]])
+@pytest.mark.parametrize(
+    "words",
+    [
+        *([], ["--help"], ["--version"], ["map", "--help"], ["check", "--help"]),
+        *(["polygons", "--help"], ["rerun", "--help"]),
+    ],
+)
 def test_heavy_libraries_wait(words):
     call = f"""
 from contextlib import suppress

@@ -58,7 +58,10 @@ def test_a_run_tells_the_paths_and_the_table(dem, tmp_path):
     names = [path.rpartition("/")[2] for path in paths]
     assert names[0] == "map.png"
     assert sorted(names) == sorted(
-        ["map.png", "visible.tif", "clearance.tif", "needed_height.tif", "record.json"]
+        [
+            *("map.png", "visible.tif", "clearance.tif", "needed_height.tif"),
+            *("summary.csv", "record.json"),
+        ]
     )
     assert sorted(p.name for p in out.iterdir()) == sorted(names)
     for word in ("Visible", "Hidden", "k = 0.13 (K = 1.149)", "Time taken"):
@@ -76,7 +79,7 @@ def test_quiet_leaves_the_paths_only(dem, tmp_path):
     result = call(dem, *options)
     assert result.exit_code == 0, result.output
     assert result.stderr == ""
-    assert len(result.stdout.splitlines()) == 2
+    assert len(result.stdout.splitlines()) == 3
 
 
 def test_a_negative_longitude_is_an_option_value(tmp_path):

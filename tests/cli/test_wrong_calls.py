@@ -106,7 +106,7 @@ def test_help_teaches(flag):
         "What the values mean:",
         "2 unresolved",
         "K=4/3",
-        "--observer -71.5,42.1",
+        "--observer -68.85,42.0",
         "Who looks:",
         "Results:",
         "Not for",

@@ -12,8 +12,11 @@ from typing import Any
 
 import click
 
+from viewshed.cli.check import check_command
 from viewshed.cli.map import map_command
 from viewshed.cli.options import INTERRUPTED, Program
+from viewshed.cli.polygons import polygons_command
+from viewshed.cli.rerun import rerun_command
 
 #: Seconds a run has for leaving in good order after Ctrl-C.
 GRACE = 0.8
@@ -62,6 +65,9 @@ def cli() -> None:
 
 
 cli.add_command(map_command)
+cli.add_command(rerun_command)
+cli.add_command(check_command)
+cli.add_command(polygons_command)
 
 
 def main(args: list[str] | None = None) -> Any:

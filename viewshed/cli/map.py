@@ -1,24 +1,28 @@
-"""`viewshed map`: one observer, one elevation grid, everything in range."""
+"""`viewshed map`: what observers see of an elevation grid, everything in range."""
 
 from __future__ import annotations
 
 import time
+import warnings
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import click
 
+from viewshed.cli.grid import GRID_OPTIONS, check_grid_options, grid_options, terrain_of
 from viewshed.cli.options import (
+    AreaType,
     CrsType,
     FolderType,
     LayersType,
     LengthType,
+    NamedPointType,
     NameValueType,
-    PointType,
     Progress,
     RefractionType,
     SectionedCommand,
     SectorType,
+    columns,
     table,
     verbosity,
     verbosity_options,
@@ -32,12 +36,14 @@ from viewshed.constants import (
 )
 
 if TYPE_CHECKING:
+    from viewshed.io.elevation import Terrain
     from viewshed.places import Observer
+    from viewshed.result import MapResult
 
-HELP = """Map what can be seen from one place.
+HELP = """Map what can be seen from one place or from many.
 
-DEM is the elevation grid: one raster file, or several that form one mosaic of equal grids. Only
-what the range reaches is read.
+DEM is the elevation grid: a raster file, or several, or a folder or pattern of tiles that form one
+mosaic of equal grids. Only what the ranges reach is read.
 
 \b
 A worked example:
@@ -47,6 +53,7 @@ writes into the folder tower:
   map.png            the page to look at first
   visible.tif        what is seen
   needed_height.tif  how tall something must be in each cell to be seen
+  summary.csv        areas, distances and shares, a row an observer
   record.json        everything needed to run it again, with checksums
 
 \b
@@ -57,9 +64,15 @@ What the values mean:
   clearance      height of the target above the line of its horizon [m];
                  negative: hidden by that much
   needed-height  least height above ground at which something is seen [m]
+Of several observers a cell is visible if any sees it, else unresolved if it
+is for any; clearance is the greatest, needed height the least, and
+  count             how many surely see the cell (65535: no data)
+  count-unresolved  for how many it is unresolved
+  who               bit n - 1 set where observer n sees it, up to 32
 
 \b
-Lengths take a unit: 30km, 6ft, 2nmi; bare numbers are metres.
+Lengths take a unit: 30km, 6ft, 2nmi; bare numbers are metres. Areas too:
+2ha, 0.5km2; bare numbers are square metres.
 
 \b
 Refraction is one of
@@ -71,23 +84,35 @@ Refraction is one of
 \b
 More examples:
   A position in degrees, looking from north-west round to north-east:
-    viewshed map dem.tif --observer -71.5,42.1 --observer-crs EPSG:4326 \\
+    viewshed map dem.tif --observer -68.85,42.0 --observer-crs EPSG:4326 \\
         --sector 315,45 --out north
   From where people 1.7 m tall see the top of an 80 m mast (sight lines are
   the same both ways, so the top of the mast is the observer):
     viewshed map dem.tif --observer 512300,4650120 --eye-height 80 \\
         --target-height 1.7 --range 45km --out mast
+  How many of the turbines in a file are seen from where, with polygons,
+  over woods and buildings; columns of the file (name, eye_height, range,
+  ...) go before the options:
+    viewshed map tiles/ --observers turbines.gpkg --eye-height 150 \\
+        --target-height 2 --surface dsm.tif --layers visible,count \\
+        --polygons gpkg --out turbines
 
 Take care: the result is no better than the elevation grid, and trees and buildings count only if
-they are in it. Real air differs from the stated k, most of all near warm or cold ground. Not for
-navigation, flight safety or aiming.
+they are in it or in the surface. Real air differs from the stated k, most of all near warm or cold
+ground. Not for navigation, flight safety or aiming.
 """
 
 SECTIONS = {
-    "Who looks": ("observer", "observer_crs", "eye_height", "eye_elevation"),
+    "Who looks": ("observer", "observers", "observer_crs", "eye_height", "eye_elevation"),
     "At what": ("target_height", "range_m", "sector", "refraction"),
-    "Elevation grid": ("crs", "height_unit"),
-    "Results": ("out", "layers", "picture", "overwrite", "creation_options"),
+    "Elevation grid": (
+        *(*GRID_OPTIONS, "index"),
+        *("surface", "surface_crs", "surface_height_unit"),
+    ),
+    "Results": (
+        *("out", "layers", "each", "polygons", "min_patch", "picture", "stac", "overwrite"),
+        "creation_options",
+    ),
 }
 
 
@@ -96,18 +121,26 @@ SECTIONS = {
     cls=SectionedCommand,
     sections=SECTIONS,
     help=HELP,
-    short_help="Map what can be seen from one place.",
+    short_help="Map what can be seen from one place or many.",
 )
-@click.argument("dem", nargs=-1, required=True, metavar="DEM...")
+@grid_options
 @click.option(
     "--observer",
-    type=PointType(),
-    required=True,
-    metavar="X,Y",
-    help="Position: x east or longitude, then y north or latitude, in the CRS of the DEM.",
+    type=NamedPointType(),
+    multiple=True,
+    metavar="[NAME=]X,Y",
+    help="Position: x east or longitude, then y north or latitude, in the CRS of the DEM; can be "
+    "repeated.",
 )
 @click.option(
-    "--observer-crs", type=CrsType(), metavar="CRS", help="CRS of the position, like EPSG:4326."
+    "--observers",
+    type=click.Path(),
+    metavar="FILE",
+    help="Points in a vector file, or a CSV with columns x,y or lon,lat. Columns name, eye_height, "
+    "eye_elevation, target_height, range, bearing_from and bearing_to go before the options.",
+)
+@click.option(
+    "--observer-crs", type=CrsType(), metavar="CRS", help="CRS of the positions, like EPSG:4326."
 )
 @click.option(
     "--eye-height",
@@ -151,12 +184,26 @@ SECTIONS = {
     help=f"State of the air, see above. [default: survey, k = {SURVEY_K:g}]",
 )
 @click.option(
-    "--crs", type=CrsType(), metavar="CRS", help="CRS of a DEM that does not state its own."
+    "--surface",
+    type=click.Path(),
+    multiple=True,
+    metavar="DSM",
+    help="Surface that blocks sight (woods, buildings), while observers and targets stand on the "
+    "DEM; can be repeated for tiles.",
 )
 @click.option(
-    "--height-unit",
+    "--surface-crs", type=CrsType(), metavar="CRS", help="CRS of a surface that states none."
+)
+@click.option(
+    "--surface-height-unit",
     type=click.Choice(["m", "ft", "us-ft"]),
-    help="Unit of the DEM's heights, where the file does not say or says it wrong.",
+    help="Unit of the surface's heights, where the file does not say or says it wrong.",
+)
+@click.option(
+    "--index",
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="Where the headers of many tiles are kept between runs. [default: tile_index.json in DIR]",
 )
 @click.option(
     "--out",
@@ -169,9 +216,24 @@ SECTIONS = {
     "--layers",
     type=LayersType(),
     metavar="NAMES",
-    default="visible",
-    help=f"Layers to write, with commas between: {', '.join(LAYERS)}. [default: visible]",
+    help=f"Layers to write, with commas between: {', '.join(LAYERS)}. [default: visible, and "
+    "count for several observers]",
 )
+@click.option("--each", is_flag=True, help="Add what each observer sees: visible_NAME.tif.")
+@click.option(
+    "--polygons",
+    type=click.Choice(["shp", "gpkg", "fgb", "parquet", "none"]),
+    default="none",
+    help="Polygons of what is visible and unresolved. [default: none]",
+)
+@click.option(
+    "--min-patch",
+    type=AreaType(),
+    default="0",
+    metavar="AREA",
+    help="Leave out polygons smaller than this. [default: 0]",
+)
+@click.option("--stac", is_flag=True, help="Describe the results in a STAC item.")
 @click.option(
     "--picture",
     type=click.Choice(["png", "none"]),
@@ -196,17 +258,57 @@ SECTIONS = {
 @verbosity_options
 @click.pass_context
 def map_command(ctx: click.Context, /, **given: Any) -> None:
-    """Map what can be seen from one place."""
+    """Map what can be seen from one place or many."""
     from viewshed.io._atomic import check_out_dir
-    from viewshed.io.elevation import open_terrain
-    from viewshed.places import Target
 
     began, quiet = time.perf_counter(), verbosity(ctx) < 0
-    observer = _observer(given)
+    check_grid_options(given)
+    options = _creation_options(given)
+    observers = _observers(given)
     check_out_dir(given["out"], overwrite=given["overwrite"])
-    terrain = open_terrain(list(given["dem"]), crs=given["crs"], height_unit=given["height_unit"])
+    terrain = terrain_of(given, _index(given))
+    surface = _surface(given, terrain)
 
     from viewshed.api import map_visibility
+    from viewshed.places import Target
+
+    with Progress("Looking", hidden=quiet) as progress:
+        result = map_visibility(
+            terrain,
+            observers,
+            target=Target(given["target_height"]),
+            range_m=given["range_m"],
+            refraction=given["refraction"],
+            sector=given["sector"],
+            layers=given["layers"],
+            each=given["each"],
+            surface=surface,
+            threads=given["threads"],
+            progress=progress,
+        )
+    paths = result.write(
+        given["out"],
+        overwrite=given["overwrite"],
+        picture=given["picture"] == "png",
+        polygons=given["polygons"],
+        min_patch_m2=given["min_patch"],
+        stac=given["stac"],
+        creation_options=options,
+    )
+    _keep_index(given, terrain)
+    if not quiet:
+        _tell(result, time.perf_counter() - began)
+    for path in paths:
+        click.echo(str(path))
+
+
+#: From how many tiles on their headers are kept for the next run.
+_MANY_TILES = 64
+#: Most observers that the table on the terminal tells one by one.
+_MOST_TOLD = 20
+
+
+def _creation_options(given: dict[str, Any]) -> dict[str, str]:
     from viewshed.errors import InputError
     from viewshed.io.raster import checked_creation_options
 
@@ -215,33 +317,11 @@ def map_command(ctx: click.Context, /, **given: Any) -> None:
         checked_creation_options(options)
     except InputError as error:
         raise click.BadParameter(str(error), param_hint="'--co'") from None
-    with Progress("Looking", hidden=quiet) as progress:
-        result = map_visibility(
-            terrain,
-            observer,
-            target=Target(given["target_height"]),
-            range_m=given["range_m"],
-            refraction=given["refraction"],
-            sector=given["sector"],
-            layers=given["layers"],
-            threads=given["threads"],
-            progress=progress,
-        )
-    paths = result.write(
-        given["out"],
-        overwrite=given["overwrite"],
-        picture=given["picture"] == "png",
-        **({"creation_options": options} if options else {}),
-    )
-    if not quiet:
-        took = ("Time taken", f"{time.perf_counter() - began:.1f} s")
-        click.echo(table([*result.summary, took]), err=True)
-    for path in sorted(paths, key=lambda p: Path(p).suffix != ".png"):
-        click.echo(str(path))
+    return options
 
 
-def _observer(given: dict[str, Any]) -> Observer:
-    """Make the observer; both heights at once are a wrong call."""
+def _observers(given: dict[str, Any]) -> list[Observer]:
+    """Make the observers; both heights at once are a wrong call."""
     from viewshed.places import Observer
 
     height, elevation = given["eye_height"], given["eye_elevation"]
@@ -251,5 +331,61 @@ def _observer(given: dict[str, Any]) -> Observer:
             "other; give one of them"
         )
         raise click.UsageError(msg)
-    x, y = given["observer"]
-    return Observer(x, y, crs=given["observer_crs"], eye_height=height, eye_elevation=elevation)
+    if not (given["observer"] or given["observers"]):
+        msg = "no observer was given; name one with --observer X,Y or many with --observers FILE"
+        raise click.UsageError(msg)
+    eye = {"eye_height": height, "eye_elevation": elevation}
+    found = [
+        Observer(x, y, crs=given["observer_crs"], **({"name": name} if name else {}), **eye)
+        for name, x, y in given["observer"]
+    ]
+    if given["observers"]:
+        from viewshed.io.features import read_observers
+
+        found += read_observers(given["observers"], crs=given["observer_crs"], **eye)
+    return found
+
+
+def _index(given: dict[str, Any]) -> Path:
+    path: Path = given["index"] or given["out"] / "tile_index.json"
+    return path
+
+
+def _keep_index(given: dict[str, Any], terrain: Terrain) -> None:
+    """Keep the headers of many tiles; the result is whole without them."""
+    from viewshed.errors import OutputError, ViewshedWarning
+
+    if len(terrain.tiles) < _MANY_TILES:
+        return
+    try:
+        terrain.save_index(_index(given))
+    except OutputError as error:
+        told = f"{error}; the next run reads all headers again"
+        warnings.warn(told, ViewshedWarning, stacklevel=2)
+
+
+def _surface(given: dict[str, Any], terrain: Terrain) -> Any:
+    if not given["surface"]:
+        return None
+    from viewshed.io.surface import open_surface
+
+    return open_surface(
+        list(given["surface"]),
+        terrain,
+        crs=given["surface_crs"],
+        height_unit=given["surface_height_unit"],
+    )
+
+
+def _tell(result: MapResult, seconds: float) -> None:
+    """Say on standard error what came out."""
+    from viewshed.recording import bands_told, observer_table
+
+    click.echo(table([*result.summary, ("Time taken", f"{seconds:.1f} s")]), err=True)
+    if len(result.views) == 1:
+        click.echo(table(bands_told(result.views[0])), err=True)
+        return
+    rows = observer_table(result)
+    click.echo(columns(rows[: _MOST_TOLD + 1]), err=True)
+    if len(rows) > _MOST_TOLD + 1:
+        click.echo(f"and {len(rows) - _MOST_TOLD - 1} more in summary.csv", err=True)

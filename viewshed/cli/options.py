@@ -88,16 +88,20 @@ class LengthType(_Text):
         return metres
 
 
-class PointType(_Text):
-    """Position as X,Y."""
+class NamedPointType(_Text):
+    """Position as X,Y or NAME=X,Y."""
 
-    name = "x,y"
+    name = "[name=]x,y"
 
-    def read(self, text: str) -> tuple[float, float]:
-        """Read x and y."""
+    def read(self, text: str) -> tuple[str, float, float]:
+        """Read name (empty if there is none), x and y."""
         from viewshed.places import parse_point
 
-        return parse_point(text)
+        name, equals, point = text.rpartition("=")
+        if equals and not name.strip():
+            msg = f"observer {text!r} has no name before the '='; give it as NAME=X,Y or X,Y"
+            raise InputError(msg)
+        return (name.strip(), *parse_point(point))
 
 
 class SectorType(_Text):
@@ -161,6 +165,19 @@ class FolderType(_Text):
         """Make a path of the text."""
         if not text.strip():
             msg = "the folder for the results has no name; give one"
+            raise InputError(msg)
+        return Path(text)
+
+
+class PictureType(_Text):
+    """A file for a picture, which is always a PNG."""
+
+    name = "file"
+
+    def read(self, text: str) -> Path:
+        """Make a path of the text."""
+        if Path(text).suffix.lower() != ".png" or not Path(text).stem:
+            msg = f"the picture {text!r} would be a PNG; give a name that ends in .png"
             raise InputError(msg)
         return Path(text)
 
@@ -411,3 +428,30 @@ def table(rows: Sequence[tuple[str, str]]) -> str:
     """Set labels and values in two columns."""
     width = max((len(label) for label, _ in rows), default=0)
     return "\n".join(f"{label:<{width}}  {value}" for label, value in rows)
+
+
+def columns(rows: Sequence[Sequence[str]]) -> str:
+    """Set rows in columns, the first row a heading; numbers stand to the right."""
+    widths = [max(len(row[n]) for row in rows) for n in range(len(rows[0]))]
+    lines = []
+    for row in rows:
+        cells = [row[0].ljust(widths[0])]
+        cells += [cell.rjust(width) for cell, width in zip(row[1:], widths[1:], strict=True)]
+        lines.append("  ".join(cells).rstrip())
+    return "\n".join(lines)
+
+
+class AreaType(_Text):
+    """Area with a unit, 0 or more, read as square metres."""
+
+    name = "area"
+
+    def read(self, text: str) -> float:
+        """Read square metres from a text such as 2ha."""
+        from viewshed.places import parse_area
+
+        square_metres = parse_area(text)
+        if square_metres < 0.0:
+            msg = f"area {text!r} makes no sense here; give 0 or more, like 2ha, 0.5km2 or 900"
+            raise InputError(msg)
+        return square_metres
