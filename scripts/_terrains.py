@@ -34,6 +34,8 @@ class Scene:
         Post coordinates (row, col) of the observer from the elevation; the middle by default.
     cell : float
         Side of a cell [m].
+    cover : callable, optional
+        Surface (n, n) float32 [m] over an elevation; the ground itself where there is none.
     """
 
     name: str
@@ -42,6 +44,7 @@ class Scene:
     make: Callable
     place: Callable
     cell: float = 30.0
+    cover: Callable | None = None
 
 
 @functools.lru_cache(maxsize=1)
@@ -127,6 +130,15 @@ def voids(n):
     return z
 
 
+def woods(z):
+    """Surface over a ground: woods of 15 m in blocks of 8 by 8 posts, bare about the middle."""
+    n = z.shape[0]
+    trees = np.random.default_rng(SEED + 2).random((n // 8 + 1, n // 8 + 1)) < 0.3
+    trees[n // 16 - 1 : n // 16 + 2, n // 16 - 1 : n // 16 + 2] = False
+    cover = np.kron(trees, np.ones((8, 8), dtype=np.float32))[:n, :n]
+    return z + np.float32(15.0) * cover
+
+
 def middle(z):
     """Post in the middle."""
     return z.shape[0] // 2, z.shape[1] // 2
@@ -163,4 +175,5 @@ SCENES = (
     Scene("rough", "rough fractal, summit", 5.0, rough, middle),
     Scene("between", "rough, between posts", 5.0, rough, between),
     Scene("quarter", "rough, off centre", 5.0, rough, quarter),
+    Scene("woods", "woods over smooth ground", 20.0, smooth, middle, cover=woods),
 )

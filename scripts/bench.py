@@ -146,6 +146,7 @@ class Run:
     def __init__(self, scene, reach):
         self.scene, self.reach = scene, reach
         self.z = scene.make(2 * reach + 1)
+        self.surface = None if scene.cover is None else scene.cover(self.z)
         row, col = scene.place(self.z)
         self.map = post_map(row, col, scene.cell)
         self.copy = self.z.copy()  # written once, as the yardstick asks
@@ -158,6 +159,7 @@ class Run:
         return compute(
             self.z,
             self.map,
+            surface=self.surface,
             eye_height=self.scene.eye,
             refraction_k=K,
             range_m=self.reach * self.scene.cell,
@@ -271,7 +273,7 @@ def measure_walkers(sizes, checks):
 def measure_scene(scene, sizes, checks):
     """Rows of one terrain."""
     run, clock = Run(scene, sizes.range), Clock()
-    if not np.isnan(run.z).any():  # the walkers know no voids
+    if not np.isnan(run.z).any() and run.surface is None:  # walkers know no voids and no cover
         rows = run.rows(sizes.check_step)
         state = run.walkers().answer(rows, outward=False, bounded=True)
         checks[scene.name] = (int(np.count_nonzero(state != 255)), run.unlike(rows, state))

@@ -343,22 +343,22 @@ def make_places(elevation):
     Returns
     -------
     list of tuple
-        (name, kind, height [m], ground [m], x, y); height is the eye's above ground for a
+        (name, layer, height [m], ground [m], x, y); height is the eye's above ground for a
         lookout, the top's for a mast or turbine.
     """
     spots = [
-        ("Tirrow Spit", "lookout", 1.7, *cell_at(*SPIT[3])),
-        ("Carrowmel Edge", "lookout", 1.7, *summit(elevation, 30.4, 9.2, 0.4)),
-        ("Velm Hill", "mast", 60.0, *summit(elevation, 12.7, 3.8, 0.6)),
-        ("Dunnamarl", "mast", 45.0, *summit(elevation, 24.7, 34.5, 0.6)),
-        ("Great Pellow", "mast", 30.0, *summit(elevation, 10.1, 19.9, 0.6)),
+        ("Tirrow Spit", "lookouts", 1.7, *cell_at(*SPIT[3])),
+        ("Carrowmel Edge", "lookouts", 1.7, *summit(elevation, 30.4, 9.2, 0.4)),
+        ("Velm Hill", "masts", 60.0, *summit(elevation, 12.7, 3.8, 0.6)),
+        ("Dunnamarl", "masts", 45.0, *summit(elevation, 24.7, 34.5, 0.6)),
+        ("Great Pellow", "masts", 30.0, *summit(elevation, 10.1, 19.9, 0.6)),
     ]
     for i in range(8):
         row = cell_at(30.9 + 0.54 * i, 8.3 + 0.03 * i)
-        spots.append((f"Moorvane {i + 1}", "turbine", 150.0, *row))
+        spots.append((f"Moorvane {i + 1}", "turbines", 150.0, *row))
     return [
-        (name, kind, height, float(elevation[row, col]), *position(row, col))
-        for name, kind, height, row, col in spots
+        (name, layer, height, float(elevation[row, col]), *position(row, col))
+        for name, layer, height, row, col in spots
     ]
 
 
@@ -375,16 +375,17 @@ def write_elevation(path, elevation):
 
 
 def write_places(path, places):
-    """Write the places as one GeoPackage layer, without the date of today in it."""
+    """Write the places as layers of a GeoPackage, without the date of today in it."""
     pyogrio.set_gdal_config_options({"OGR_CURRENT_DATE": "2000-01-01T00:00:00.000Z"})
-    names, kinds, heights, grounds, xs, ys = zip(*places, strict=True)
-    frame = geopandas.GeoDataFrame(
-        {"name": names, "kind": kinds, "height": heights, "ground": grounds},
-        geometry=geopandas.points_from_xy(xs, ys),
-        crs=CRS,
-    )
     path.unlink(missing_ok=True)
-    frame.to_file(path, layer="places", driver="GPKG")
+    for layer in dict.fromkeys(place[1] for place in places):
+        names, _, heights, _, xs, ys = zip(*(p for p in places if p[1] == layer), strict=True)
+        frame = geopandas.GeoDataFrame(
+            {"name": names, "eye_height": heights},
+            geometry=geopandas.points_from_xy(xs, ys),
+            crs=CRS,
+        )
+        frame.to_file(path, layer=layer, driver="GPKG")
 
 
 def main():

@@ -9,13 +9,17 @@ import sys
 
 import geopandas
 import numpy as np
+import pandas
 import pytest
 import rasterio
+
+from viewshed.io.features import read_observers
 
 EARTH_RADIUS = 6_371_000.0
 K = 0.13
 #: Bearings from the low lookout over open water to the far shore [degrees].
 BEARINGS = range(53, 62)
+LAYERS = ("lookouts", "masts", "turbines")
 
 
 @pytest.fixture(scope="module")
@@ -25,8 +29,16 @@ def terrain(root):
 
 
 @pytest.fixture(scope="module")
-def places(root):
-    return geopandas.read_file(root / "sample_dem" / "places.gpkg").set_index("name")
+def places(root, terrain):
+    found = read_places(root / "sample_dem" / "places.gpkg")
+    x, y = found.geometry.x.to_numpy(), found.geometry.y.to_numpy()
+    return found.assign(ground=heights(terrain, x, y))
+
+
+def read_places(path):
+    """All layers in one table, with a column that names the layer."""
+    layers = [geopandas.read_file(path, layer=n).assign(kind=n) for n in LAYERS]
+    return pandas.concat(layers).set_index("name")
 
 
 def heights(terrain, x, y):
@@ -50,7 +62,7 @@ def profile(terrain, place, bearing, curved=True):
     rim = 16
     inside = (x > west + rim) & (x < east - rim) & (y > south + rim) & (y < north - rim)
     s, h = s[inside], heights(terrain, x[inside], y[inside])
-    eye = float(heights(terrain, np.array([x0]), np.array([y0]))[0]) + place.height
+    eye = float(heights(terrain, np.array([x0]), np.array([y0]))[0]) + place.eye_height
     drop = (1 - K) * s**2 / (2 * EARTH_RADIUS) if curved else 0.0
     slope = (h - eye - drop) / s
     horizon = np.concatenate([[-np.inf], np.maximum.accumulate(slope)[:-1]])
@@ -98,13 +110,11 @@ def test_page_says_that_it_is_invented(root):
     assert "invented" in first
 
 
-def test_places(terrain, places):
-    assert places.kind.value_counts().to_dict() == {"turbine": 8, "mast": 3, "lookout": 2}
+def test_places(places):
+    assert places.kind.value_counts().to_dict() == {"turbines": 8, "masts": 3, "lookouts": 2}
     assert places.crs.to_epsg() == 32732
-    ground = heights(terrain, places.geometry.x.to_numpy(), places.geometry.y.to_numpy())
-    assert np.allclose(ground, places.ground)
     assert (places.ground > 0).all()
-    turbines = places[places.kind == "turbine"].geometry
+    turbines = places[places.kind == "turbines"].geometry
     steps = np.hypot(np.diff(turbines.x), np.diff(turbines.y))
     assert steps.min() > 400
     assert steps.max() < 650
@@ -112,7 +122,7 @@ def test_places(terrain, places):
 
 def test_low_lookout_stands_about_three_metres_above_the_sea(places):
     low = places.loc["Tirrow Spit"]
-    assert low.ground + low.height == pytest.approx(3.0, abs=0.1)
+    assert low.ground + low.eye_height == pytest.approx(3.0, abs=0.1)
 
 
 @pytest.mark.parametrize("bearing", BEARINGS)
@@ -128,7 +138,7 @@ def test_curve_hides_the_foot_of_the_far_shore(terrain, places, bearing):
     hills = seen & (s > s[shore])
     assert h[hills].max() > 100
     distance = s[hills][0]
-    horizon = np.sqrt(2 * EARTH_RADIUS * (low.ground + low.height) / (1 - K))
+    horizon = np.sqrt(2 * EARTH_RADIUS * (low.ground + low.eye_height) / (1 - K))
     hidden = (1 - K) * (distance - horizon) ** 2 / (2 * EARTH_RADIUS)
     assert h[hills][0] >= hidden - 1.0
 
@@ -141,10 +151,13 @@ def test_on_a_flat_earth_the_foot_would_be_seen(terrain, places, bearing):
     assert seen[foot].any()
 
 
-def test_demo_stands_at_the_high_lookout(places, load_script):
-    high = places.loc["Carrowmel Edge"].geometry
-    x, y = map(float, load_script("demo").OBSERVER.split(","))
-    assert (x, y) == (high.x, high.y)
+def test_demo_looks_from_the_turbines(places, load_script):
+    path, _, layer = load_script("demo").OBSERVERS.rpartition(":")
+    found = read_observers(f"{path}:{layer}")
+    turbines = places[places.kind == "turbines"]
+    assert [(one.name, one.x, one.y) for one in found] == [
+        (name, point.x, point.y) for name, point in turbines.geometry.items()
+    ]
 
 
 @pytest.mark.slow
@@ -154,7 +167,7 @@ def test_made_again_it_is_the_same(root, terrain, places, tmp_path):
     with rasterio.open(tmp_path / "elevation.tif") as again:
         assert np.abs(again.read(1) - terrain[0]).max() <= 0.125
         assert again.transform == terrain[1].transform
-    fresh = geopandas.read_file(tmp_path / "places.gpkg").set_index("name")
+    fresh = read_places(tmp_path / "places.gpkg")
     assert fresh.geometry.equals(places.geometry)
 
 

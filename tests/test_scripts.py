@@ -220,6 +220,7 @@ def test_demo_table(load_script):
                     "y": 2.0,
                     "distance_m": 29990.0,
                     "bearing_deg": 7.25,
+                    "observer": "Mast",
                 },
                 "refraction": {"k": 0.13, "K": 1 / 0.87, "m": 0.065, "origin": "survey"},
             },
@@ -227,7 +228,7 @@ def test_demo_table(load_script):
         )
     )
     assert rows["visible ground"] == "1,500.0 km2"
-    assert rows["farthest visible point"] == "29.99 km off, bearing 007.2, at 1,2"
+    assert rows["farthest visible point"] == "29.99 km from Mast, bearing 007.2"
     assert rows["refraction"] == "k = 0.13 (K = 1.149)"
 
 
