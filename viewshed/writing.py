@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 from viewshed import geodesy
 from viewshed._version import __version__
-from viewshed.constants import COUNT_NODATA, NODATA
+from viewshed.constants import COUNT_NODATA, HIDDEN, NODATA, UNRESOLVED, VISIBLE
 from viewshed.errors import InputError, OutputError
 from viewshed.io._atomic import RESULT_NAMES, check_out_dir, staged
 from viewshed.io._files import write_text
@@ -53,6 +53,8 @@ _BANDS: dict[str, tuple[str, str, float | None, str]] = {
     ),
     "who": ("bit n - 1 for observer n that surely sees the cell", "", None, "nearest"),
 }
+#: Colours of the states in programs that show the raster: the page's plum, and greys apart from it.
+_STATE_COLOURS = {VISIBLE: (107, 41, 135), HIDDEN: (226, 224, 220), UNRESOLVED: (240, 190, 90)}
 _CAUTION = "A model of the terrain it was given. Not for navigation or flight safety."
 
 
@@ -167,6 +169,7 @@ def _raster(
         unit=unit,
         tags=tags,
         overview=overview,
+        colours=_STATE_COLOURS if layer == "visible" else None,
         creation_options=wanted.creation_options,
     )
     return {**written, "layer": layer}

@@ -160,6 +160,19 @@ def test_overviews(tmp_path):
             assert set(np.unique(file.read(1))) <= value
 
 
+def test_states_have_colours_in_every_copy(tmp_path):
+    array, path = states((1100, 900)), tmp_path / "v.tif"
+    colours = {0: (226, 224, 220), 1: (107, 41, 135), 2: (240, 190, 90)}
+    asked = {"nodata": 255, "colours": colours, "overview": "mode", **SAID}
+    write_cog(path, array, a_grid(array.shape), **asked)
+    for level in (None, 0):
+        with rasterio.open(path, **({} if level is None else {"overview_level": level})) as file:
+            found = file.colormap(1)
+            assert {value: found[value][:3] for value in colours} == colours
+            assert set(np.unique(file.read(1)).tolist()) == {0, 1, 2, 255}
+            assert file.nodata == 255
+
+
 def test_tags_get_the_prefix(tmp_path):
     array = states((9, 9))
     tags = {"k": "0,13 = ä\nsecond line", "VIEWSHED_A": '{"x": "<&>"}', "TIFFTAG_SOFTWARE": "s 1"}

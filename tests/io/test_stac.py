@@ -364,7 +364,7 @@ def test_all_round_the_earth(west):
 
 def test_another_world():
     moon = geodesy.crs_from_user("+proj=longlat +a=1737400 +b=1737400").to_wkt()
-    with pytest.raises(InputError, match="no way leads from CRS .* to 'WGS 84"):
+    with pytest.raises(InputError, match=r"no way leads from CRS .* to 'WGS 84"):
         footprint(Grid((3, 3), Affine(1, 0, 0, 0, -1, 0), moon))
 
 

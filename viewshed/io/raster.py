@@ -20,6 +20,7 @@ import rasterio.shutil
 from numpy.typing import NDArray
 from rasterio._err import CPLE_BaseError
 from rasterio.crs import CRS
+from rasterio.enums import ColorInterp
 from rasterio.env import getenv, hasenv
 from rasterio.errors import CRSError, RasterioError
 from rasterio.windows import Window
@@ -28,6 +29,8 @@ from viewshed import geodesy
 from viewshed.errors import InputError, OutputError
 from viewshed.grid import Grid
 from viewshed.io._atomic import file_sha256
+
+Colour = tuple[int, int, int]
 
 BLOCK = 512
 #: Block cache that the raster library may use [bytes].
@@ -106,6 +109,7 @@ def write_cog(  # noqa: PLR0913 - path, cells, place, and what the file says of 
     unit: str,
     tags: Mapping[str, str],
     overview: str = "nearest",
+    colours: Mapping[int, Colour] | None = None,
     creation_options: Mapping[str, str] | None = None,
 ) -> dict[str, Any]:
     """Write an array as a Cloud Optimized GeoTIFF and prove that it is whole.
@@ -128,6 +132,8 @@ def write_cog(  # noqa: PLR0913 - path, cells, place, and what the file says of 
         Tags of the file; ``VIEWSHED_`` is put before a name that lacks it.
     overview : {"nearest", "mode"}, optional
         How the coarser copies for display are made.
+    colours : mapping of int to (red, green, blue), optional
+        Colour of each value of a uint8 array, 0 to 255 each, for programs that show it.
     creation_options : mapping of str to str, optional
         Options of the COG driver that replace ours, one of `CREATION_OPTIONS`.
 
@@ -152,7 +158,7 @@ def write_cog(  # noqa: PLR0913 - path, cells, place, and what the file says of 
         raise ValueError(msg)
     prefix = f".{final.name}-{os.getpid()}-{uuid.uuid4().hex[:8]}-"
     draft, made = (final.with_name(prefix + name) for name in ("draft.tif", "cog.tif"))
-    facts = _Facts(nodata, description, unit, tags, _horizontal_wkt(grid))
+    facts = _Facts(nodata, description, unit, tags, _horizontal_wkt(grid), colours)
     try:
         with _quiet_stderr(), gdal_env():
             _write_draft(draft, array, grid, facts)
@@ -187,13 +193,20 @@ class _Facts:
     """What a file says besides its cells."""
 
     def __init__(
-        self, nodata: float | None, description: str, unit: str, tags: Mapping[str, str], wkt: str
+        self,
+        nodata: float | None,
+        description: str,
+        unit: str,
+        tags: Mapping[str, str],
+        wkt: str,
+        colours: Mapping[int, Colour] | None,
     ) -> None:
         self.nodata = nodata
         self.description = description
         self.unit = unit
         self.tags = {_tag_name(name): str(value) for name, value in tags.items()}
         self.wkt = wkt
+        self.colours = dict(colours or {})
 
 
 def _tag_name(name: str) -> str:
@@ -226,6 +239,8 @@ def _write_draft(path: Path, array: NDArray[Any], grid: Grid, facts: _Facts) -> 
         file.update_tags(**facts.tags)
         file.set_band_description(1, facts.description)
         file.set_band_unit(1, facts.unit)
+        if facts.colours:
+            file.write_colormap(1, facts.colours)
         for first, count in _strips(grid.rows):
             window = Window(0, first, grid.cols, count)
             file.write(np.ascontiguousarray(array[first : first + count]), 1, window=window)
@@ -335,10 +350,19 @@ def _compare_facts(file: Any, array: NDArray[Any], grid: Grid, facts: _Facts) ->
         wrong.append("coordinate reference system")
     if (file.descriptions[0] or "") != facts.description or (file.units[0] or "") != facts.unit:
         wrong.append("band description or unit")
+    if facts.colours and not _has_colours(file, facts.colours):
+        wrong.append("colours")
     wrong += [f"tag {name}" for name, value in facts.tags.items() if tags.get(name) != value]
     if wrong:
         msg = f"the {', '.join(wrong)} cannot be kept in a GeoTIFF or did not read back"
         raise OutputError(msg)
+
+
+def _has_colours(file: Any, colours: Mapping[int, Colour]) -> bool:
+    if file.colorinterp[0] != ColorInterp.palette:
+        return False
+    found = file.colormap(1)
+    return all(found[value][:3] == colour for value, colour in colours.items())
 
 
 def _precision(grid: Grid) -> float:
