@@ -361,6 +361,11 @@ def _read(terrain: Terrain, surface: Surface | None, window: Window) -> tuple[_H
             over = surface.read(*window)
             median = compare(over, reading.elevation)
     notes = [str(w.message) for w in caught if issubclass(w.category, ViewshedWarning)]
+    if terrain.void_height is not None and not reading.voids_set:
+        notes.append(
+            f"the voids were stated to be {terrain.void_height.height:g} m and none was found in "
+            "range (and in the mask, if there is one)"
+        )
     facts: dict[str, Any] = {
         "voids_set": reading.voids_set,
         "undeclared_voids": reading.undeclared_voids,
@@ -403,13 +408,13 @@ def _notes(placed: list[Placed], views: list[View]) -> list[str]:
     notes = []
     past = [one for one in placed if one.past]
     if past:
-        whose = "the range" if len(placed) == 1 else f"the range of {len(past)} observers"
         if len(placed) == 1:
-            whose += f" of {told_length(past[0].range_m)}"
-        verb = "reaches" if len(placed) == 1 else "reach"
-        notes.append(
-            f"{whose} {verb} past the elevation grid; what lies beyond is not in the result"
-        )
+            whose = f"the range of {told_length(past[0].range_m)} reaches"
+        elif len(past) == 1:
+            whose = f"the range of {past[0].observer.name!r} reaches"
+        else:
+            whose = f"the ranges of {len(past)} observers reach"
+        notes.append(f"{whose} past the elevation grid; what lies beyond is not in the result")
     tall = [
         view
         for view in views

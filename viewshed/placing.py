@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
@@ -64,17 +65,30 @@ def named(observers: Observer | Sequence[Observer]) -> list[Observer]:
     Raises
     ------
     InputError
-        If there is none or there are more than a count can hold.
+        If there is none, there are more than a count can hold, one is no `Observer`, or two have
+        the same name.
     """
-    found = [observers] if isinstance(observers, Observer) else list(observers)
+    try:
+        found = [observers] if isinstance(observers, Observer) else list(observers)
+    except TypeError:
+        found = [observers]  # type: ignore[list-item]
     if not found:
         msg = "no observer was given; name at least one"
         raise InputError(msg)
     if len(found) > MOST_OBSERVERS:
         msg = f"{len(found)} observers are more than one map holds; give at most {MOST_OBSERVERS}"
         raise InputError(msg)
+    for one in found:
+        if not isinstance(one, Observer):
+            msg = f"{one!r} is no observer; make it with viewshed.Observer(x, y)"
+            raise InputError(msg)
     if len(found) == 1:
         return found
+    named_ones = [one.name for one in found if one.name != "observer"]
+    twice = next((name for name, count in Counter(named_ones).items() if count > 1), None)
+    if twice is not None:
+        msg = f"two observers are called {twice!r}; names tell results apart, so give each its own"
+        raise InputError(msg)
     return [
         replace(one, name=f"observer {n}") if one.name == "observer" else one
         for n, one in enumerate(found, 1)
@@ -172,9 +186,26 @@ def _outside(
         )
     left, bottom, right, top = (told_number(v) for v in grid.bounds)
     text = f"{who} is outside the elevation grid (x {left} to {right}, y {bottom} to {top}): "
+    if observer.crs is None and _looks_like_degrees(grid, observer):
+        return text + "it looks like longitude and latitude; if so, add --observer-crs EPSG:4326"
     if _is_swapped(grid, observer):
         return text + "with its two coordinates swapped it lies inside; x or longitude comes first"
     return text + "move it, add tiles, or say in which CRS it is given"
+
+
+def _looks_like_degrees(grid: Grid, observer: Observer) -> bool:
+    """Tell whether a position read as longitude and latitude lies in the grid."""
+    return abs(observer.x) <= 360.0 and abs(observer.y) <= 90.0 and not geodesy.frame_of(
+        grid.crs_wkt
+    ).is_lonlat and _is_inside_as(grid, replace(observer, crs="EPSG:4326"))
+
+
+def _is_inside_as(grid: Grid, observer: Observer) -> bool:
+    try:
+        x, y = _in_grid_crs(grid, observer, observer.x, observer.y)
+        return _inside(grid, *geodesy.post_position(grid, x, y))
+    except InputError:
+        return False
 
 
 def _is_swapped(grid: Grid, observer: Observer) -> bool:

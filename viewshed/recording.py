@@ -104,6 +104,9 @@ def _surface(result: MapResult) -> dict[str, Any] | None:
         return None
     return {
         "method": surface.method,
+        "metres_per_unit": surface.own.height_factor,
+        "unit_from": surface.own.height_unit_origin,
+        "datum": surface.own.datum,
         "median_over_ground_m": result.inputs.median_over_ground,
         "files": result.inputs.files[1],
     }

@@ -314,7 +314,7 @@ class MapResult:
         far = self.farthest_visible
         if far is not None:
             told = f"{told_distance(far['distance_m'])} off at {far['bearing_deg']:.0f} degrees"
-            rows.append(("Farthest visible", told + (f" from {far['observer']}" if many else "")))
+            rows.append(("Farthest visible", told + (f" from {_short(far)}" if many else "")))
         rows.append(("Refraction", self.refraction.describe()))
         return [*rows, *self._ground_rows()]
 
@@ -327,6 +327,8 @@ class MapResult:
             median = self.inputs.median_over_ground
             told = "" if median is None else f", {median:.1f} m over the ground in the median"
             rows.append(("Surface", f"{grid_name(surface)} ({surface.method}){told}"))
+            if surface.own.height_unit_origin == "assumed metres":
+                rows.append(("Surface heights", "in metres, as assumed"))
         if self.terrain.height_unit_origin == "assumed metres":
             rows.append(("Heights", "in metres, as assumed"))
         void_height = self.terrain.stated.get("void_height_m")
@@ -422,6 +424,12 @@ class MapResult:
             creation_options=dict(creation_options or {}),
         )
         return write_result(self, out_dir, overwrite=overwrite, wanted=wanted)
+
+
+def _short(farthest: dict[str, Any]) -> str:
+    """Name of the observer of a farthest cell, short enough for a table."""
+    name = str(farthest["observer"])
+    return name if len(name) <= 24 else f"{name[:16].rstrip()}\u2026{name[-6:].lstrip()}"
 
 
 def grid_name(grid: Terrain | Surface) -> str:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import logging
 import math
+import warnings
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -10,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 from viewshed import geodesy
 from viewshed._version import __version__
 from viewshed.constants import COUNT_NODATA, HIDDEN, NODATA, UNRESOLVED, VISIBLE
-from viewshed.errors import InputError, OutputError
+from viewshed.errors import InputError, OutputError, ViewshedWarning
 from viewshed.io._atomic import RESULT_NAMES, check_out_dir, staged
 from viewshed.io._files import write_text
 from viewshed.io._names import file_names
@@ -19,6 +21,7 @@ from viewshed.io.record import build_record, output_entry, write_record
 from viewshed.postmap import fit_post_map
 from viewshed.recording import summary_csv
 from viewshed.result import grid_name
+from viewshed.wording import told_area
 
 if TYPE_CHECKING:
     import os
@@ -30,6 +33,8 @@ if TYPE_CHECKING:
     from viewshed.io._atomic import Stage
     from viewshed.io.polygons import Patches
     from viewshed.result import MapResult, View
+
+_log = logging.getLogger("viewshed")
 
 #: Formats that polygons can have.
 POLYGON_FORMATS = ("shp", "gpkg", "fgb", "parquet")
@@ -203,12 +208,23 @@ def _polygons(result: MapResult, stage: Stage, wanted: Wanted) -> dict[str, Any]
     patches = patches_of(
         result, states=("visible", "unresolved"), min_patch_m2=wanted.min_patch_m2
     )
+    _tell_of_dropped(patches, wanted.min_patch_m2)
     made = write_polygons(stage.folder / "visible", patches.frame, wanted.polygons)
     facts = {"dropped_patches": patches.dropped, "dropped_m2": round(patches.dropped_m2, 1)}
     return {
         path.name: {**output_entry(stage.path(path.name), layer="polygons"), **facts}
         for path in made
     }
+
+
+def _tell_of_dropped(patches: Patches, least: float) -> None:
+    for state, (count, area) in patches.left_out.items():
+        if count:
+            small = told_area(area, small=area < 1e5)
+            _log.info("Polygons: %s, left out %s in %s patches", state, small, f"{count:,}")
+    if patches.dropped and not len(patches.frame):
+        msg = f"every polygon is smaller than {least:g} m2, so none is left; give a smaller area"
+        warnings.warn(msg, ViewshedWarning, stacklevel=2)
 
 
 def _picture(result: MapResult, stage: Stage) -> dict[str, Any]:
@@ -224,6 +240,7 @@ def draw_page(result: MapResult, path: Path) -> None:
     crs = geodesy.crs_from_user(result.grid.crs_wkt)
     unit = crs.axis_info[0].unit_name if crs.axis_info else ""
     single = len(result.views) == 1
+    names = _page_names([view.observer.name for view in result.views])
     scene = Scene(
         elevation=result.elevation,
         visible=result.visible,
@@ -232,11 +249,11 @@ def draw_page(result: MapResult, path: Path) -> None:
         observers=[
             Marker(
                 *view.position,
-                name=view.observer.name,
+                name=name,
                 range_m=view.placed.range_m,
                 sector=view.placed.sector,
             )
-            for view in result.views
+            for view, name in zip(result.views, names, strict=True)
         ],
         count=None if single else result.count,
     )
@@ -249,6 +266,21 @@ def draw_page(result: MapResult, path: Path) -> None:
         made_with=f"viewshed {__version__}",
     )
     draw_map(path, scene, words)
+
+
+def _page_names(names: list[str]) -> list[str]:
+    """Names as the page can write them: those its font lacks letters for become numbers."""
+    from viewshed.io._sheet import is_writable
+
+    found = [name if is_writable(name) else f"({n})" for n, name in enumerate(names, 1)]
+    odd = [name for name, written in zip(names, found, strict=True) if name != written]
+    if odd and len(names) > 1:
+        msg = (
+            f"the page has no letters for {odd[0]!r}{' and others' if len(odd) > 1 else ''}; it "
+            "numbers them as the rows of summary.csv"
+        )
+        warnings.warn(msg, ViewshedWarning, stacklevel=2)
+    return found
 
 
 def _middle_map(grid: Grid) -> Any:

@@ -145,4 +145,44 @@ def test_an_observer_under_trees_is_told_by_name(dem, tmp_path):
 def test_a_mask_needs_a_height(dem, tmp_path):
     result = call(dem, tmp_path / "out", "--observer", at(40, 40), "--void-mask", "sea.gpkg")
     assert result.exit_code == 2
-    assert "give --void-height too" in result.stderr
+    assert "add --void-height, like 0" in result.stderr
+
+
+@pytest.mark.parametrize(
+    ("words", "told"),
+    [
+        (["--min-patch", "1ha"], "give --polygons too"),
+        (["--surface-crs", "EPSG:4326"], "give --surface too"),
+        (["--surface-height-unit", "ft"], "give --surface too"),
+    ],
+)
+def test_options_that_say_nothing_alone_are_wrong_calls(dem, tmp_path, words, told):
+    result = call(dem, tmp_path / "out", "--observer", at(40, 40), *words)
+    assert result.exit_code == 2
+    assert told in result.stderr
+
+
+def test_polygons_that_are_left_out_are_told(dem, tmp_path):
+    asked = ["--observer", at(40, 40), "--polygons", "fgb"]
+    some = call(dem, tmp_path / "some", *asked, "--min-patch", "4000m2")
+    assert some.exit_code == 0, some.output
+    assert "Polygons: visible, left out" in some.stderr
+    none = call(dem, tmp_path / "none", *asked, "--min-patch", "50km2", "-q")
+    assert none.exit_code == 0
+    assert "Warning: every polygon is smaller than 5e+07 m2" in none.stderr
+
+
+def test_a_surface_in_an_assumed_unit_is_told(dem, tmp_path):
+    dsm = write_dem(tmp_path / "dsm.tif", hills() + np.float32(1))
+    out = tmp_path / "out"
+    result = call(dem, out, "--observer", at(40, 40), "--eye-height", "4", "--surface", dsm)
+    assert "Surface heights" in result.stderr
+    surface = json.loads((out / "record.json").read_text(encoding="utf-8"))["surface"]
+    assert (surface["unit_from"], surface["metres_per_unit"]) == ("assumed metres", 1.0)
+
+
+def test_names_without_letters_on_the_page_become_numbers(dem, tmp_path):
+    words = ["--observer", f"Hut={at(40, 40)}", "--observer", f"\u5c55\u671b={at(20, 40)}"]
+    result = call(dem, tmp_path / "out", *words, "--picture", "png")
+    assert result.exit_code == 0, result.output
+    assert "no letters for '\u5c55\u671b'" in result.stderr

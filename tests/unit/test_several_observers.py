@@ -4,6 +4,7 @@ import csv
 import io
 import json
 import logging
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -126,7 +127,8 @@ def test_observers_far_apart_share_one_grid(terrain):
 
 def test_the_same_observer_twice_changes_only_the_count(terrain, three):
     once = look(terrain, three[0], layers=("count", "clearance"))
-    twice = look(terrain, [three[0], three[0]], layers=("count", "clearance"))
+    same = [three[0], replace(three[0], name="Again")]
+    twice = look(terrain, same, layers=("count", "clearance"))
     np.testing.assert_array_equal(once.visible, twice.visible)
     np.testing.assert_array_equal(once.clearance, twice.clearance)
     seen = once.visible == 1
@@ -170,6 +172,28 @@ def test_too_many_and_none_are_refused(terrain):
         look(terrain, [])
     with pytest.raises(viewshed.InputError, match="65535 observers are more than one map holds"):
         named([viewshed.Observer(0, 0)] * (MOST_OBSERVERS + 1))
+
+
+def test_what_is_no_observer_and_names_given_twice_are_refused(terrain, three):
+    for wrong in ([(1, 2)], (396500, 6223500), 7, ["A"]):
+        with pytest.raises(viewshed.InputError, match=r"no observer; make it with viewshed\.Obs"):
+            look(terrain, wrong)
+    with pytest.raises(viewshed.InputError, match="two observers are called 'Far'"):
+        look(terrain, [*three, replace(three[0], name="Far")])
+
+
+def test_degrees_on_a_grid_of_metres_are_recognised(terrain):
+    lon, lat = 15.0155, 45.145
+    with pytest.raises(viewshed.InputError, match="add --observer-crs EPSG:4326"):
+        look(terrain, viewshed.Observer(lon, lat))
+    look(terrain, viewshed.Observer(lon, lat, crs="EPSG:4326"))
+
+
+def test_voids_that_are_stated_and_not_there_are_told(tmp_path):
+    plain = write_dem(tmp_path / "plain.tif", np.ones((40, 40), np.float32))
+    stated = viewshed.open_terrain(plain, void_height=0.0)
+    with pytest.warns(viewshed.ViewshedWarning, match="stated to be 0 m and none was found"):
+        look(stated, viewshed.Observer(*post(20, 20)))
 
 
 def test_a_message_names_the_observer(terrain):

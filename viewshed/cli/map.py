@@ -263,6 +263,7 @@ def map_command(ctx: click.Context, /, **given: Any) -> None:
 
     began, quiet = time.perf_counter(), verbosity(ctx) < 0
     check_grid_options(given)
+    _check_pairs(given)
     options = _creation_options(given)
     observers = _observers(given)
     check_out_dir(given["out"], overwrite=given["overwrite"])
@@ -306,6 +307,18 @@ def map_command(ctx: click.Context, /, **given: Any) -> None:
 _MANY_TILES = 64
 #: Most observers that the table on the terminal tells one by one.
 _MOST_TOLD = 20
+
+
+def _check_pairs(given: dict[str, Any]) -> None:
+    """Refuse options that say nothing without another."""
+    if given["min_patch"] and given["polygons"] == "none":
+        msg = "--min-patch says which polygons to leave out; give --polygons too"
+        raise click.UsageError(msg)
+    for option in ("surface_crs", "surface_height_unit"):
+        if given[option] and not given["surface"]:
+            name = f"--{option.replace('_', '-')}"
+            msg = f"{name} {given[option]} is said of a surface; give --surface too"
+            raise click.UsageError(msg)
 
 
 def _creation_options(given: dict[str, Any]) -> dict[str, str]:

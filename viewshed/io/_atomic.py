@@ -129,7 +129,8 @@ def staged(out_dir: str | os.PathLike[str], *, overwrite: bool = False) -> Itera
             _refuse_existing(folder, overwrite=overwrite, names=RESULT_NAMES)
             stage = Stage(folder, overwrite=overwrite)
             with opened(stage):
-                yield stage
+                with _without_hidden_folder(stage):
+                    yield stage
                 _publish(stage)
             done = True
     finally:
@@ -137,6 +138,16 @@ def staged(out_dir: str | os.PathLike[str], *, overwrite: bool = False) -> Itera
             for parent in reversed(made):
                 with contextlib.suppress(OSError):
                     parent.rmdir()
+
+
+@contextlib.contextmanager
+def _without_hidden_folder(stage: Stage) -> Iterator[None]:
+    """Name files in messages where the user would look for them."""
+    try:
+        yield
+    except OutputError as error:
+        told = str(error).replace(str(stage.folder), str(stage.out_dir))
+        raise OutputError(told) from error
 
 
 def check_out_dir(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from collections import Counter
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -116,7 +117,7 @@ class MapBox:
         if len(self.places) > MOST_NAMES:
             return
         size = 8.0 if len(self.places) <= MOST_RINGS else 7.0
-        names = [self._name(marker.name, size) for marker in self.scene.observers]
+        names = self._names(size)
         halves = [(0.5 * page.length(n, size, bold=True) if n else 0.0, 5 * pt) for n in names]
         for label in place_names(self.room, self.places, halves, radius=radius, point=pt):
             style = {"ha": "center", "halo": 2.2, "zorder": 7, "bold": True}
@@ -127,12 +128,22 @@ class MapBox:
                     page.line((x1, x2), (y1, y2), width, color, zorder=5.5)
             self.named += 1
 
-    def _name(self, name: str, size: float) -> str:
-        """Name as it is written on the map; of "observer 7" the number."""
-        if len(self.places) == 1 and name == "observer":
-            return ""
-        name = re.sub(r"^observer (?=\d+$)", "", name)
-        return self.page.fitted(name, size, 0.3 * self.view.width, bold=True)
+    def _names(self, size: float) -> list[str]:
+        """Names as they are written on the map; of "observer 7" the number.
+
+        Long ones are shortened; where that makes two alike, they become numbers.
+        """
+        names = [marker.name for marker in self.scene.observers]
+        if names == ["observer"]:
+            return [""]
+        names = [re.sub(r"^observer (?=\d+$)", "", name) for name in names]
+        room = 0.3 * self.view.width
+        short = [self.page.fitted(name, size, room, bold=True) for name in names]
+        alike = Counter(short)
+        return [
+            f"({n})" if alike[text] > 1 and text != name else text
+            for n, (text, name) in enumerate(zip(short, names, strict=True), 1)
+        ]
 
     def _distances(self, rings: list[float]) -> None:
         """Write distances on the rings of one observer, or on ranges of several that differ."""

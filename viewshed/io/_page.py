@@ -212,7 +212,9 @@ class Page(Sheet):
         y = self._heads(x, ends[0], "RESULT") - 2 * pt
         for size in (8.0, 7.5, 7.0, 6.5, 6.0, 5.5):
             gap = 1.45 * size * pt
-            sizes = [1.25 * size if i == 0 else size for i in range(len(words.summary))]
+            sizes = [size] * len(words.summary)
+            if sizes:
+                sizes[0] = self._main_size(*words.summary[0], size, width)
             own_line = [
                 self.length(label + value, s, bold=s > size) + 8 * pt > width
                 for (label, value), s in zip(words.summary, sizes, strict=True)
@@ -226,11 +228,17 @@ class Page(Sheet):
             y += gap * (1.25 if main else 1.0)
             color, rule = (INK, 0.9) if main else (SOFT, 0.4)
             self.write(x, y, self.fitted(label, s, width, bold=main), s, color=color, bold=main)
-            y += 0.85 * gap * below
+            y += 0.85 * gap * below * s / size
             text = self.fitted(value, s, width, bold=main)
             self.write(x + width, y, text, s, ha="right", bold=main)
             line = (y + 0.35 * size * pt,) * 2
             self.line((x, x + width), line, rule, INK if main else RULE)
+
+    def _main_size(self, label: str, value: str, size: float, width: float) -> float:
+        """Size of the row that stands out: larger, as far as label and value fit one line."""
+        room = width - 8 * self.dpi / 72.0
+        full = self.length(label + value, 1.25 * size, bold=True)
+        return max(1.25 * size * min(1.0, room / full), 1.01 * size)
 
     def _foot(self, words: Words) -> float:
         """Write the cautions; give the height of the rule over them."""

@@ -146,6 +146,12 @@ def _fonts() -> dict[bool, Any]:
     return {bold: FontProperties(fname=str(folder / name)) for bold, name in names.items()}
 
 
+def is_writable(text: str) -> bool:
+    """Tell whether the page's font has every letter of a text."""
+    font = _fonts()[True]
+    return _printable(text, font) == text
+
+
 def _printable(text: str, font: Any) -> str:
     """Put a box for what the font cannot write and a space for what is no character."""
     known = _letters(font.get_file())

@@ -3,6 +3,7 @@
 import warnings
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cached_property
 from math import isfinite
 from typing import Any
 
@@ -14,6 +15,7 @@ from viewshed.io._survey import NEAR_ZERO, Survey, survey
 from viewshed.io._value_steps import Step
 from viewshed.io._windows import Windows, condensed
 from viewshed.io.elevation import HEIGHT_UNITS, Terrain
+from viewshed.io.mosaic import uncovered
 from viewshed.postmap import range_window
 
 #: Share of the sides of voids with ground near zero from which the voids are likely sea.
@@ -65,6 +67,11 @@ class Checkup:
         """Number of cells whose height is not known."""
         return self.cells - self.found.known
 
+    @cached_property
+    def uncovered(self) -> int:
+        """Number of cells that lie in no tile."""
+        return uncovered(self.terrain.grid, self.terrain.tiles)
+
     @property
     def step(self) -> Step | None:
         """Largest step that all heights are whole multiples of."""
@@ -72,7 +79,12 @@ class Checkup:
 
     @property
     def is_sea_likely(self) -> bool:
-        """Whether the ground beside the voids is so often near zero that they are likely sea."""
+        """Whether the ground beside the voids is so often near zero that they are likely sea.
+
+        Voids that are stated to have a height, and cells of missing tiles, are no sea.
+        """
+        if self.terrain.void_height is not None or self.uncovered > self.voids // 2:
+            return False
         return self.found.rims > 0 and self.found.rims_near_zero >= _LIKELY_SEA * self.found.rims
 
     @property
@@ -87,6 +99,12 @@ class Checkup:
     def notes(self) -> list[str]:
         """What a user should think about before mapping."""
         found = []
+        if self.uncovered:
+            share = told_share(self.uncovered, self.cells)
+            found.append(
+                f"{self.uncovered} cells ({share}) lie in no tile: some are missing, or the tiles "
+                "do not fill a rectangle"
+            )
         if self.is_sea_likely:
             share = told_share(self.found.rims_near_zero, self.found.rims)
             found.append(
@@ -150,6 +168,7 @@ class Checkup:
             "voids": {
                 "cells": self.voids,
                 "share": self.voids / self.cells,
+                "in_no_tile": self.uncovered,
                 "rims": found.rims,
                 "rims_near_zero": found.rims_near_zero,
                 "likely_sea": self.is_sea_likely,

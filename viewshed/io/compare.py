@@ -90,7 +90,15 @@ def compare_outputs(
             found.append(Comparison(name, NEW, "the earlier result did not have it"))
         else:
             found.append(_compare(name, was, now, (old_folder, new_folder)))
-    return found
+    return [_following(one, found) for one in found]
+
+
+def _following(one: Comparison, found: list[Comparison]) -> Comparison:
+    """Call an item different where it describes files that are."""
+    others = [other.name for other in found if other.word in {DIFFERENT, MISSING}]
+    if one.name != STAC_NAME or one.word != SAME_VALUES or not others:
+        return one
+    return Comparison(one.name, DIFFERENT, f"it describes {others[0]}, which is not the same")
 
 
 def _compare(

@@ -169,6 +169,31 @@ def fit_together(tiles: Sequence[Tile]) -> tuple[Grid, list[Tile]]:
     return Grid((rows_of_all, cols_of_all), transform, first.crs_wkt), placed
 
 
+def uncovered(grid: Grid, tiles: Sequence[Tile]) -> int:
+    """Count the cells of a mosaic that lie in no tile.
+
+    Parameters
+    ----------
+    grid : Grid
+        The grid of the mosaic.
+    tiles : sequence of Tile
+        Its tiles, placed by `fit_together`.
+
+    Returns
+    -------
+    int
+        Cells.
+    """
+    rows = np.unique([edge for t in tiles for edge in (t.row0, t.row0 + t.shape[0])])
+    cols = np.unique([edge for t in tiles for edge in (t.col0, t.col0 + t.shape[1])])
+    inside = np.zeros((rows.size - 1, cols.size - 1), dtype=np.int64)
+    for t in tiles:
+        down = np.searchsorted(rows, (t.row0, t.row0 + t.shape[0]))
+        right = np.searchsorted(cols, (t.col0, t.col0 + t.shape[1]))
+        inside[down[0] : down[1], right[0] : right[1]] = 1
+    return grid.rows * grid.cols - int(np.diff(rows) @ inside @ np.diff(cols))
+
+
 def _whole(places: FloatArray) -> NDArray[np.int64]:
     return np.rint(places).astype(np.int64)
 

@@ -36,6 +36,8 @@ _BLOCK_POSTS, _BLOCK_CELLS = 1 << 19, 1 << 22
 _NEAR_POSTS = 1 << 15
 #: A surface that is this far above the ground in the middle [m] is worth a question.
 _HIGH_ABOVE = 20.0
+#: Nothing that grows or is built stands this far over the ground [m] at more than this share.
+_TALL, _TALL_SHARE = 60.0, 0.05
 #: Rows whose differences are taken at a time.
 _COMPARE_ROWS = 256
 
@@ -261,6 +263,8 @@ def open_surface(
         own = open_terrain(paths, crs=crs, height_unit=height_unit)
     except InputError as error:
         raise InputError(re.sub(r"--(crs|height-unit)", r"--surface-\1", str(error))) from error
+    except DataError as error:
+        raise DataError(str(error).replace("the elevation grid", "the surface")) from error
     ground, grid = IndexMap(terrain.grid, own.grid), terrain.grid
     common = box_round(*IndexMap(own.grid, grid).lattice((0, 0, *own.grid.shape)), 0.0, grid.shape)
     middle = (0, 0) if common is None else (common[0] + common[2] // 2, common[1] + common[3] // 2)
@@ -300,7 +304,8 @@ def compare(surface: Heights, ground: Heights) -> float | None:
     Warns
     -----
     ViewshedWarning
-        If the median is negative or over 20 m, or if the surface is unknown where the ground is
+        If the median is negative or over 20 m, if much of the surface is taller over the ground
+        than anything that grows or is built, or if the surface is unknown where the ground is
         known.
 
     Notes
@@ -327,6 +332,14 @@ def compare(surface: Heights, ground: Heights) -> float | None:
         differences[filled : filled + part.size] = part
         filled += part.size
     median = float(np.median(differences, overwrite_input=True))
+    tall = int(np.count_nonzero(differences > _TALL))
+    if tall > _TALL_SHARE * in_both and median <= _HIGH_ABOVE:
+        msg = (
+            f"the surface is more than {_TALL:g} m above the ground at {_percent(tall / in_both)} "
+            "of the posts, taller than woods and houses; check that both share the unit of their "
+            "heights"
+        )
+        warnings.warn(msg, ViewshedWarning, stacklevel=2)
     if round(median, 2) < 0.0 or median > _HIGH_ABOVE:
         side = f"{median:.2f} m above" if median > 0.0 else f"{-median:.2f} m below"
         msg = (
