@@ -115,6 +115,9 @@ class Observer:
         if not (isinstance(self.name, str) and self.name.strip()):
             msg = f"observer name {self.name!r} is empty; give it a word"
             raise InputError(msg)
+        if any("\ud800" <= letter <= "\udfff" for letter in self.name):
+            msg = f"observer name {self.name!r} is not UTF-8; write it in UTF-8"
+            raise InputError(msg)
         if self.target_height is not None:
             height = _height(self.target_height, "target height")
             object.__setattr__(self, "target_height", height)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections import Counter
 from dataclasses import dataclass, replace
+from itertools import count
 from typing import TYPE_CHECKING
 
 from viewshed import geodesy
@@ -84,15 +85,13 @@ def named(observers: Observer | Sequence[Observer]) -> list[Observer]:
             raise InputError(msg)
     if len(found) == 1:
         return found
-    named_ones = [one.name for one in found if one.name != "observer"]
-    twice = next((name for name, count in Counter(named_ones).items() if count > 1), None)
+    given = Counter(one.name for one in found if one.name != "observer")
+    twice = next((name for name, times in given.items() if times > 1), None)
     if twice is not None:
         msg = f"two observers are called {twice!r}; names tell results apart, so give each its own"
         raise InputError(msg)
-    return [
-        replace(one, name=f"observer {n}") if one.name == "observer" else one
-        for n, one in enumerate(found, 1)
-    ]
+    free = (name for name in map("observer {}".format, count(1)) if name not in given)
+    return [replace(one, name=next(free)) if one.name == "observer" else one for one in found]
 
 
 def place(

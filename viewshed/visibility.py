@@ -18,7 +18,17 @@ from viewshed._jit import announce
 from viewshed.constants import HIDDEN, NODATA, VISIBLE
 from viewshed.errors import InputError, ViewshedError
 from viewshed.kernels import sweep as k
-from viewshed.wedges import Air, Scene, Wedge, corner_weights, shift_of, wedge_count, wedges
+from viewshed.wedges import (
+    MOST_SKEW,
+    Air,
+    Scene,
+    Wedge,
+    corner_weights,
+    shift_of,
+    skew_of,
+    wedge_count,
+    wedges,
+)
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -257,7 +267,7 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     ------
     InputError
         If the observer is outside the outermost posts, on or beside a void, or under the ground or
-        the surface.
+        the surface, or if the grid bends too strongly in range, as near a pole.
 
     Notes
     -----
@@ -285,6 +295,15 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
         msg = (
             f"the eye is {-eye_height:g} m below the ground under it ({ground:.2f} m): raise it "
             "to the ground or above"
+        )
+        raise InputError(msg)
+    skew = skew_of(post_map, *elevation.shape)
+    if skew > MOST_SKEW:
+        reach, less = (r / 1000.0 for r in (range_m, 0.9 * range_m * MOST_SKEW / skew))
+        msg = (
+            f"rows and columns bend too strongly within {reach:.3g} km of the observer, as they do "
+            f"near a pole; give a range of {less:.2g} km or warp the grid to a projection of the "
+            "polar region"
         )
         raise InputError(msg)
     foot = ground
@@ -371,12 +390,13 @@ def _answer_own_place(
     if row != int(row) or col != int(col):
         return
     at = int(row), int(col)
-    top = float(elevation[at]) + scene.target_height
-    under = (top - scene.foot) * (1.0 - (top - scene.eye_over) * scene.air.inverse_radius)
-    hidden = scene.ground is not None and under < 0.0
-    state[at] = HIDDEN if hidden else VISIBLE
+    over = np.inf
+    if scene.ground is not None:  # the surface at the target's own post
+        top = float(elevation[at]) + scene.target_height
+        over = (top - scene.foot) * (1.0 - (top - scene.eye_over) * scene.air.inverse_radius)
+    state[at] = VISIBLE if over >= 0.0 else HIDDEN
     if clear is not None:
-        clear[at] = under if hidden else np.inf
+        clear[at] = over
 
 
 def _finish(

@@ -28,6 +28,9 @@ _WEDGE_POSTS = 64
 _MIN_WEDGES = 8
 #: Wedges are swept this much beyond the directions they answer, so that ties stay inside [t].
 _TIE = 1e-12
+#: Skew up to which an octant's sight lines meet its lines of posts in their order; more happens
+#: only within some kilometres of a pole on a geographic grid.
+MOST_SKEW = 0.65
 
 
 @dataclass(frozen=True)
@@ -276,7 +279,7 @@ def _bend(pm: PostMap, rows: int, cols: int) -> float:
     return float(max(np.abs(p - (c - pm.col0)).max(), np.abs(q - (r - pm.row0)).max()))
 
 
-def _skew(pm: PostMap, rows: int, cols: int) -> float:
+def skew_of(pm: PostMap, rows: int, cols: int) -> float:
     """Greatest change of the direction t that bending makes in the window."""
     if pm.cp.shape[0] <= 2:
         return 0.0
@@ -341,7 +344,7 @@ def wedges(scene: Scene, clearance: bool) -> tuple[list[Wedge], list[Octant]]:
     rows, cols = scene.surface.shape
     pm = scene.post_map
     count = wedge_count(scene)
-    spare = _skew(pm, rows, cols)
+    spare = skew_of(pm, rows, cols)
     edges = np.linspace(0.0, 1.0, count + 1)
     pieces: list[Wedge] = []
     axes: list[Octant] = []

@@ -36,6 +36,8 @@ if TYPE_CHECKING:
 
 _log = logging.getLogger("viewshed")
 
+#: Who looks where the answer is that of all observers.
+EVERYBODY = "all"
 #: Formats that polygons can have.
 POLYGON_FORMATS = ("shp", "gpkg", "fgb", "parquet")
 
@@ -123,7 +125,7 @@ def patches_of(
     from viewshed.io.polygons import join_patches, polygonise
 
     k = result.refraction.k
-    name = result.views[0].observer.name if len(result.views) == 1 else "all"
+    name = result.views[0].observer.name if len(result.views) == 1 else EVERYBODY
     asked: dict[str, Any] = {"k": k, "states": states, "min_patch_m2": min_patch_m2}
     found = [polygonise(result.visible, result.grid, result.areas, observer=name, **asked)]
     for view, visible in _each(result):
@@ -141,7 +143,7 @@ def _each(result: MapResult) -> Iterator[tuple[View, NDArray[Any]]]:
 def _rasters(
     result: MapResult, stage: Stage, stems: list[str], wanted: Wanted
 ) -> Iterator[tuple[str, dict[str, Any]]]:
-    everybody = result.views[0].observer.name if len(result.views) == 1 else None
+    everybody = result.views[0].observer.name if len(result.views) == 1 else EVERYBODY
     for layer, array in result.arrays.items():
         name = f"{layer.replace('-', '_')}.tif"
         tags = _tags(result, layer, everybody)
@@ -180,7 +182,7 @@ def _raster(
     return {**written, "layer": layer}
 
 
-def _tags(result: MapResult, layer: str, observer: str | None) -> dict[str, str]:
+def _tags(result: MapResult, layer: str, observer: str) -> dict[str, str]:
     tags = {
         "VERSION": __version__,
         "LAYER": layer,
@@ -189,9 +191,8 @@ def _tags(result: MapResult, layer: str, observer: str | None) -> dict[str, str]
         "EARTH_FACTOR": repr(result.refraction.K),
         "GEOMETRY_ERROR_M": f"{max(view.post_map.error_m for view in result.views):.3g}",
         "CAUTION": _CAUTION,
+        "OBSERVER": observer,
     }
-    if observer is not None:
-        tags["OBSERVER"] = observer
     if layer == "who":
         tags["BITS"] = "; ".join(f"{n} {v.observer.name}" for n, v in enumerate(result.views, 1))
     return tags

@@ -61,7 +61,8 @@ def test_facts(look):
     assert told["heights"]["highest_m"] == hills().max()
     assert told["heights"]["step"] is None
     assert told["voids"] == {
-        "cells": 0, "share": 0.0, "in_no_tile": 0, "rims": 0, "rims_near_zero": 0, "likely_sea": False
+        "cells": 0, "share": 0.0, "in_no_tile": 0,
+        "rims": 0, "rims_near_zero": 0, "likely_sea": False,
     }  # fmt: skip
     west, south, east, north = told["grid"]["lonlat_bounds"]
     assert (west, north) == pytest.approx((13.469, 54.139), abs=1e-3)

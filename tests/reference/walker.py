@@ -134,9 +134,7 @@ class Walker:
                 horizon, unknown, length = self.walk(r, c)
             clear = target[r, c] - horizon * length
             if self.own_surface and not np.isnan(self.f[r, c]):
-                own_place = (r, c) == (self.row0, self.col0)
-                over = target[r, c] - self.f[r, c]  # the surface at the target's own post
-                clear = clear if own_place and over >= 0 else min(clear, over)
+                clear = min(clear, target[r, c] - self.f[r, c])  # the surface at its own post
             if clear == math.inf:  # nothing stands between
                 clear = self.eye_height + self.target_height
             self.margin[r, c] = clear

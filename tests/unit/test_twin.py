@@ -4,6 +4,7 @@ from functools import cache
 
 import numpy as np
 import pytest
+from affine import Affine
 
 from tests.helpers import (
     affine_map,
@@ -21,8 +22,13 @@ from tests.helpers import (
 )
 from tests.reference.walker import Walker
 from tests.unit.grids import make_grid
+from viewshed.errors import InputError
+from viewshed.geodesy import crs_from_user
+from viewshed.grid import Grid
 from viewshed.places import Sector
+from viewshed.postmap import fit_post_map
 from viewshed.visibility import compute
+from viewshed.wedges import skew_of
 
 OFFSETS = (0.0, 1e-9, 0.5, 1.0 - 1e-9)
 N = 23
@@ -444,3 +450,30 @@ def test_no_layer_depends_on_another():
         np.testing.assert_array_equal(full.visible, lean.visible)
         assert (full.clearance is not None) == clearance
         assert (full.needed_height is not None) == needed
+
+
+# --- near a pole ----------------------------------------------------------------------------------
+
+
+def polar_scene(latitude, range_m, west=9.0, size=41):
+    """Hills on a geographic grid whose window just holds the range, about its middle."""
+    step = 2.3 * range_m / 111e3 / size
+    wide = step / np.cos(np.radians(latitude))
+    transform = Affine(wide, 0, west, 0, -step, latitude + step * size / 2)
+    grid = Grid((size, size), transform, crs_from_user("EPSG:4326").to_wkt())
+    post_map = fit_post_map(grid, size / 2 - 0.5, size / 2 - 0.3, range_m=range_m)
+    return fractal(size, 2, relief=range_m / 150), post_map
+
+
+@pytest.mark.parametrize(("latitude", "range_m"), [(85.0, 30e3), (88.0, 30e3), (89.0, 10e3)])
+def test_rows_that_bend_round_a_pole(latitude, range_m):
+    z, post_map = polar_scene(latitude, range_m)
+    assert skew_of(post_map, *z.shape) > 0.2
+    assert_like_twin(z, post_map, eye_height=20.0, target_height=2.0, range_m=range_m)
+
+
+@pytest.mark.parametrize("latitude", [89.8, 89.9])
+def test_too_near_a_pole_is_refused(latitude):
+    z, post_map = polar_scene(latitude, 5e3)
+    with pytest.raises(InputError, match=r"too strongly within 5 km.* give a range of [0-9.]+ km"):
+        compute(z, post_map, eye_height=20.0, range_m=5e3)

@@ -1250,6 +1250,14 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
         floors[k] = -BIG
     heights, at, least, most, wants = post[0], post[1], post[2], post[3], post[4]
 
+    # Posts farther than this outside the grid end the wedge. The map of posts means nothing there,
+    # and where it turns back a search would not end.
+    farthest_low = -ints[BASE_MINOR] - ints[MARGIN] - 8
+    farthest_high = n_minor - ints[BASE_MINOR] + ints[MARGIN] + 8
+    if sign < 0:
+        farthest_low = ints[BASE_MINOR] - n_minor - ints[MARGIN] - 8
+        farthest_high = ints[BASE_MINOR] + ints[MARGIN] + 8
+
     which = 0
     env = envs[0]
     env[0, 0] = low
@@ -1290,13 +1298,13 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
             line_coefficients(coef_u, degree, x, poly[0])
             line_coefficients(coef_v, degree, x, poly[1])
         # posts that straddle the wedge: t[first] <= low < ..., ... < high <= t[last]
-        while post_t(geo, degree, poly, j, first) > low:
+        while first > farthest_low and post_t(geo, degree, poly, j, first) > low:
             first -= 1
-        while post_t(geo, degree, poly, j, first + 1) <= low:
+        while first < farthest_high and post_t(geo, degree, poly, j, first + 1) <= low:
             first += 1
         if last <= first:
             last = first + 1
-        while post_t(geo, degree, poly, j, last) < high:
+        while last <= farthest_high and post_t(geo, degree, poly, j, last) < high:
             last += 1
         while last - 1 > first and post_t(geo, degree, poly, j, last - 1) >= high:
             last -= 1
