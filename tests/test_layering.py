@@ -16,6 +16,7 @@ LAYERS = {
     "_version": 0,
     "errors": 0,
     "constants": 0,
+    "notes": 1,
     "_jit": 1,
     "areas": 2,
     "extent": 2,

@@ -19,8 +19,9 @@ from viewshed.atmosphere import Refraction, parse_refraction
 from viewshed.combine import Combination
 from viewshed.constants import DEFAULT_RANGE, LAYERS, NODATA, SURVEY_K, WHO_OBSERVERS
 from viewshed.errors import InputError, ViewshedWarning
+from viewshed.notes import noted
 from viewshed.places import GREATEST_RANGE, Observer, Sector, Target, parse_length
-from viewshed.placing import Placed, Window, common_window, named, place, told
+from viewshed.placing import Placed, Window, common_window, named, place, told_of
 from viewshed.postmap import fit_post_map
 from viewshed.result import Inputs, MapResult, Question, View
 from viewshed.tally import tally_up
@@ -62,6 +63,7 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
     layers: Sequence[str] | None = None,
     each: bool = False,
     surface: Surface | None = None,
+    notes: Sequence[str] = (),
     threads: int | None = None,
     progress: Progress | None = None,
 ) -> MapResult:
@@ -90,6 +92,8 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
         Whether what each observer sees is kept beside the common answer.
     surface : Surface or None
         What blocks sight, from `viewshed.open_surface`; None is the ground.
+    notes : sequence of str
+        What was warned of when the inputs were opened and the result is to say too.
     threads : int or None
         Threads to use; None is one a processor. The answer is the same to the bit.
     progress : callable or None
@@ -142,11 +146,11 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
     window = common_window([one.window for one in placed])
     _check_memory(window, placed, question, with_surface=surface is not None)
     _say_cost(placed, usable_threads(threads))
-    heights, notes = _read(terrain, surface, window)
+    heights, met = _read(terrain, surface, window)
     run = _Run(terrain, heights, window, question, placed)
     run.look(threads, progress)
-    notes = [*_notes(placed, run.views), *notes]
-    for note in notes:
+    told = tuple(dict.fromkeys([*_notes(placed, run.views), *notes, *met]))
+    for note in told:
         warnings.warn(note, ViewshedWarning, stacklevel=2)
     for fingerprint in heights.fingerprints:
         fingerprint.confirm()
@@ -155,7 +159,7 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
         reaches = told_lengths(one.range_m for one in placed)
         msg = f"no known cell centre lies within the range of {reaches}{where}: widen it"
         raise InputError(msg)
-    return run.result(terrain, surface, tuple(notes))
+    return run.result(terrain, surface, told)
 
 
 @dataclass(frozen=True)
@@ -241,7 +245,7 @@ class _Run:
                 progress=progress,
             )
         except InputError as error:
-            msg = f"{told(one.observer, one.x, one.y)}: {error}"
+            msg = f"{told_of(one.observer, one.x, one.y)}: {error}"
             raise InputError(msg) from error
         if seen.clearance is not None:
             np.minimum(seen.clearance, _GREATEST_CLEARANCE, out=seen.clearance)
@@ -351,8 +355,7 @@ def _read(terrain: Terrain, surface: Surface | None, window: Window) -> tuple[_H
     fingerprints = [terrain.fingerprint(*window)]
     if surface is not None:
         fingerprints.append(surface.fingerprint(*window))
-    with warnings.catch_warnings(record=True) as caught:
-        warnings.simplefilter("always", ViewshedWarning)
+    with noted(told=False) as notes:
         reading = terrain.load(*window)
         over, median = None, None
         if surface is not None:
@@ -360,7 +363,6 @@ def _read(terrain: Terrain, surface: Surface | None, window: Window) -> tuple[_H
 
             over = surface.read(*window)
             median = compare(over, reading.elevation)
-    notes = [str(w.message) for w in caught if issubclass(w.category, ViewshedWarning)]
     if terrain.void_height is not None and not reading.voids_set:
         notes.append(
             f"the voids were stated to be {terrain.void_height.height:g} m and none was found in "
@@ -383,8 +385,8 @@ def _ground_under(
         return ground_at(elevation, *at)
     except InputError:
         msg = (
-            f"{told(one.observer, one.x, one.y)} stands on or beside a void, so the ground under "
-            "it is not known: move it or fill the void"
+            f"{told_of(one.observer, one.x, one.y)} stands on or beside a void, so the ground "
+            "under it is not known: move it or fill the void"
         )
         raise InputError(msg) from None
 

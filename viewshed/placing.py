@@ -151,7 +151,7 @@ def common_window(windows: Sequence[Window]) -> Window:
     return top, left, bottom - top, right - left
 
 
-def told(observer: Observer, x: float | None = None, y: float | None = None) -> str:
+def told_of(observer: Observer, x: float | None = None, y: float | None = None) -> str:
     """Name an observer in a message: its own name if it has one, and its place."""
     name = "" if observer.name == "observer" else f" {observer.name!r} at"
     text = f"the observer{name} {told_number(observer.x)},{told_number(observer.y)}"
@@ -165,7 +165,7 @@ def _in_grid_crs(grid: Grid, observer: Observer, x: float, y: float) -> tuple[fl
     try:
         return geodesy.transform_point(x, y, given, own)
     except InputError as error:
-        msg = f"{told(observer)}: {error}"
+        msg = f"{told_of(observer)}: {error}"
         raise InputError(msg) from error
 
 
@@ -177,7 +177,7 @@ def _outside(
     grid: Grid, observer: Observer, xy: tuple[float, float], at: tuple[float, float]
 ) -> str:
     """Say how an observer misses the grid and what may help."""
-    who, (row, col) = told(observer, *xy), at
+    who, (row, col) = told_of(observer, *xy), at
     if -0.5 <= row <= grid.rows - 0.5 and -0.5 <= col <= grid.cols - 0.5:
         return (
             f"{who} is in the rim of the elevation grid, less than half a cell from its edge, "

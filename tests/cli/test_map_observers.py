@@ -162,7 +162,9 @@ def test_options_that_say_nothing_alone_are_wrong_calls(dem, tmp_path, words, to
     assert told in result.stderr
 
 
-def test_polygons_that_are_left_out_are_told(dem, tmp_path):
+def test_polygons_that_are_left_out_are_told(tmp_path):
+    rough = np.random.default_rng(5).random((80, 80), dtype=np.float32)
+    dem = write_dem(tmp_path / "rough.tif", rough)
     asked = ["--observer", at(40, 40), "--polygons", "fgb"]
     some = call(dem, tmp_path / "some", *asked, "--min-patch", "4000m2")
     assert some.exit_code == 0, some.output
@@ -186,3 +188,34 @@ def test_names_without_letters_on_the_page_become_numbers(dem, tmp_path):
     result = call(dem, tmp_path / "out", *words, "--picture", "png")
     assert result.exit_code == 0, result.output
     assert "no letters for '\u5c55\u671b'" in result.stderr
+
+
+def test_what_was_warned_of_on_opening_is_in_the_record(tmp_path):
+    feet = write_dem(tmp_path / "hills.tif", crs="EPSG:32632+5703")
+    x, y = at(40, 40).split(",")
+    sites = tmp_path / "sites.csv"
+    sites.write_text(f"x,y,colour\n{x},{y},red\n", encoding="utf-8")
+    out = tmp_path / "out"
+    result = call(feet, out, "--observers", sites, "--height-unit", "ft")
+    assert result.exit_code == 0, result.output
+    noted = json.loads((out / "record.json").read_text(encoding="utf-8"))["warnings"]
+    for told in ("columns not used: colour", "taken as ft"):
+        assert sum(told in note for note in noted) == 1
+        assert result.stderr.count(told) == 1
+
+
+def test_names_of_both_ways_are_each_their_own(dem, tmp_path):
+    x, y = at(40, 40).split(",")
+    sites = tmp_path / "sites.csv"
+    sites.write_text(f"name,x,y\nA,{x},{y}\n", encoding="utf-8")
+    result = call(dem, tmp_path / "out", "--observer", f"A={at(20, 40)}", "--observers", sites)
+    assert result.exit_code == 1
+    assert "two observers are called 'A'" in result.stderr
+    assert not (tmp_path / "out").exists()
+
+
+def test_a_name_that_is_no_file_name_is_refused_before_the_grid_is_read(tmp_path):
+    words = ["--observer", f"a/b={at(20, 40)}", "--each"]
+    result = call(tmp_path / "no such.tif", tmp_path / "out", *words)
+    assert result.exit_code == 1
+    assert "'a/b'" in result.stderr

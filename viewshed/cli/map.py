@@ -259,16 +259,17 @@ SECTIONS = {
 @click.pass_context
 def map_command(ctx: click.Context, /, **given: Any) -> None:
     """Map what can be seen from one place or many."""
-    from viewshed.io._atomic import check_out_dir
+    from viewshed.notes import noted
 
     began, quiet = time.perf_counter(), verbosity(ctx) < 0
     check_grid_options(given)
     _check_pairs(given)
     options = _creation_options(given)
-    observers = _observers(given)
-    check_out_dir(given["out"], overwrite=given["overwrite"])
-    terrain = terrain_of(given, _index(given))
-    surface = _surface(given, terrain)
+    with noted() as notes:
+        observers = _observers(given)
+        _check_outputs(given, observers)
+        terrain = terrain_of(given, _index(given))
+        surface = _surface(given, terrain)
 
     from viewshed.api import map_visibility
     from viewshed.places import Target
@@ -284,6 +285,7 @@ def map_command(ctx: click.Context, /, **given: Any) -> None:
             layers=given["layers"],
             each=given["each"],
             surface=surface,
+            notes=notes,
             threads=given["threads"],
             progress=progress,
         )
@@ -319,6 +321,22 @@ def _check_pairs(given: dict[str, Any]) -> None:
             name = f"--{option.replace('_', '-')}"
             msg = f"{name} {given[option]} is said of a surface; give --surface too"
             raise click.UsageError(msg)
+
+
+def _check_outputs(given: dict[str, Any], observers: list[Observer]) -> None:
+    """Refuse before any work what could not be written after it."""
+    from viewshed.io._atomic import check_out_dir
+    from viewshed.placing import named
+
+    if given["each"]:
+        from viewshed.io._names import file_names
+
+        file_names([one.name for one in named(observers)])
+    if given["polygons"] != "none":
+        from viewshed.io._vector import check_format
+
+        check_format(given["polygons"])
+    check_out_dir(given["out"], overwrite=given["overwrite"])
 
 
 def _creation_options(given: dict[str, Any]) -> dict[str, str]:
