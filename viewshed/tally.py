@@ -174,40 +174,38 @@ def tally_up(
     )
 
 
-def _distance(
-    post_map: PostMap, rows: NDArray[np.int64], cols: NDArray[np.int64]
-) -> NDArray[np.float64]:
-    return np.hypot(*post_map.en(rows.astype(np.float64), cols.astype(np.float64)))
-
-
 def _runs_within(
     post_map: PostMap, shape: tuple[int, int], radii: list[float]
 ) -> NDArray[np.int64]:
-    """First column within each radius and the one past the last, row by row; by bisection."""
-    rows = np.arange(shape[0])
-    low, high = np.zeros_like(rows), np.full_like(rows, shape[1] - 1)
+    """First column within each radius and the one past the last, row by row; by bisection.
+
+    All radii and both sides at once: an array of (radii, 2, rows) costs little more than one row.
+    """
+    rows, last = np.arange(float(shape[0])), shape[1] - 1
+
+    def distance(cols: NDArray[np.int64]) -> NDArray[np.float64]:
+        return np.hypot(*post_map.en(rows, cols.astype(np.float64)))
+
+    low, high = np.zeros(shape[0], dtype=np.int64), np.full(shape[0], last)
     while (low < high).any():  # the nearest column
         middle = (low + high) // 2
-        ahead = np.minimum(middle + 1, shape[1] - 1)
-        falls = _distance(post_map, rows, middle) > _distance(post_map, rows, ahead)
-        low, high = np.where(falls, ahead, low), np.where(falls, high, middle)
+        here, ahead = distance(np.stack([middle, np.minimum(middle + 1, last)]))
+        falls = here > ahead
+        low = np.where(falls, np.minimum(middle + 1, high), low)
+        high = np.where(falls, high, middle)
         high = np.maximum(low, high)
-    nearest = low
-    found = np.empty((len(radii), 2, shape[0]), dtype=np.int64)
-    for n, radius in enumerate(radii):
-        reached = _distance(post_map, rows, nearest) <= radius
-        for side, border in ((0, 0), (1, shape[1] - 1)):
-            inside, outside = nearest, np.full_like(rows, border)
-            whole = _distance(post_map, rows, outside) <= radius
-            inside = np.where(whole, outside, inside)
-            while (np.abs(outside - inside) > 1).any():
-                middle = (inside + outside) // 2
-                within = _distance(post_map, rows, middle) <= radius
-                inside = np.where(within, middle, inside)
-                outside = np.where(within, outside, middle)
-            found[n, side] = inside + side
-        found[n, 1] = np.where(reached, found[n, 1], nearest)
-        found[n, 0] = np.where(reached, found[n, 0], nearest)
+    found = np.broadcast_to(low, (len(radii), 2, shape[0])).copy()
+    if not radii:
+        return found
+    within = np.array(radii)[:, np.newaxis, np.newaxis]
+    reached = distance(low) <= within[:, 0]
+    outside = np.empty_like(found)
+    outside[:, 0], outside[:, 1] = -1, last + 1  # surely beyond, and never asked
+    while (np.abs(outside - found) > 1).any():
+        middle = (found + outside) // 2
+        near = distance(middle) <= within
+        found, outside = np.where(near, middle, found), np.where(near, outside, middle)
+    found[:, 1] += reached
     return found
 
 
