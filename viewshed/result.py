@@ -313,7 +313,7 @@ class MapResult:
             rows.append(("Range on known ground", f"{least}{100 * covered:.0f} % of it"))
         far = self.farthest_visible
         if far is not None:
-            told = f"{told_distance(far['distance_m'])} off at {far['bearing_deg']:.0f} degrees"
+            told = f"{told_distance(far['distance_m'])} at {far['bearing_deg']:.0f} degrees"
             rows.append(("Farthest visible", told + (f" from {_short(far)}" if many else "")))
         rows.append(("Refraction", self.refraction.describe()))
         return [*rows, *self._ground_rows()]
@@ -429,7 +429,7 @@ class MapResult:
 def _short(farthest: dict[str, Any]) -> str:
     """Name of the observer of a farthest cell, short enough for a table."""
     name = str(farthest["observer"])
-    return name if len(name) <= 24 else f"{name[:16].rstrip()}\u2026{name[-6:].lstrip()}"
+    return name if len(name) <= 20 else f"{name[:12].rstrip()}\u2026{name[-6:].lstrip()}"
 
 
 def grid_name(grid: Terrain | Surface) -> str:

@@ -263,10 +263,18 @@ def draw_page(result: MapResult, path: Path) -> None:
         refraction=result.refraction.describe(),
         dem_name=grid_name(result.terrain),
         crs_name=f"{crs.name}, {unit}" if unit else crs.name,
-        summary=result.summary,
+        summary=[(label, _with(names, result, told)) for label, told in result.summary],
         made_with=f"viewshed {__version__}",
     )
     draw_map(path, scene, words)
+
+
+def _with(names: list[str], result: MapResult, told: str) -> str:
+    """Put the name that the page can write in the place of one it cannot."""
+    for name, view in zip(names, result.views, strict=True):
+        if name != view.observer.name and told.endswith(f" from {view.observer.name}"):
+            return told.removesuffix(view.observer.name) + name
+    return told
 
 
 def _page_names(names: list[str]) -> list[str]:
