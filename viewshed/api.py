@@ -371,6 +371,7 @@ def _read(terrain: Terrain, surface: Surface | None, window: Window) -> tuple[_H
     facts: dict[str, Any] = {
         "voids_set": reading.voids_set,
         "undeclared_voids": reading.undeclared_voids,
+        "void_mask_files": fingerprints[0].mask_entries,
     }
     if reading.overlap is not None:
         first, second, difference = reading.overlap

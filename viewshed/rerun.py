@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any, NamedTuple
 
 from viewshed.atmosphere import Refraction
 from viewshed.errors import DataError, InputError, ViewshedWarning
+from viewshed.notes import noted
 from viewshed.places import Observer, Sector, Target
 
 if TYPE_CHECKING:
@@ -101,6 +102,7 @@ def arguments(
     *,
     dem: Sequence[PathLike] = (),
     surface: Sequence[PathLike] = (),
+    void_mask: PathLike | None = None,
 ) -> Arguments:
     """Turn a record back into the calls that make its result.
 
@@ -112,6 +114,8 @@ def arguments(
         The folder it lies in, from which its paths lead.
     dem, surface : sequence of paths, optional
         Where elevation grid and surface are now, if not where the record says.
+    void_mask : path, optional
+        Where the mask of voids is now.
 
     Returns
     -------
@@ -128,13 +132,18 @@ def arguments(
         msg = f"surface {os.fspath(surface[0])}: the record has none; leave --surface out"
         raise InputError(msg)
     mask = options.get("void_mask")
+    if void_mask is not None and mask is None:
+        msg = f"void mask {os.fspath(void_mask)}: the record has none; leave --void-mask out"
+        raise InputError(msg)
+    if mask is not None:
+        mask = _places([mask], folder, () if void_mask is None else (void_mask,))[0]
     return Arguments(
         terrain={
             "paths": _places(options["dem"], folder, dem),
             "crs": options["crs"],
             "height_unit": options["height_unit"],
             "void_height": options.get("void_height_m"),
-            "void_mask": None if mask is None else _place(mask, folder),
+            "void_mask": mask,
         },
         surface=_surface(options, folder, surface),
         observers=[_observer(one) for one in options["observers"]],
@@ -218,6 +227,7 @@ def check_inputs(
     *,
     dem: Sequence[PathLike] = (),
     surface: Sequence[PathLike] = (),
+    void_mask: PathLike | None = None,
 ) -> list[Input]:
     """Compare every input that a record names with its size and SHA-256.
 
@@ -229,6 +239,8 @@ def check_inputs(
         The folder it lies in.
     dem, surface : sequence of paths, optional
         Where elevation grid and surface are now, if not where the record says.
+    void_mask : path, optional
+        Where the mask of voids is now.
 
     Returns
     -------
@@ -237,20 +249,20 @@ def check_inputs(
     """
     options = record["options"]
     mask = options.get("void_mask")
-    found = []
-    for entry in record["dem"]:
-        is_mask = mask is not None and _same_stem(entry["path"], mask)
-        moved = () if is_mask else dem
-        found.append(_input(entry, _find(entry["path"], folder, options["dem"], moved)))
-    for entry in (record["surface"] or {"files": []})["files"]:
-        place = _find(entry["path"], folder, options.get("surface") or [], surface)
-        found.append(_input(entry, place))
-    return found
+    masks = () if void_mask is None else (void_mask,)
+    return [
+        _input(entry, _find(entry["path"], folder, named, moved))
+        for entries, named, moved in (
+            (record["dem"], options["dem"], dem),
+            (_surface_files(record), options.get("surface") or [], surface),
+            (record["heights"].get("void_mask_files", []), [mask] if mask else [], masks),
+        )
+        for entry in entries
+    ]
 
 
-def _same_stem(one: str, two: str) -> bool:
-    """Tell whether two paths are files of one set, like those of a shapefile."""
-    return PurePosixPath(one).with_suffix("") == PurePosixPath(two).with_suffix("")
+def _surface_files(record: Mapping[str, Any]) -> list[dict[str, Any]]:
+    return list(record["surface"]["files"]) if record["surface"] else []
 
 
 def _find(path: str, folder: PathLike, named: Sequence[str], moved: Sequence[PathLike]) -> Path:
@@ -300,7 +312,8 @@ def _new_inputs(checked: Sequence[Input], new: Mapping[str, Any], folder: Path) 
     """Name what was read now and is none of the inputs that were checked."""
     known = {one.path.resolve() for one in checked}
     found = []
-    for entry in [*new["dem"], *(new["surface"] or {"files": []})["files"]]:
+    masks = new["heights"].get("void_mask_files", [])
+    for entry in [*new["dem"], *_surface_files(new), *masks]:
         path = Path(folder, entry["path"]).resolve()
         if path not in known:
             told = f"{path}: was read now and the record does not name it"
@@ -336,6 +349,7 @@ def rerun(
     *,
     dem: Sequence[PathLike] = (),
     surface: Sequence[PathLike] = (),
+    void_mask: PathLike | None = None,
     threads: int | None = None,
     overwrite: bool = False,
     progress: Callable[[float, float], None] | None = None,
@@ -352,6 +366,8 @@ def rerun(
         Folder for the new result, which is kept whatever comes out.
     dem, surface : sequence of paths, optional
         Where elevation grid and surface are now, if not where the record says.
+    void_mask : path, optional
+        Where the mask of voids is now.
     threads : int, optional
         Threads to use.
     overwrite : bool, optional
@@ -380,13 +396,16 @@ def rerun(
     old, folder, out = read_record(record_path), _folder(record_path), Path(out_dir)
     check_folder(record_path, out)
     check_out_dir(out, overwrite)
-    asked = arguments(old, folder, dem=dem, surface=surface)
-    inputs = check_inputs(old, folder, dem=dem, surface=surface)
+    asked = arguments(old, folder, dem=dem, surface=surface, void_mask=void_mask)
+    inputs = check_inputs(old, folder, dem=dem, surface=surface, void_mask=void_mask)
     _warn_of(inputs)
     missing = [one.path.name for one in inputs if one.state == "missing"]
     if missing:
         some = f"{missing[0]} and {len(missing) - 1} more" if len(missing) > 1 else missing[0]
-        msg = f"inputs are missing: {some}; put them back or say where they are (--dem, --surface)"
+        msg = (
+            f"inputs are missing: {some}; put them back or say where they are (--dem, --surface, "
+            "--void-mask)"
+        )
         raise DataError(msg)
     _run(asked, out, overwrite=overwrite, threads=threads, progress=progress)
     new = read_record(out)
@@ -407,12 +426,14 @@ def _run(asked: Arguments, out: Path, *, overwrite: bool, **how: Any) -> None:
     from viewshed.api import map_visibility
     from viewshed.io.elevation import open_terrain
 
-    terrain = open_terrain(**asked.terrain)
-    surface = None
-    if asked.surface is not None:
-        from viewshed.io.surface import open_surface
+    with noted() as notes:
+        terrain = open_terrain(**asked.terrain)
+        surface = None
+        if asked.surface is not None:
+            from viewshed.io.surface import open_surface
 
-        given = dict(asked.surface)
-        surface = open_surface(given.pop("paths"), terrain, **given)
-    result = map_visibility(terrain, asked.observers, surface=surface, **asked.map, **how)
+            given = dict(asked.surface)
+            surface = open_surface(given.pop("paths"), terrain, **given)
+    made = {"surface": surface, "notes": notes, **asked.map, **how}
+    result = map_visibility(terrain, asked.observers, **made)
     result.write(out, overwrite=overwrite, **asked.write)

@@ -380,3 +380,17 @@ def test_matching(tmp_path):
         f"{tmp_path / 'a.tif'}: differs from the record",
         f"{tmp_path / 'b.png'}: is missing",
     ]
+
+
+def test_paths_in_warnings_lead_from_the_record_however_they_were_typed(tmp_path, monkeypatch):
+    """A path is replaced as a word of its own, and only once."""
+    (tmp_path / "in").mkdir()
+    (tmp_path / "out").mkdir()
+    monkeypatch.chdir(tmp_path)
+    for typed in ("in/a.tif", "./in/a.tif", str(tmp_path / "in/a.tif")):
+        told = f"{typed}: 3 cells; see {typed}.aux.xml and old/{Path(typed).name}"
+        dem = [{"path": typed, "size": 3, "sha256": SHA}]
+        made = build_record(sections(dem=dem, warnings=[told]), folder=tmp_path / "out")
+        (said,) = made["warnings"]
+        assert said.startswith("../in/a.tif: 3 cells; see ")
+        assert said.endswith(f"{typed}.aux.xml and old/a.tif")

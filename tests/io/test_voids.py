@@ -1,5 +1,7 @@
 """Voids: what counts as one though it is not declared, and the height a user gives to them."""
 
+import hashlib
+
 import geopandas
 import numpy as np
 import pytest
@@ -275,7 +277,19 @@ def test_mask_in_a_folder(coast, tmp_path):
     mask = polygons(tmp_path / "sea.gdb", [cells((0, 12), (0, 10))], driver="OpenFileGDB")
     terrain = open_terrain(coast, void_height=0, void_mask=mask)
     assert terrain.load(*ALL).voids_set == 36
-    assert len(terrain.fingerprint(*ALL).entries) > 3
+    assert len(terrain.fingerprint(*ALL).mask_entries) > 3
+
+
+def test_a_mask_that_is_replaced_once_it_was_read_is_refused(coast, tmp_path):
+    mask = polygons(tmp_path / "sea.gpkg", [cells((2, 6), (3, 9))])
+    before = mask.read_bytes()
+    terrain = open_terrain(coast, void_height=0, void_mask=mask)
+    taken = terrain.fingerprint(*ALL)
+    assert [entry["sha256"] for entry in taken.mask_entries] == [hashlib.sha256(before).hexdigest()]
+    taken.confirm()
+    polygons(mask, [cells((0, 3), (0, 3))])
+    with pytest.raises(DataError, match=r"sea\.gpkg: was replaced while it was read"):
+        terrain.fingerprint(*ALL).confirm()
 
 
 def test_mask_that_does_not_reach_the_window(coast, tmp_path):

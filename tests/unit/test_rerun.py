@@ -234,16 +234,40 @@ def test_a_moved_input_that_is_not_there(tmp_path):
     assert [one.state for one in found] == ["missing"]
 
 
+def masked_record():
+    record = a_record(
+        options=options(dem=["dems/sea.tif"], void_mask="sea.shp", void_height_m=0.0),
+        dem=[entry("dems/sea.tif")],
+    )
+    record["heights"]["void_mask_files"] = [entry("sea.shp"), entry("sea.dbf")]
+    return record
+
+
+def placed(found, folder):
+    return [(path.relative_to(folder).as_posix(), state) for path, state in found]
+
+
 def test_a_mask_of_voids_stays_where_the_record_says(tmp_path):
-    put(tmp_path / "new/a.tif")
-    put(tmp_path / "sea.shp")
-    put(tmp_path / "sea.dbf")
-    dem = [entry("dems/a.tif"), entry("sea.shp"), entry("sea.dbf")]
-    record = a_record(options=options(void_mask="sea.shp", void_height_m=0.0), dem=dem)
-    found = states(record, tmp_path, dem=[tmp_path / "new/a.tif"])
-    assert [(path.relative_to(tmp_path).as_posix(), state) for path, state in found] == [
-        ("new/a.tif", "same"), ("sea.shp", "same"), ("sea.dbf", "same"),
+    """Also where the grid, which has moved, has its name."""
+    for name in ("new/sea.tif", "sea.shp", "sea.dbf"):
+        put(tmp_path / name)
+    found = states(masked_record(), tmp_path, dem=[tmp_path / "new/sea.tif"])
+    assert placed(found, tmp_path) == [
+        ("new/sea.tif", "same"), ("sea.shp", "same"), ("sea.dbf", "same"),
     ]  # fmt: skip
+
+
+def test_a_mask_of_voids_that_has_moved(tmp_path):
+    for name in ("dems/sea.tif", "there/sea.shp", "there/sea.dbf"):
+        put(tmp_path / name)
+    found = states(masked_record(), tmp_path, void_mask=tmp_path / "there/sea.shp")
+    assert placed(found, tmp_path) == [
+        ("dems/sea.tif", "same"), ("there/sea.shp", "same"), ("there/sea.dbf", "same"),
+    ]  # fmt: skip
+    asked = arguments(masked_record(), tmp_path, void_mask=tmp_path / "there/sea.shp")
+    assert asked.terrain["void_mask"] == str(tmp_path / "there/sea.shp")
+    with pytest.raises(InputError, match="the record has none; leave --void-mask out"):
+        arguments(a_record(), tmp_path, void_mask="sea.shp")
 
 
 # --- the run ------------------------------------------------------------------------------------

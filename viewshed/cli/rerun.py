@@ -47,7 +47,7 @@ missing; the new result is kept in any case.
 """
 
 SECTIONS = {
-    "What has moved": ("dem", "surface"),
+    "What has moved": ("dem", "surface", "void_mask"),
     "Results": ("out", "overwrite", "as_json"),
 }
 #: Words for people.
@@ -86,6 +86,9 @@ _WORDS = {
     metavar="PATH",
     help="Where the surface is now; can be repeated.",
 )
+@click.option(
+    "--void-mask", type=click.Path(), metavar="PATH", help="Where the mask of voids is now."
+)
 @click.option("--overwrite", is_flag=True, help="Replace results that are already in DIR.")
 @click.option("--json", "as_json", is_flag=True, help="Print the comparison as JSON instead.")
 @click.option(
@@ -112,6 +115,7 @@ def rerun_command(ctx: click.Context, /, **given: Any) -> None:
             given["out"],
             dem=given["dem"],
             surface=given["surface"],
+            void_mask=given["void_mask"],
             threads=given["threads"],
             overwrite=given["overwrite"],
             progress=progress,

@@ -195,7 +195,7 @@ class Terrain:
         -------
         Fingerprint
             Its `entries` name the files, and `confirm` makes sure at the end that they are the
-            same. Files that belong to a raster follow it; those of the void mask come last.
+            same. Files that belong to a raster follow it; those of the void mask are apart.
 
         Raises
         ------
@@ -207,7 +207,8 @@ class Terrain:
         self.grid.window(row_off, col_off, rows, cols)
         parts = self._layout.parts(row_off, col_off, rows, cols)
         files = [file for part in parts for file in _files(part)]
-        return Fingerprint([*files, *(self.void_height.files if self.void_height else ())])
+        mask = None if self.void_height is None else self.void_height.fingerprint
+        return Fingerprint(files, mask)
 
     def fingerprints(self) -> list[dict[str, Any]]:
         """Give name, size and SHA-256 of every file, as `fingerprint` does for the whole grid."""

@@ -15,11 +15,15 @@ class Fingerprint:
     ----------
     files : iterable of pathlib.Path
         The files.
+    mask : Fingerprint, optional
+        That of the void mask, which was read when the terrain was opened.
 
     Attributes
     ----------
     entries : list of dict
         One a file: ``path`` (as given), ``size`` [bytes] and ``sha256``.
+    mask_entries : list of dict
+        The same of the files of the void mask.
 
     Raises
     ------
@@ -27,7 +31,9 @@ class Fingerprint:
         If a file cannot be read.
     """
 
-    def __init__(self, files: Iterable[Path]) -> None:
+    def __init__(self, files: Iterable[Path], mask: "Fingerprint | None" = None) -> None:
+        self._mask = mask
+        self.mask_entries = [] if mask is None else mask.entries
         self.entries: list[dict[str, Any]] = []
         self._states: list[tuple[int, ...]] = []
         for file in dict.fromkeys(files):
@@ -55,6 +61,8 @@ class Fingerprint:
                 raise DataError(msg) from error
             msg = f"{file}: was replaced while it was read; start again"
             raise DataError(msg)
+        if self._mask is not None:
+            self._mask.confirm()
 
 
 def _taken(file: Path) -> tuple[tuple[int, ...], str]:

@@ -10,6 +10,7 @@ import json
 import math
 import os
 import platform
+import re
 from collections.abc import Iterator, Mapping
 from functools import cache
 from importlib import metadata, resources
@@ -170,14 +171,20 @@ def _make_relative(record: dict[str, Any], folder: str | os.PathLike[str]) -> No
     for holder, key in _paths(record):
         path = holder[key]
         moved[path] = holder[key] = relative_pattern(path, folder)
-    for old in sorted(filter(os.path.isabs, moved), key=len, reverse=True):
-        record["warnings"] = [text.replace(old, moved[old]) for text in record["warnings"]]
+    longest_first = sorted(moved, key=len, reverse=True)
+    # as a word of its own: "dem.tif" does not stand in "old/dem.tif" or "dem.tif.aux.xml"
+    one_of = "|".join(map(re.escape, longest_first))
+    paths = re.compile(rf"(?<![\w./\\-])({one_of})(?![\w/\\-]|\.\w)")
+    record["warnings"] = [
+        paths.sub(lambda found: moved[found[1]], text) for text in record["warnings"]
+    ]
 
 
 def _paths(record: dict[str, Any]) -> Iterator[tuple[Any, Any]]:
     """Yield the object or list and the key under which each path of an input stands."""
     options, heights = record["options"], record["heights"]
-    for entry in [*record["dem"], *(record["surface"] or {"files": []})["files"]]:
+    files = [*record["dem"], *(record["surface"] or {"files": []})["files"]]
+    for entry in [*files, *heights.get("void_mask_files", [])]:
         yield entry, "path"
     for names in (options["dem"], options.get("surface") or []):
         yield from ((names, index) for index in range(len(names)))

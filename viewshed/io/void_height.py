@@ -13,6 +13,7 @@ from rasterio.features import rasterize
 from viewshed import geodesy
 from viewshed.errors import DataError, InputError
 from viewshed.grid import Grid
+from viewshed.io.fingerprint import Fingerprint
 from viewshed.io.mosaic import Heights
 
 if TYPE_CHECKING:
@@ -48,8 +49,8 @@ class VoidHeight:
     ----------
     height : float
         Height of voids [m].
-    files : tuple of pathlib.Path
-        The vector file and those that belong to it.
+    fingerprint : Fingerprint
+        Of the vector file and those that belong to it, taken before it was read.
 
     Raises
     ------
@@ -64,12 +65,13 @@ class VoidHeight:
             msg = f"void height {height} is not a height; give metres, like 0"
             raise InputError(msg)
         self.height = float(height)
-        self.files: tuple[Path, ...] = ()
+        self.fingerprint = Fingerprint(())
         self._mask: geopandas.GeoSeries | None = None
         if mask is not None:
             path = Path(mask)
+            if path.exists():
+                self.fingerprint = Fingerprint(_files(path))
             self._mask = read_polygons(path)
-            self.files = _files(path)
 
     def fill(self, grid: Grid, heights: Heights) -> int:
         """Give voids the height.
