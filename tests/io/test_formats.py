@@ -1,6 +1,7 @@
 """Elevation in the formats that people have, each read to the same heights."""
 
 import shutil
+import zipfile
 from pathlib import Path
 
 import numpy as np
@@ -282,6 +283,40 @@ def test_virtual_raster_behind_a_link(make_dem, tmp_path):
     link = tmp_path / "link.vrt"
     link.symlink_to(tmp_path / "deep" / "v.vrt")
     assert open_terrain(link).read(0, 0, 12, 10)[11, 9] == 119
+
+
+def fingerprinted(path):
+    """Names of the files, from the folder of the first, that a raster's heights depend on."""
+    entries = open_terrain(path).fingerprint(0, 0, 12, 20).entries
+    return [Path(entry["path"]).relative_to(path.parent).as_posix() for entry in entries]
+
+
+def test_every_file_that_heights_depend_on_is_fingerprinted(make_dem, tmp_path):
+    """One of the same name within, the header of bare cells, an archive."""
+    heights = np.ones((12, 20), np.float32)
+    tile = make_dem("tile.tif", heights)
+    (tmp_path / "in").mkdir()
+    shutil.copy(tile, tmp_path / "in" / "tile.tif")
+    within, outer = tmp_path / "in" / "dem.vrt", tmp_path / "dem.vrt"
+    within.write_text(vrt([("tile.tif", 0, 0, 20, 12)]), encoding="utf-8")
+    outer.write_text(vrt([("in/dem.vrt", 0, 0, 20, 12)]), encoding="utf-8")
+    assert fingerprinted(outer) == ["dem.vrt", "in/dem.vrt", "in/tile.tif"]
+
+    rasterio.shutil.copy(tile, tmp_path / "bare.bil", driver="EHdr")
+    bare = tmp_path / "of bare.vrt"
+    bare.write_text(vrt([("bare.bil", 0, 0, 20, 12)]), encoding="utf-8")
+    assert fingerprinted(bare) == ["of bare.vrt", "bare.bil", "bare.hdr"]
+
+    with zipfile.ZipFile(tmp_path / "a.zip", "w") as archive:
+        archive.write(tile, "tile.tif")
+    packed = tmp_path / "of packed.vrt"
+    packed.write_text(
+        vrt([(f"/vsizip/{tmp_path}/a.zip/tile.tif", 0, 0, 20, 12)]).replace(
+            'relativeToVRT="1"', 'relativeToVRT="0"'
+        ),
+        encoding="utf-8",
+    )
+    assert fingerprinted(packed) == ["of packed.vrt", "a.zip"]
 
 
 def test_virtual_raster_that_is_no_xml(make_dem, tmp_path):

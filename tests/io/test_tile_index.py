@@ -89,6 +89,26 @@ def test_tile_that_changed_is_read_again(tiles, tmp_path, make_dem, count_header
     np.testing.assert_array_equal(terrain.read(20, 40, 10, 20), whole[:10, :20])
 
 
+def test_a_file_that_came_beside_a_tile_has_its_header_read_again(tiles, tmp_path, count_headers):
+    folder, whole = tiles
+    index = tmp_path / "index.json"
+    open_terrain(folder).save_index(index)
+    count_headers.clear()
+    (folder / "20-40.tif.aux.xml").write_text(
+        '<PAMDataset><PAMRasterBand band="1"><NoDataValue>'
+        f"{whole[25, 45]}</NoDataValue></PAMRasterBand></PAMDataset>",
+        encoding="utf-8",
+    )
+    terrain = open_terrain(folder, index=index)
+    assert count_headers == ["20-40.tif"]
+    assert np.isnan(terrain.read(20, 40, 10, 20)[5, 5])
+    terrain.save_index(index)
+    (folder / "20-40.tif.aux.xml").unlink()
+    count_headers.clear()
+    assert open_terrain(folder, index=index).read(20, 40, 10, 20)[5, 5] == whole[25, 45]
+    assert count_headers == ["20-40.tif"]
+
+
 def test_tile_that_changed_unseen_is_found_out(tiles, tmp_path, make_dem):
     folder, whole = tiles
     index, path = tmp_path / "index.json", folder / "20-40.tif"

@@ -114,6 +114,24 @@ def test_fine_steps_that_pass_the_value_are_ground(make_dem):
     np.testing.assert_allclose(heights, steps * 0.01, rtol=1e-6)
 
 
+def test_what_a_value_means_does_not_depend_on_the_window(make_dem, monkeypatch):
+    """Nor on the strips that are read at a time, nor on how much of a large tile is looked at."""
+    floor = np.linspace(-9900, -10100, 60 * 80).reshape(60, 80).astype(np.int16)
+    assert (floor == -9999).any()
+    terrain = open_terrain(make_dem("floor.tif", floor))
+    row, col = (int(v[0]) for v in np.nonzero(floor == -9999))
+    assert terrain.read(0, 0, 60, 80)[row, col] == -9999
+    assert terrain.read(row, col, 1, 1)[0, 0] == -9999
+    monkeypatch.setattr("viewshed.io._cells._STRIP_CELLS", 80)
+    monkeypatch.setattr("viewshed.io._cells._MOST_CELLS", 1200)
+    again = open_terrain(make_dem("floor again.tif", floor))
+    assert again.read(row, col, 1, 1)[0, 0] == -9999
+    land = np.where(floor == -9999, floor, 12).astype(np.int16)
+    holed = open_terrain(make_dem("holed.tif", land))
+    with pytest.warns(ViewshedWarning, match="cells of -9999"):
+        assert np.isnan(holed.read(row, 0, 1, 80)[0, col])
+
+
 def test_masked_cells_may_hold_anything(make_dem):
     mask = np.full(PLAIN.shape, 255, np.uint8)
     mask[0, 5:8] = 0

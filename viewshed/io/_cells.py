@@ -2,7 +2,8 @@
 
 from collections.abc import Iterator
 from dataclasses import dataclass, field
-from math import isinf, isnan
+from functools import lru_cache
+from math import ceil, isinf, isnan, sqrt
 from typing import Any
 
 import numpy as np
@@ -16,6 +17,8 @@ from viewshed.io.mosaic import Heights, Part, Tile
 
 #: Most cells of a strip that is read at a time.
 _STRIP_CELLS = 1 << 22
+#: Most cells of a tile that are looked at to understand one value.
+_MOST_CELLS = 1 << 28
 #: Fewest cells of a block that a thread unpacks faster than it is handed the block.
 _WORTH_A_THREAD = 1 << 15
 
@@ -151,7 +154,7 @@ def _to_metres(tile: Tile, file: Any, window: Window, notes: Noticed) -> Heights
         np.copyto(heights, np.float32(np.nan), where=void)
     low, high = _bounds(heights)
     if voids.may_hold_undeclared(tile, low, high):
-        for value, void in voids.undeclared(tile, raw, heights):
+        for value, void in voids.undeclared(tile, raw, heights, _is_habit):
             np.copyto(heights, np.float32(np.nan), where=void)
             cells = int(np.count_nonzero(void))
             notes.undeclared[value] = notes.undeclared.get(value, 0) + cells
@@ -165,6 +168,25 @@ def _to_metres(tile: Tile, file: Any, window: Window, notes: Noticed) -> Heights
         raise DataError(msg)
     notes.is_known |= not isnan(low)
     return heights
+
+
+@lru_cache(maxsize=4096)
+def _is_habit(tile: Tile, value: float) -> bool:
+    """Tell whether a value means a void in a tile, from the whole of it, whatever is asked for.
+
+    Of a tile too large for that every so many rows and columns are looked at.
+    """
+    rows, cols = tile.shape
+    skip = ceil(sqrt(rows * cols / _MOST_CELLS))
+    with opened(tile.path, **_options(tile)) as file:
+
+        def read(first: int, count: int) -> NDArray[Any]:
+            thinned = (max(1, count // skip), max(1, cols // skip))
+            window = Window(0, first, cols, count)
+            return np.asarray(file.read(1, window=window, out_shape=thinned))
+
+        strips = (read(*strip) for strip in _strips(tile, 0, tile.shape))
+        return voids.speaks_of_voids(tile, value, strips)
 
 
 def _converted(tile: Tile, raw: NDArray[Any]) -> Heights:

@@ -227,8 +227,10 @@ def _is_raw(path: Path, file: Any) -> bool:
 def _files(path: Path, file: Any, sources: list[Path]) -> tuple[Path, ...]:
     """Give the files that a raster is made of, itself first, overviews left out."""
     others = {Path(name) for name in file.files} | set(sources)
-    kept = [p for p in others if p.suffix not in _SIDE_SUFFIXES and p.name != path.name]
-    return (path, *sorted(p for p in kept if p.is_file()))
+    others |= {source.with_suffix(".hdr") for source in sources}  # says how bare cells are packed
+    kept = [p for p in others if p.suffix not in _SIDE_SUFFIXES and p != path]
+    own = path.resolve()
+    return (path, *sorted(p for p in kept if p.is_file() and p.resolve() != own))
 
 
 def is_foreign(path: Path) -> bool:

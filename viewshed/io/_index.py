@@ -48,6 +48,35 @@ class _Names:
         return Path(os.path.normpath(os.path.join(self._folder, name)))  # noqa: PTH118
 
 
+class _Siblings:
+    """Files that share the beginning of their names with a tile, and so may belong to it."""
+
+    def __init__(self) -> None:
+        self._folders: dict[str, dict[str, list[str]]] = {}
+
+    def of(self, path: Path) -> list[str]:
+        """Give their names, those of folders listed once."""
+        folder, name = os.path.split(path)
+        if folder not in self._folders:
+            self._folders[folder] = _by_stem(folder or ".")
+        return [other for other in self._folders[folder].get(_stem(name), []) if other != name]
+
+
+def _by_stem(folder: str) -> dict[str, list[str]]:
+    found: dict[str, list[str]] = {}
+    try:
+        names = sorted(os.listdir(folder))  # noqa: PTH208 - ten times faster
+    except OSError:
+        return {}
+    for name in names:
+        found.setdefault(_stem(name), []).append(name)
+    return found
+
+
+def _stem(name: str) -> str:
+    return name.partition(".")[0].lower()
+
+
 class Index:
     """Headers of tiles from an index file.
 
@@ -59,6 +88,7 @@ class Index:
 
     def __init__(self, path: str | os.PathLike[str] | None = None) -> None:
         self._names = _Names(None if path is None else Path(path))
+        self._siblings = _Siblings()
         self._entries: dict[str, Any] = {}
         self._wkts: list[str] = []
         if path is not None and os.path.lexists(path):
@@ -85,6 +115,8 @@ class Index:
         states = tuple(file_state(file) for file in files)
         if states != tuple(map(tuple, entry["states"])):
             return None
+        if self._siblings.of(path) != entry["siblings"]:
+            return None  # a file that came or went may say something of the tile
         nodata = entry["nodata"]
         return Header(
             path=path,
@@ -122,13 +154,14 @@ def save(path: str | os.PathLike[str], headers: Iterable[Header]) -> None:
         If the file cannot be written, or is there and no index.
     """
     final = Path(path)
-    names = _Names(final)
+    names, siblings = _Names(final), _Siblings()
     wkts: dict[str, int] = {}
     tiles = {}
     for header in headers:
         if not header.pieces:
             number = wkts.setdefault(header.own_wkt, len(wkts))
-            tiles[names.name(header.path)] = _entry(header, number, names)
+            entry = _entry(header, number, names)
+            tiles[names.name(header.path)] = entry | {"siblings": siblings.of(header.path)}
     body = _text({"made_by": _made_by(), "crs": list(wkts), "tiles": tiles})
     head = _text({"format": _FORMAT, "sha256": hashlib.sha256(body.encode()).hexdigest()})
     _refuse_foreign(final)

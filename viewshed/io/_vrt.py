@@ -56,14 +56,25 @@ def _pieces(path: Path, seen: set[Path]) -> Iterator[Piece]:
 
 
 def _place(name: ElementTree.Element, folder: Path) -> Path | None:
-    """Give the file that a source names, None if it is no plain file."""
+    """Give the file that a source names or lies in, None if it is no plain file."""
     text = name.text or ""
     is_beside = name.get("relativeToVRT", name.get("relativetoVRT")) == "1"
-    if not text or text.startswith("/vsi"):
+    if text.startswith("/vsi"):
+        return _archive(text)
+    if not text:
         return None
     place = folder / text if is_beside else Path(text)
     is_plain = ":" not in text or Path(text).drive or place.exists()
     return place if is_plain else None
+
+
+def _archive(text: str) -> Path | None:
+    """Give the archive on this machine that a member is named in, None where there is none."""
+    _, kind, *parts = text.split("/")
+    if kind not in {"vsizip", "vsitar", "vsigzip"}:
+        return None
+    places = (Path("/".join(parts[:n])) for n in range(1, len(parts) + 1))
+    return next((place for place in places if place.is_file()), None)
 
 
 def _target(source: ElementTree.Element) -> tuple[tuple[int, int], tuple[int, int]] | tuple[()]:

@@ -1,6 +1,6 @@
 """Cells of a file that say nothing: declared as voids, or undeclared but void by habit."""
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterable, Iterator
 from math import isfinite, isinf, isnan
 from typing import Any
 
@@ -63,7 +63,10 @@ def may_hold_undeclared(tile: Tile, low: float, high: float) -> bool:
 
 
 def undeclared(
-    tile: Tile, raw: NDArray[Any], heights: Heights
+    tile: Tile,
+    raw: NDArray[Any],
+    heights: Heights,
+    is_habit: Callable[[Tile, float], bool],
 ) -> Iterator[tuple[float, BoolArray]]:
     """Find cells that hold a habitual void value which the file does not declare.
 
@@ -75,6 +78,8 @@ def undeclared(
         Cells as they are in the file.
     heights : numpy.ndarray, float32
         The same in metres, NaN for voids that are known already [m].
+    is_habit : callable
+        Tells whether a value means a void in the whole of a tile, see `speaks_of_voids`.
 
     Yields
     ------
@@ -82,27 +87,54 @@ def undeclared(
         The value in units of the file.
     void : numpy.ndarray of bool
         The cells that hold it.
-
-    Notes
-    -----
-    A sea floor may well be 9999 m deep, or the step of the cells so fine that the value is a
-    common height. Then more cells are near the value than exactly at it, and they are heights.
     """
     known = ~np.isnan(heights)
     if raw.dtype.kind == "f":
         lowest = (raw <= _LOWEST) & np.isfinite(raw) & known
         if lowest.any():
             yield float(raw[lowest][0]), lowest
-    found = {value: (raw == raw.dtype.type(value)) & known for value in _habitual(raw.dtype)}
-    counts = {value: int(np.count_nonzero(void)) for value, void in found.items()}
-    for value, void in found.items():
-        if counts[value] == 0:
-            continue
-        margin = _NEAR * abs(value)
-        near = (raw >= value - margin) & (raw <= value + margin) & known
-        voids = sum(n for other, n in counts.items() if abs(other - value) <= margin)
-        if int(np.count_nonzero(near)) - voids <= counts[value]:
+    for value in _habitual(raw.dtype):
+        void = (raw == raw.dtype.type(value)) & known
+        if void.any() and is_habit(tile, value):
             yield value, void
+
+
+def speaks_of_voids(tile: Tile, value: float, strips: Iterable[NDArray[Any]]) -> bool:
+    """Tell from all cells of a tile whether a habitual value means a void in it.
+
+    Parameters
+    ----------
+    tile : Tile
+        The tile.
+    value : float
+        The value in units of the file.
+    strips : iterable of numpy.ndarray
+        All its cells as they are in the file.
+
+    Returns
+    -------
+    bool
+        Whether at least as many cells hold it as hold other heights within a hundredth of it.
+
+    Notes
+    -----
+    A sea floor may well be 9999 m deep, or the step of the cells so fine that the value is a
+    common height. Then more cells are near the value than exactly at it, and they are heights.
+    """
+    exact = near = 0
+    margin = _NEAR * abs(value)
+    for raw in strips:
+        others = [other for other in _habitual(raw.dtype) if abs(other - value) <= margin]
+        around = (raw >= value - margin) & (raw <= value + margin)
+        for other in others:
+            at_it = raw == raw.dtype.type(other)
+            around &= ~at_it
+            exact += int(np.count_nonzero(at_it)) if other == value else 0
+        void = declared(raw, tile.nodata)
+        if void is not None:
+            around &= ~void
+        near += int(np.count_nonzero(around))
+    return near <= exact
 
 
 def _habitual(dtype: np.dtype[Any]) -> tuple[float, ...]:
