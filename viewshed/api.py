@@ -356,12 +356,13 @@ def _read(terrain: Terrain, surface: Surface | None, window: Window) -> tuple[_H
     if surface is not None:
         fingerprints.append(surface.fingerprint(*window))
     with noted(told=False) as notes:
-        reading = terrain.load(*window)
         over, median = None, None
         if surface is not None:
+            over = surface.read(*window)
+        reading = terrain.load(*window, cover=over)
+        if over is not None:
             from viewshed.io.surface import compare
 
-            over = surface.read(*window)
             median = compare(over, reading.elevation)
     if terrain.void_height is not None and not reading.voids_set:
         notes.append(

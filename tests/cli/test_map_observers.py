@@ -219,3 +219,20 @@ def test_a_name_that_is_no_file_name_is_refused_before_the_grid_is_read(tmp_path
     result = call(tmp_path / "no such.tif", tmp_path / "out", *words)
     assert result.exit_code == 1
     assert "'a/b'" in result.stderr
+
+
+def test_voids_that_are_stated_are_those_of_the_surface_too(tmp_path):
+    """Sea that both grids deliver as nodata; a void of the surface alone stays one."""
+    ground, cover = hills(), hills() + np.float32(1)
+    ground[60:], cover[60:], cover[30, 50] = np.nan, np.nan, np.nan
+    dem, dsm = write_dem(tmp_path / "dem.tif", ground), write_dem(tmp_path / "dsm.tif", cover)
+    words = ["--observer", at(40, 40), "--eye-height", "80", "--surface", dsm, "--range", "1km"]
+    assert call(dem, tmp_path / "void", *words).exit_code == 0
+    assert call(dem, tmp_path / "sea", *words, "--void-height", "0").exit_code == 0
+    void, sea = (read(tmp_path / name / "visible.tif")[0] for name in ("void", "sea"))
+    assert void.shape == sea.shape
+    assert (sea == 2).sum() < (void == 2).sum() + (void[47:] == 255).sum()
+    row, col = 40 - 33, 40 - 33  # the observer is in the middle of the circle of 33 cells
+    assert sea.shape == (67, 67)
+    assert sea[60 - row :, col + 20].tolist().count(2) == 0
+    assert sea[30 - row, 50 - col] == 2

@@ -11,8 +11,9 @@ import numpy as np
 from viewshed.io._ground import Rgb, View, index_of, plane
 from viewshed.io._labels import Room, closest, place_names
 from viewshed.io._reach import joint_outline
-from viewshed.io._round import ring_distances, ticks, told_length
+from viewshed.io._round import ring_distances, ticks
 from viewshed.io._sheet import HALO, INK, SOFT, Sheet
+from viewshed.wording import told_length
 
 if TYPE_CHECKING:
     from viewshed.io.picture import Scene

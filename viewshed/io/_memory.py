@@ -19,7 +19,7 @@ _FALLBACK = 2 << 30
 #: Bytes a cell of the layers that gather several observers.
 _GATHERED_BYTES = {"count": 2, "count-unresolved": 2, "who": 4}
 #: Memory of the page, the writers and the scratch arrays, beside the arrays of the window [bytes].
-_OVERHEAD = 500e6
+_OVERHEAD = 600e6
 
 
 def available_memory(root: Path = Path("/")) -> int:

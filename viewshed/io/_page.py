@@ -8,9 +8,10 @@ import numpy as np
 
 from viewshed.io._ground import View, colour, paint, view_of
 from viewshed.io._map_box import MOST_NAMES, MOST_RINGS, UNDER_MAP, MapBox
-from viewshed.io._round import round_down, told_length
+from viewshed.io._round import round_down
 from viewshed.io._sheet import INK, RULE, SOFT, Sheet
 from viewshed.io._steps import Step, step_colours, told_step
+from viewshed.wording import told_length
 
 if TYPE_CHECKING:
     from viewshed.io.picture import Scene, Words

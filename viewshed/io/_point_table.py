@@ -9,9 +9,6 @@ from typing import NamedTuple
 from viewshed.errors import DataError
 from viewshed.places import LENGTH_UNITS
 
-#: Most observers of one run: a count of them fits into 16 bits beside the value for nodata.
-MOST_POINTS = 65_534
-
 #: Columns that hold lengths, bearings, coordinates.
 LENGTHS = ("eye_height", "eye_elevation", "target_height", "range")
 BEARINGS = ("bearing_from", "bearing_to")

@@ -9,8 +9,9 @@ from math import isfinite
 from pathlib import Path
 
 from viewshed import geodesy
+from viewshed.constants import MOST_OBSERVERS
 from viewshed.errors import DataError, ViewshedWarning
-from viewshed.io._point_table import MOST_POINTS, Column, PointTable, Row, clean, columns_of
+from viewshed.io._point_table import Column, PointTable, Row, clean, columns_of
 
 #: Endings of the names of files that are read as tables of text.
 TEXT_SUFFIXES = (".csv", ".txt", ".tsv")
@@ -48,8 +49,8 @@ def read_text_points(path: Path, crs: str | None) -> PointTable:
     header, lines = _split(path, _text(path))
     columns = columns_of(path, header)
     east, north = _pair(path, columns)
-    if len(lines) > MOST_POINTS:
-        msg = f"{path}: holds {len(lines)} points; give at most {MOST_POINTS} observers"
+    if len(lines) > MOST_OBSERVERS:
+        msg = f"{path}: holds {len(lines)} points; give at most {MOST_OBSERVERS} observers"
         raise DataError(msg)
     for number, cells in lines:
         if len(cells) > len(columns) and any(c for c in cells[len(columns) :]):

@@ -10,8 +10,9 @@ import pyogrio
 import shapely
 
 from viewshed import geodesy
+from viewshed.constants import MOST_OBSERVERS
 from viewshed.errors import DataError, InputError, ViewshedWarning
-from viewshed.io._point_table import MOST_POINTS, PointTable, Row, clean, columns_of
+from viewshed.io._point_table import PointTable, Row, clean, columns_of
 
 _ARROW_READERS = {
     ".parquet": geopandas.read_parquet,
@@ -104,8 +105,8 @@ def _layer(path: Path, asked: str | None) -> str:
 
 
 def _check_number(path: Path, count: int) -> None:
-    if count > MOST_POINTS:
-        msg = f"{path}: holds {count} points; give at most {MOST_POINTS} observers"
+    if count > MOST_OBSERVERS:
+        msg = f"{path}: holds {count} points; give at most {MOST_OBSERVERS} observers"
         raise DataError(msg)
 
 

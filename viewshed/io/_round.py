@@ -42,8 +42,3 @@ def round_down(length: float) -> float:
 def _round_steps(low: float) -> list[float]:
     power = int(np.floor(np.log10(low)))
     return [float(f"{lead}e{power + i}") for i in range(3) for lead in (1, 2, 5)]
-
-
-def told_length(metres: float) -> str:
-    """Length in words, metres below one kilometre."""
-    return f"{metres / 1000:.6g} km" if metres >= 1000 else f"{metres:.4g} m"

@@ -118,7 +118,8 @@ def _compare(
     read = _reader(name, suffix)
     told = read(folders[0] / name, folders[1] / name)
     if told is None:
-        return Comparison(name, SAME_VALUES, "other bytes, the same content")
+        why = "the same item; its links lead from another folder" if name == STAC_NAME else ""
+        return Comparison(name, SAME_VALUES, why or "other bytes, the same content")
     return Comparison(name, DIFFERENT, told)
 
 

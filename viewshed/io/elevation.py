@@ -135,7 +135,9 @@ class Terrain:
         """
         return self.load(row_off, col_off, rows, cols).elevation
 
-    def load(self, row_off: int, col_off: int, rows: int, cols: int) -> Reading:
+    def load(
+        self, row_off: int, col_off: int, rows: int, cols: int, *, cover: Heights | None = None
+    ) -> Reading:
         """Read a window.
 
         Parameters
@@ -144,6 +146,9 @@ class Terrain:
             First row and column of the window in `grid`.
         rows, cols : int
             Size of the window.
+        cover : numpy.ndarray, float32, shape (rows, cols), optional
+            Heights of a surface over it [m], changed in place: where both are void and the voids
+            are stated to have a height, the surface has it too.
 
         Returns
         -------
@@ -169,7 +174,7 @@ class Terrain:
         with reading_env(len(self.tiles)):
             notes = [fill(part, out) for part in parts]
             overlap = _overlap(parts, notes)
-        voids_set = 0 if self.void_height is None else self.void_height.fill(window, out)
+        voids_set = 0 if self.void_height is None else self.void_height.fill(window, out, cover)
         if not voids_set and not any(note.is_known for note in notes):
             names = ", ".join(self.given[:3])
             msg = (

@@ -136,7 +136,7 @@ def write_stac(
 
 
 def _name(record: Mapping[str, Any]) -> str:
-    """Give an id that follows from the inputs, the options and the cells."""
+    """Give an id that follows from the inputs, the question and the cells."""
     outputs = record["outputs"].items()
     facts = {
         "question": record["question"],

@@ -73,7 +73,7 @@ class VoidHeight:
                 self.fingerprint = Fingerprint(_files(path))
             self._mask = read_polygons(path)
 
-    def fill(self, grid: Grid, heights: Heights) -> int:
+    def fill(self, grid: Grid, heights: Heights, cover: Heights | None = None) -> int:
         """Give voids the height.
 
         Parameters
@@ -82,11 +82,13 @@ class VoidHeight:
             Where the cells are.
         heights : numpy.ndarray, float32, shape (rows, cols)
             Heights [m], NaN for void; changed in place.
+        cover : numpy.ndarray, float32, shape (rows, cols), optional
+            Heights of a surface over them [m]; where both are void, both get the height.
 
         Returns
         -------
         int
-            Number of cells that got the height.
+            Number of cells of `heights` that got the height.
         """
         shapes = None if self._mask is None else _on_grid(self._mask, grid)
         step = max(1, _STRIP_CELLS // grid.cols)
@@ -99,6 +101,9 @@ class VoidHeight:
             if shapes is not None:
                 void &= _burn(shapes, grid.window(first, 0, *strip.shape))
             np.copyto(strip, np.float32(self.height), where=void)
+            if cover is not None:
+                over = cover[first : first + step]
+                np.copyto(over, np.float32(self.height), where=void & np.isnan(over))
             count += int(np.count_nonzero(void))
         return count
 
