@@ -43,14 +43,16 @@ def test_only_tiles_that_reach_into_the_window(tiles):
         terrain.fingerprint(0, 0, 41, 1)
 
 
-def test_files_of_the_void_mask_come_last(make_dem, tmp_path):
+def test_files_of_the_void_mask_stand_apart(make_dem, tmp_path):
     mask = tmp_path / "sea.shp"
     geopandas.GeoDataFrame(
         {"n": [1]}, geometry=[shapely.box(4e5, 5e6, 5e5, 6e6)], crs="EPSG:32633"
     ).to_file(mask)
     terrain = open_terrain(make_dem(), void_height=0, void_mask=mask)
-    assert names(terrain.fingerprint(*ALL)) == [
-        "dem.tif", "sea.shp", "sea.shx", "sea.dbf", "sea.prj", "sea.cpg",
+    found = terrain.fingerprint(*ALL)
+    assert names(found) == ["dem.tif"]
+    assert [Path(entry["path"]).name for entry in found.mask_entries] == [
+        "sea.shp", "sea.shx", "sea.dbf", "sea.prj", "sea.cpg",
     ]  # fmt: skip
 
 
