@@ -13,6 +13,10 @@ class DataError(ViewshedError):
     """An input file cannot be used."""
 
 
+class AllVoidError(DataError):
+    """No height is known in the whole of what was asked for."""
+
+
 class OutputError(ViewshedError, OSError):
     """A result could not be written whole; nothing of it was left behind."""
 

@@ -229,6 +229,20 @@ class Sector:
         return inside
 
 
+def _with_unit(
+    text: str, form: re.Pattern[str], units: dict[str, float], what: str, example: str
+) -> float:
+    """Read a number with a unit; the first unit is meant where none is given."""
+    match = form.fullmatch(str(text))
+    factor = units.get(match[2] or next(iter(units))) if match else None
+    value = float(match[1]) * factor if match and factor else float("nan")
+    if not isfinite(value):
+        told = ", ".join(units)
+        msg = f"{what} {text!r} is not a number with a unit; give it like {example} (units: {told})"
+        raise InputError(msg)
+    return value
+
+
 def parse_length(text: str) -> float:
     """Read a length such as ``30km``.
 
@@ -253,14 +267,7 @@ def parse_length(text: str) -> float:
     >>> parse_length("30km"), parse_length("1.7"), parse_length("6 ft")
     (30000.0, 1.7, 1.8288000000000002)
     """
-    match = _LENGTH.fullmatch(str(text))
-    factor = LENGTH_UNITS.get(match[2] or "m") if match else None
-    metres = float(match[1]) * factor if match and factor else float("nan")
-    if not isfinite(metres):
-        units = ", ".join(LENGTH_UNITS)
-        msg = f"length {text!r} is not a number with a unit; give it like 30km (units: {units})"
-        raise InputError(msg)
-    return metres
+    return _with_unit(text, _LENGTH, LENGTH_UNITS, "length", "30km")
 
 
 def _parse_pair(text: str, what: str, cure: str) -> tuple[float, float]:
@@ -359,11 +366,4 @@ def parse_area(text: str) -> float:
     >>> parse_area("2ha"), parse_area("900"), parse_area("0.5 km2")
     (20000.0, 900.0, 500000.0)
     """
-    match = _AREA.fullmatch(str(text))
-    factor = AREA_UNITS.get(match[2] or "m2") if match else None
-    square_metres = float(match[1]) * factor if match and factor else float("nan")
-    if not isfinite(square_metres):
-        units = ", ".join(AREA_UNITS)
-        msg = f"area {text!r} is not a number with a unit; give it like 2ha (units: {units})"
-        raise InputError(msg)
-    return square_metres
+    return _with_unit(text, _AREA, AREA_UNITS, "area", "2ha")

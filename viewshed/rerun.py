@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any, NamedTuple
 
 from viewshed.atmosphere import Refraction
 from viewshed.errors import DataError, InputError, ViewshedWarning
+from viewshed.io._files import file_sha256, is_pattern
 from viewshed.notes import noted
 from viewshed.places import Observer, Sector, Target
 
@@ -206,16 +207,11 @@ def _place(name: str, folder: PathLike) -> str:
     """Give a path or pattern of a record as one that leads from anywhere."""
     start = os.fspath(Path(folder).resolve())
     path = _joined(start, name)
-    is_pattern = _is_pattern(name) and not Path(path).exists()
-    return _joined(glob.escape(start), name) if is_pattern else path
+    return _joined(glob.escape(start), name) if is_pattern(name, start) else path
 
 
 def _joined(start: str, name: str) -> str:
     return os.path.normpath(os.path.join(start, name))  # noqa: PTH118 - it may be a pattern
-
-
-def _is_pattern(text: str) -> bool:
-    return bool(set("*?[") & set(text))
 
 
 # --- inputs -------------------------------------------------------------------------------------
@@ -294,8 +290,6 @@ def _beside(moved: Sequence[PathLike]) -> list[Path]:
 
 
 def _input(entry: Mapping[str, Any], path: Path) -> Input:
-    from viewshed.io._atomic import file_sha256
-
     try:
         size = path.stat().st_size
         same = size == entry["size"] and file_sha256(path) == entry["sha256"]

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 from viewshed import geodesy
 from viewshed._version import __version__
 from viewshed.constants import COUNT_NODATA, HIDDEN, NODATA, UNRESOLVED, VISIBLE
-from viewshed.errors import InputError, OutputError, ViewshedWarning
+from viewshed.errors import OutputError, ViewshedWarning
 from viewshed.io._atomic import RESULT_NAMES, check_out_dir, staged
 from viewshed.io._files import write_text
 from viewshed.io._names import file_names
@@ -25,11 +25,11 @@ from viewshed.wording import told_area
 
 if TYPE_CHECKING:
     import os
-    from collections.abc import Iterator
+    from collections.abc import Iterator, Sequence
 
     from numpy.typing import NDArray
 
-    from viewshed.grid import Grid
+    from viewshed.grid import Grid, PostMap
     from viewshed.io._atomic import Stage
     from viewshed.io.polygons import Patches
     from viewshed.result import MapResult, View
@@ -38,8 +38,6 @@ _log = logging.getLogger("viewshed")
 
 #: Who looks where the answer is that of all observers.
 EVERYBODY = "all"
-#: Formats that polygons can have.
-POLYGON_FORMATS = ("shp", "gpkg", "fgb", "parquet")
 
 #: Description, unit and no-data value of each layer's band, and how coarser copies are made.
 _BANDS: dict[str, tuple[str, str, float | None, str]] = {
@@ -80,22 +78,12 @@ def write_result(
     result: MapResult, out_dir: str | os.PathLike[str], *, overwrite: bool, wanted: Wanted
 ) -> list[Path]:
     """Write the files of a result; see `MapResult.write`."""
-    if wanted.polygons not in ("none", *POLYGON_FORMATS):
-        msg = (
-            f"polygon format {wanted.polygons!r} is not known; choose from none, "
-            f"{', '.join(POLYGON_FORMATS)}"
-        )
-        raise InputError(msg)
-    if wanted.polygons != "none":
-        from viewshed.io._vector import check_format
-
-        check_format(wanted.polygons)
-    stems = file_stems(result) if result.asked.each else []
-    check_out_dir(out_dir, overwrite)
+    each = [view.observer.name for view in result.views] if result.asked.each else []
+    check_outputs(out_dir, overwrite=overwrite, each=each, polygons=wanted.polygons)
     folder = Path(out_dir)
     _spare_the_inputs(result, folder)
     with staged(folder, overwrite=overwrite) as stage:
-        outputs = dict(_rasters(result, stage, stems, wanted))
+        outputs = dict(_rasters(result, stage, each, wanted))
         outputs |= _table(result, stage)
         if wanted.polygons != "none":
             outputs |= _polygons(result, stage, wanted)
@@ -107,15 +95,35 @@ def write_result(
     return [folder / name for name in [*names, "record.json"]]
 
 
-def file_stems(result: MapResult) -> list[str]:
-    """Give the part of a file name that stands for each observer.
+def check_outputs(
+    out_dir: str | os.PathLike[str], *, overwrite: bool, each: Sequence[str], polygons: str
+) -> None:
+    """Refuse outputs that could not be written, best before any work.
+
+    Parameters
+    ----------
+    out_dir : path
+        Folder of the results.
+    overwrite : bool
+        Whether an earlier result there may be replaced.
+    each : sequence of str
+        Names of the observers that get files of their own.
+    polygons : str
+        Format of the polygons, or ``"none"``.
 
     Raises
     ------
     InputError
-        If the name of an observer cannot name a file or two would name the same one.
+        If a name cannot name a file, two would name the same one, or the format is not known.
+    OutputError
+        If the folder cannot be used, or nothing here can write the format.
     """
-    return list(file_names([view.observer.name for view in result.views]))
+    file_names(each)
+    if polygons != "none":
+        from viewshed.io._vector import check_format
+
+        check_format(polygons)
+    check_out_dir(out_dir, overwrite)
 
 
 def patches_of(
@@ -292,7 +300,7 @@ def _page_names(names: list[str]) -> list[str]:
     return found
 
 
-def _middle_map(grid: Grid) -> Any:
+def _middle_map(grid: Grid) -> PostMap:
     """Local coordinates about the middle of a grid, good enough to draw with."""
     row, col = (grid.rows - 1) / 2.0, (grid.cols - 1) / 2.0
     return fit_post_map(grid, row, col, range_m=1e7, allowed_cells=math.inf)

@@ -13,7 +13,7 @@ from jsonschema import Draft202012Validator
 
 from viewshed.cli.main import cli
 from viewshed.cli.rerun import HELP
-from viewshed.io._atomic import file_sha256
+from viewshed.io._files import file_sha256
 from viewshed.io.record import matching, read_record, schema
 
 WEST, NORTH, CELL, SIZE = 500_000.0, 4_650_000.0, 30.0, 60

@@ -16,7 +16,8 @@ import pytest
 from tests.io.records import sections
 from viewshed.errors import OutputError
 from viewshed.io import _atomic
-from viewshed.io._atomic import check_out_dir, file_sha256, is_plain_name, staged
+from viewshed.io._atomic import check_out_dir, staged
+from viewshed.io._files import file_sha256, is_plain_name
 from viewshed.io.record import build_record, matching, relative_path
 
 ROOT = Path(__file__).parents[2]
@@ -590,21 +591,3 @@ def test_a_record_on_another_disk_finds_its_inputs(tmp_path, other_disk):
     found = relative_path(tmp_path / "ü dem.tif", other_disk / "out")
     (other_disk / "out").mkdir()
     assert (other_disk / "out" / found).read_text() == "heights"
-
-
-# --- single files -------------------------------------------------------------------------------
-
-
-def test_write_text(tmp_path):
-    path = tmp_path / "å table.csv"
-    assert _atomic.write_text(path, "å;1\n") == file_sha256(path)
-    assert path.read_bytes() == "å;1\n".encode()
-    with pytest.raises(OutputError, match=r"^[^\n]*a\.csv: cannot be written: No such file[^\n]*$"):
-        _atomic.write_text(tmp_path / "no/a.csv", "")
-
-
-def test_a_text_that_does_not_read_back(tmp_path, monkeypatch):
-    monkeypatch.setattr(Path, "read_bytes", lambda _: b"")
-    with pytest.raises(OutputError, match=r"a\.csv: cannot be written: it does not read back"):
-        _atomic.write_text(tmp_path / "a.csv", "x")
-    assert not list(tmp_path.iterdir())

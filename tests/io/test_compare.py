@@ -12,7 +12,7 @@ from shapely import box
 
 from tests.io.records import sections
 from viewshed.errors import DataError
-from viewshed.io._atomic import file_sha256
+from viewshed.io._files import file_sha256
 from viewshed.io.compare import Comparison, changes, compare_outputs, verdict
 from viewshed.io.raster import pixel_sha256
 from viewshed.io.record import build_record

@@ -17,7 +17,7 @@ from viewshed import geodesy
 from viewshed.constants import CAUTIONS
 from viewshed.errors import DataError, OutputError
 from viewshed.io import record as record_module
-from viewshed.io._atomic import file_sha256
+from viewshed.io._files import file_sha256
 from viewshed.io._schema import problem
 from viewshed.io.record import (
     build_record,

@@ -23,7 +23,9 @@ from viewshed.cli.options import (
     SectionedCommand,
     SectorType,
     columns,
+    overwrite_option,
     table,
+    threads_option,
     verbosity,
     verbosity_options,
 )
@@ -240,7 +242,7 @@ SECTIONS = {
     default="png",
     help="Page to look at. [default: png]",
 )
-@click.option("--overwrite", is_flag=True, help="Replace results that are already in DIR.")
+@overwrite_option
 @click.option(
     "--co",
     "creation_options",
@@ -249,17 +251,14 @@ SECTIONS = {
     metavar="NAME=VALUE",
     help="GDAL creation option for the rasters, like COMPRESS=ZSTD; can be repeated.",
 )
-@click.option(
-    "--threads",
-    type=click.IntRange(min=1),
-    metavar="N",
-    help="Threads to use. [default: all there are]",
-)
+@threads_option
 @verbosity_options
 @click.pass_context
 def map_command(ctx: click.Context, /, **given: Any) -> None:
     """Map what can be seen from one place or many."""
     from viewshed.notes import noted
+    from viewshed.placing import named
+    from viewshed.writing import check_outputs
 
     began, quiet = time.perf_counter(), verbosity(ctx) < 0
     check_grid_options(given)
@@ -267,7 +266,10 @@ def map_command(ctx: click.Context, /, **given: Any) -> None:
     options = _creation_options(given)
     with noted() as notes:
         observers = _observers(given)
-        _check_outputs(given, observers)
+        each = [one.name for one in named(observers)] if given["each"] else []
+        check_outputs(
+            given["out"], overwrite=given["overwrite"], each=each, polygons=given["polygons"]
+        )
         terrain = terrain_of(given, _index(given))
         surface = _surface(given, terrain)
 
@@ -321,22 +323,6 @@ def _check_pairs(given: dict[str, Any]) -> None:
             name = f"--{option.replace('_', '-')}"
             msg = f"{name} {given[option]} is said of a surface; give --surface too"
             raise click.UsageError(msg)
-
-
-def _check_outputs(given: dict[str, Any], observers: list[Observer]) -> None:
-    """Refuse before any work what could not be written after it."""
-    from viewshed.io._atomic import check_out_dir
-    from viewshed.placing import named
-
-    if given["each"]:
-        from viewshed.io._names import file_names
-
-        file_names([one.name for one in named(observers)])
-    if given["polygons"] != "none":
-        from viewshed.io._vector import check_format
-
-        check_format(given["polygons"])
-    check_out_dir(given["out"], overwrite=given["overwrite"])
 
 
 def _creation_options(given: dict[str, Any]) -> dict[str, str]:

@@ -222,6 +222,18 @@ class SectionedCommand(click.Command):
                     formatter.write_dl(rows)
 
 
+#: Options that more than one command has.
+overwrite_option = click.option(
+    "--overwrite", is_flag=True, help="Replace results that are already in DIR."
+)
+threads_option = click.option(
+    "--threads",
+    type=click.IntRange(min=1),
+    metavar="N",
+    help="Threads to use. [default: all there are]",
+)
+
+
 def verbosity_options(command: Command) -> Command:
     """Add -v and -q to a command; they work before anything else is read."""
     for option in (

@@ -11,7 +11,9 @@ from viewshed.cli.options import (
     FolderType,
     Progress,
     SectionedCommand,
+    overwrite_option,
     table,
+    threads_option,
     verbosity,
     verbosity_options,
 )
@@ -89,14 +91,9 @@ _WORDS = {
 @click.option(
     "--void-mask", type=click.Path(), metavar="PATH", help="Where the mask of voids is now."
 )
-@click.option("--overwrite", is_flag=True, help="Replace results that are already in DIR.")
+@overwrite_option
 @click.option("--json", "as_json", is_flag=True, help="Print the comparison as JSON instead.")
-@click.option(
-    "--threads",
-    type=click.IntRange(min=1),
-    metavar="N",
-    help="Threads to use. [default: all there are]",
-)
+@threads_option
 @verbosity_options
 @click.pass_context
 def rerun_command(ctx: click.Context, /, **given: Any) -> None:

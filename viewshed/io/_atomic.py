@@ -20,17 +20,14 @@ from typing import Any
 
 from viewshed.constants import LAYERS
 from viewshed.errors import OutputError
-from viewshed.io._files import file_sha256, is_plain_name, write_text
+from viewshed.io._files import is_plain_name
 
 try:
     import fcntl
 except ImportError:  # pragma: no cover  (no such module on Windows)
     fcntl = None  # type: ignore[assignment]
 
-__all__ = [
-    "RECORD_FORMAT", "RECORD_NAME", "RESULT_NAMES", "Stage", "check_out_dir", "file_sha256",
-    "is_plain_name", "staged", "write_text",
-]  # fmt: skip
+__all__ = ["RECORD_FORMAT", "RECORD_NAME", "RESULT_NAMES", "Stage", "check_out_dir", "staged"]
 
 RECORD_NAME = "record.json"
 #: What a record says in its section ``format``.

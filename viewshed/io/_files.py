@@ -1,4 +1,4 @@
-"""Single files: their SHA-256, names that stay in a folder, texts written whole."""
+"""Single files: their SHA-256, names and patterns, texts written whole."""
 
 import contextlib
 import hashlib
@@ -53,3 +53,14 @@ def is_plain_name(name: object) -> bool:
         and not name.startswith(".")
         and not set("/\\\0") & set(name)
     )
+
+
+def has_wildcard(text: str) -> bool:
+    """Tell whether a text could stand for several names."""
+    return bool(set("*?[") & set(text))
+
+
+def is_pattern(path: str | os.PathLike[str], folder: str | os.PathLike[str] = "") -> bool:
+    """Tell whether a path as seen from a folder is a pattern; what has just that name is none."""
+    text = os.fspath(path)
+    return has_wildcard(text) and not os.path.lexists(Path(folder, text))

@@ -1,4 +1,4 @@
-"""Round numbers for rulers, rings and edges, and lengths in words."""
+"""Round numbers for rulers, rings and edges."""
 
 from typing import Any
 

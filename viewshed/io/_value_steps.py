@@ -18,8 +18,8 @@ _TO_CENTIMETRES = 0.0051
 
 
 @dataclass(frozen=True)
-class Step:
-    """A step that all heights are whole multiples of.
+class Rounding:
+    """What heights are rounded to: a step that all of them are whole multiples of.
 
     Attributes
     ----------
@@ -36,7 +36,7 @@ class Step:
     slack: float = 0.0
 
 
-def _steps() -> list[Step]:
+def _steps() -> list[Rounding]:
     """Give the steps that are looked for, the largest first."""
     names = {
         1.0: "whole",
@@ -54,9 +54,9 @@ def _steps() -> list[Step]:
         (US_FOOT, "US survey foot", "US survey feet"),
     ):
         for part, name in names.items():
-            found.append(Step(part * size, f"{name} {many if part == 1.0 else one}"))
-        found += [Step(n * size, f"steps of {n} {many}") for n in (2, 5, 10, 20, 50, 100)]
-    found.append(Step(FOOT - 1e-9, "whole feet, rounded to centimetres", _TO_CENTIMETRES))
+            found.append(Rounding(part * size, f"{name} {many if part == 1.0 else one}"))
+        found += [Rounding(n * size, f"steps of {n} {many}") for n in (2, 5, 10, 20, 50, 100)]
+    found.append(Rounding(FOOT - 1e-9, "whole feet, rounded to centimetres", _TO_CENTIMETRES))
     return sorted(found, key=lambda step: -step.metres)
 
 
@@ -66,11 +66,11 @@ class StepFinder:
 
     Attributes
     ----------
-    left : list of Step
+    left : list of Rounding
         The steps that fit so far, the largest first.
     """
 
-    left: list[Step] = field(default_factory=_steps)
+    left: list[Rounding] = field(default_factory=_steps)
 
     def add(self, heights: NDArray[np.float32]) -> None:
         """Look at some heights [m], all of them known."""
@@ -91,6 +91,6 @@ class StepFinder:
                 kept.append(step)
         self.left = kept
 
-    def found(self, low: float, high: float) -> Step | None:
+    def found(self, low: float, high: float) -> Rounding | None:
         """Give the largest step that fits heights between two ends [m] and occurs in them."""
         return next((step for step in self.left if high - low >= 2.0 * step.metres), None)

@@ -7,9 +7,10 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from viewshed.errors import DataError, ViewshedWarning
+from viewshed.errors import AllVoidError, ViewshedWarning
 from viewshed.io.elevation import Terrain
 from viewshed.io.mosaic import Heights
+from viewshed.notes import noted
 
 #: Warnings of one kind that are told one by one.
 _TOLD = 3
@@ -42,15 +43,12 @@ class Windows:
         InputError, DataError
             As from `Terrain.read`, but not for a window that is void all over.
         """
-        with warnings.catch_warnings(record=True) as caught:
-            warnings.simplefilter("always", ViewshedWarning)
+        with noted(told=False) as met:
             try:
                 heights = self.terrain.read(row_off, col_off, rows, cols)
-            except DataError as error:
-                if "only voids" not in str(error):
-                    raise
+            except AllVoidError:
                 heights = np.full((rows, cols), np.nan, dtype=np.float32)
-        self.met += [str(w.message) for w in caught if issubclass(w.category, ViewshedWarning)]
+        self.met += met
         return heights
 
     def warn(self) -> None:

@@ -1,6 +1,5 @@
 """What an elevation grid is like, before anybody maps with it: `viewshed check`."""
 
-import warnings
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cached_property
@@ -9,13 +8,14 @@ from typing import Any
 
 from viewshed import extent, geodesy
 from viewshed.constants import DEFAULT_RANGE, LAYERS
-from viewshed.errors import InputError, ViewshedWarning
+from viewshed.errors import InputError
 from viewshed.io._memory import run_bytes, told_size
 from viewshed.io._survey import NEAR_ZERO, Survey, survey
-from viewshed.io._value_steps import Step
+from viewshed.io._value_steps import Rounding
 from viewshed.io._windows import Windows, condensed
 from viewshed.io.elevation import HEIGHT_UNITS, Terrain
 from viewshed.io.mosaic import uncovered
+from viewshed.notes import noted
 from viewshed.postmap import range_window
 
 #: Share of the sides of voids with ground near zero from which the voids are likely sea.
@@ -73,7 +73,7 @@ class Checkup:
         return uncovered(self.terrain.grid, self.terrain.tiles)
 
     @property
-    def step(self) -> Step | None:
+    def step(self) -> Rounding | None:
         """Largest step that all heights are whole multiples of."""
         return self.found.steps.found(self.found.low, self.found.high)
 
@@ -274,10 +274,8 @@ def check_up(
     InputError, DataError
         As from `open_terrain` and `Terrain.read`.
     """
-    with warnings.catch_warnings(record=True) as caught:
-        warnings.simplefilter("always", ViewshedWarning)
+    with noted(told=False) as met:
         terrain = open_it()
-    met = [str(w.message) for w in caught if issubclass(w.category, ViewshedWarning)]
     windows = Windows(terrain)
     found = survey(terrain.grid, windows.read, terrain.tiles[0].block[0], progress)
     return Checkup(

@@ -14,7 +14,7 @@ import shapely
 from rasterio.windows import Window
 
 from viewshed.errors import DataError
-from viewshed.io._atomic import file_sha256
+from viewshed.io._files import file_sha256
 from viewshed.io.raster import BLOCK, GDAL_ERRORS, gdal_env, gdal_message
 from viewshed.io.stac import STAC_NAME
 

@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 
 from viewshed import geodesy
-from viewshed.errors import DataError, InputError, ViewshedWarning
+from viewshed.errors import AllVoidError, InputError, ViewshedWarning
 from viewshed.grid import Grid
 from viewshed.io import _index, tiles
 from viewshed.io._cells import Noticed, fill, height_at
@@ -181,7 +181,7 @@ class Terrain:
                 f"{names}: only voids in the {rows} x {cols} cells from row {row_off}, "
                 f"column {col_off}; move the observer or use another elevation grid"
             )
-            raise DataError(msg)
+            raise AllVoidError(msg)
         _warn(parts, notes, overlap)
         undeclared = sum(sum(note.undeclared.values()) for note in notes)
         return Reading(out, overlap, undeclared, voids_set)

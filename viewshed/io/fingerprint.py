@@ -5,7 +5,7 @@ from pathlib import Path
 from typing import Any
 
 from viewshed.errors import DataError
-from viewshed.io._atomic import file_sha256
+from viewshed.io._files import file_sha256
 
 
 class Fingerprint:

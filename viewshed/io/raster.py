@@ -28,7 +28,7 @@ from rasterio.windows import Window
 from viewshed import geodesy
 from viewshed.errors import InputError, OutputError
 from viewshed.grid import Grid
-from viewshed.io._atomic import file_sha256
+from viewshed.io._files import file_sha256
 
 Colour = tuple[int, int, int]
 

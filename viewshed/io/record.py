@@ -22,13 +22,8 @@ import rasterio
 from viewshed import geodesy
 from viewshed.constants import CAUTIONS
 from viewshed.errors import DataError
-from viewshed.io._atomic import (
-    RECORD_FORMAT,
-    RECORD_NAME,
-    file_sha256,
-    is_plain_name,
-    write_text,
-)
+from viewshed.io._atomic import RECORD_FORMAT, RECORD_NAME
+from viewshed.io._files import file_sha256, has_wildcard, is_pattern, is_plain_name, write_text
 from viewshed.io._schema import problem
 
 try:
@@ -112,9 +107,9 @@ def relative_path(path: str | os.PathLike[str], folder: str | os.PathLike[str]) 
 def relative_pattern(text: str, folder: str | os.PathLike[str]) -> str:
     """Give a path or pattern as seen from a folder; what is put before a pattern is no pattern."""
     path = Path(text)
-    first = next((i for i, part in enumerate(path.parts) if set("*?[") & set(part)), None)
-    if first is None or path.exists():
+    if not is_pattern(path):
         return relative_path(text, folder)
+    first = next(i for i, part in enumerate(path.parts) if has_wildcard(part))
     start = relative_path(Path(*path.parts[:first]), folder)
     return PurePosixPath(glob.escape(start), *path.parts[first:]).as_posix()
 

@@ -30,7 +30,8 @@ from shapely.geometry.polygon import orient
 
 from viewshed import geodesy
 from viewshed.grid import FloatArray, Grid
-from viewshed.io._atomic import RECORD_NAME, write_text
+from viewshed.io._atomic import RECORD_NAME
+from viewshed.io._files import write_text
 
 #: Name of the item in a folder of results.
 STAC_NAME = "stac_item.json"

@@ -7,6 +7,7 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from viewshed.errors import DataError, ViewshedWarning
+from viewshed.io._files import is_pattern
 from viewshed.io._geotiff import Twins
 from viewshed.io._header import is_foreign, is_result, read_header
 from viewshed.io._index import Index
@@ -61,7 +62,7 @@ def find(paths: Sequence[PathLike]) -> tuple[list[Path], set[str]]:
         if path.is_dir():
             members = _members(path)
             found.update(map(str, members))
-        elif not glob.has_magic(str(path)) or os.path.lexists(path):
+        elif not is_pattern(path):
             members = [path]
         else:
             members = _matches(str(path))
