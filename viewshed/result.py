@@ -325,8 +325,9 @@ class MapResult:
         surface = self.inputs.surface
         if surface is not None:
             median = self.inputs.median_over_ground
-            told = "" if median is None else f", {median:.1f} m over the ground in the median"
-            rows.append(("Surface", f"{grid_name(surface)} ({surface.method}){told}"))
+            rows.append(("Surface", f"{grid_name(surface)} ({surface.method})"))
+            if median is not None:
+                rows.append(("Surface over ground", f"{median:.1f} m in the median"))
             if surface.own.height_unit_origin == "assumed metres":
                 rows.append(("Surface heights", "in metres, as assumed"))
         if self.terrain.height_unit_origin == "assumed metres":
