@@ -199,8 +199,10 @@ class _Run:
         single = len(self.placed) == 1 and not _needs_gathering(self.question.layers)
         common = None if single else Combination(self.grid.shape, self.question.layers)
         weights = [one.window[2] * one.window[3] for one in self.placed]
-        for n, one in enumerate(self.placed):
-            tell = _share_of(progress, sum(weights[:n]), weights[n], sum(weights))
+        total, before = sum(weights), 0
+        for one, weight in zip(self.placed, weights, strict=True):
+            tell = _share_of(progress, before, weight, total)
+            before += weight
             seen, view, at = self._see(one, threads, tell)
             self.views.append(view)
             if common is None:

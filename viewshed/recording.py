@@ -199,18 +199,18 @@ def summary_csv(result: MapResult) -> str:
                 *(record[name] for name in ("target_height_m", "range_m")),
                 *(record["sector_deg"] or ("", "")),
                 *(record["areas_m2"][name] for name in _TOLD_STATES),
-                "" if record["seen_share"] is None else record["seen_share"],
+                _told(record["seen_share"]),
                 record["range_on_known_ground"],
                 *(far.get(name, "") for name in ("x", "y", "distance_m", "bearing_deg")),
                 *("" if b is None else round(b.areas_m2["visible"], 1) for b in found),
-                *("" if b is None else _share(b.seen_share) for b in found),
+                *("" if b is None else _told(_rounded(b.seen_share)) for b in found),
             ]
         )
     return text.getvalue()
 
 
-def _share(value: float | None) -> float | str:
-    return "" if value is None else round(value, 6)
+def _told(value: float | None) -> float | str:
+    return "" if value is None else value
 
 
 def bands_told(view: View) -> list[tuple[str, str]]:
