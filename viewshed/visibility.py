@@ -10,7 +10,7 @@ import math
 import os
 import threading
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -107,25 +107,31 @@ class _Workers:
 
     def __init__(self, reach: int, count: int) -> None:
         self._local = threading.local()
-        self._width = 64 + math.ceil(2.5 * reach / count)
+        self._width = 128 + math.ceil(2.5 * reach / count)
 
-    def get(self, factor: int) -> tuple[NDArray[np.float64], ...]:
+    def get(self, factor: int) -> tuple[NDArray[Any], ...]:
         """Scratch arrays, `factor` times the usual size or larger."""
         if getattr(self._local, "factor", 0) < factor:
             w = self._width * factor
             self._local.factor = factor
             self._local.arrays = (
+                np.zeros((5, w), np.float32),
                 np.zeros((2, 7, w)),
-                np.zeros((7, w)),
+                np.zeros((2 + k.PARTS, 4), np.int64),
+                np.zeros((k.PARTS, 2), np.int64),
+                np.zeros((9, w)),
+                np.zeros(w, np.uint8),
                 np.zeros((2, 3, 12 * w + 256)),
                 np.zeros((4, w)),
                 np.zeros((8 * w + 256, 16)),
                 np.zeros((2, 4 * w + 64)),
-                np.zeros((2, 16)),
+                np.zeros((4, 16)),
                 np.zeros((1, 16)),
-                np.zeros((3, 8)),
+                np.zeros((2, 8)),
+                np.zeros((7, k.PARTS)),
+                np.zeros((k.WINDOWS, w), np.float32),
             )
-        arrays: tuple[NDArray[np.float64], ...] = self._local.arrays
+        arrays: tuple[NDArray[Any], ...] = self._local.arrays
         return arrays
 
 

@@ -24,8 +24,8 @@ if TYPE_CHECKING:
 
 #: Posts that a wedge is wide at the end of the range, about: few enough for the nearest cache,
 #: many enough to outweigh the first lines, which every wedge has to itself.
-_WEDGE_POSTS = 64
-_MIN_WEDGES = 8
+_WEDGE_POSTS = 256
+_MIN_WEDGES = 16
 #: Wedges are swept this much beyond the directions they answer, so that ties stay inside [t].
 _TIE = 1e-12
 #: Skew up to which an octant's sight lines meet its lines of posts in their order; more happens

@@ -23,11 +23,24 @@ the surface `z` itself or, with HAS_GROUND, on a ground of their own, under the 
 
 import numpy as np
 
-from viewshed._jit import inline, kernel
+from viewshed._jit import exact_max, inline, kernel
 
 BIG = 1e300
+#: A post this much under the horizon is hidden and raises nothing, whatever the rounding [m].
+NEAR = 1e-7
+#: Why a post is looked at: a cell or edge that it belongs to may rise above the horizon, its target
+#: may, the cell between it and the next post may.
+RISES, ASKS, BULGES = 1, 2, 4
 #: Parts of a wedge that are looked at as a whole.
-BLOCKS = 8
+PARTS = 8
+#: Posts in between that are looked at with those around them, since each run has a cost of its own.
+QUIET_POSTS = 8
+#: Posts that loops take at a time: a number known beforehand makes them whole vectors.
+CHUNK = 16
+#: Windows over which the greatest height is kept: of 2, 4, ... posts.
+WINDOWS = 5
+#: Lower than any post [m].
+LOWEST = np.float32(-3e38)
 #: A mixed difference of four heights that is rounding and no bulge [m].
 FLAT = 1e-11
 
@@ -190,20 +203,35 @@ def closed_value(c, k, own, t):
 
 @inline
 def merge_line(old, n_old, first, count, t, g, plane_a, plane_b, least, most, high, eps, new):
-    """Write to `new` the upper envelope of `old` and of the edges of one line of posts.
+    """Write to `new` the upper envelope of `old` and of some edges of one line of posts.
 
-    Edge n runs from post n to n + 1 and is unknown where plane_a[n] is NaN; least[n] and most[n]
-    bound `old` between these posts, so that most edges are taken or left as a whole. Returns the
-    number of pieces (0: `new` is too small), a lower bound of the result, and whether it differs.
+    Edge n, first <= n < first + count, runs from post n to n + 1 and is unknown where plane_a[n] is
+    NaN; least[n] and most[n] bound `old` between these posts, so that most edges are taken or left
+    as a whole. Returns the number of pieces (0: `new` is too small), how many edges were taken as
+    a whole, and whether the result differs.
     """
     room = new.shape[1] - 4
+    if n_old > room:
+        return 0, 0, False
     n = 0
     k = 0
-    low = BIG
-    start = old[0, 0]
+    taken = 0
+    changed = False
     last_a = BIG
     last_b = BIG
-    changed = False
+    start = max(t[first], old[0, 0])
+    # what lies before the edges stays
+    while k < n_old - 1 and old[0, k + 1] <= start:
+        k += 1
+    for n in range(k + 1):
+        new[0, n] = old[0, n]
+        new[1, n] = old[1, n]
+        new[2, n] = old[2, n]
+    n = k
+    if old[0, k] < start:
+        n += 1
+        last_a = old[1, k]
+        last_b = old[2, k]
     for i in range(first, first + count):
         stop = min(t[i + 1], high)
         if stop <= start:
@@ -215,25 +243,23 @@ def merge_line(old, n_old, first, count, t, g, plane_a, plane_b, least, most, hi
         g1 = g[i + 1]
         if known and min(g0, g1) >= most[i]:
             if n > room:
-                return 0, low, True
+                return 0, 0, False
             new[0, n] = start
             new[1, n] = sa
             new[2, n] = sb
             n += 1
             last_a = sa
             last_b = sb
-            low = min(low, min(g0, g1))
+            taken += 1
             changed = True
             while k < n_old - 1 and old[0, k + 1] <= stop:
                 k += 1
             start = stop
             continue
         mixed = known and max(g0, g1) > least[i]
-        if not mixed:
-            low = min(low, least[i])
         while start < stop:
             if n > room:
-                return 0, low, True
+                return 0, 0, False
             while k < n_old - 1 and old[0, k + 1] <= start:
                 k += 1
             end = min(old[0, k + 1], stop)
@@ -262,18 +288,13 @@ def merge_line(old, n_old, first, count, t, g, plane_a, plane_b, least, most, hi
                                 n += 1
                                 last_a = ca
                                 last_b = cb
-                            low = min(low, min(ca + cb * start, ca + cb * cut))
                             start = cut
-                        elif d1 > d0:
-                            a = sa
-                            b = sb
                         else:
                             a = sa
                             b = sb
                     else:
                         a = sa
                         b = sb
-                low = min(low, min(a + b * start, a + b * end))
             if a != last_a or b != last_b:
                 new[0, n] = start
                 new[1, n] = a
@@ -282,8 +303,24 @@ def merge_line(old, n_old, first, count, t, g, plane_a, plane_b, least, most, hi
                 last_a = a
                 last_b = b
             start = end
+    # and so does what lies behind them
+    if start < old[0, n_old]:
+        while k < n_old - 1 and old[0, k + 1] <= start:
+            k += 1
+        if n + n_old - k > room:
+            return 0, 0, False
+        if old[1, k] != last_a or old[2, k] != last_b:
+            new[0, n] = start
+            new[1, n] = old[1, k]
+            new[2, n] = old[2, k]
+            n += 1
+        for m in range(k + 1, n_old):
+            new[0, n] = old[0, m]
+            new[1, n] = old[1, m]
+            new[2, n] = old[2, m]
+            n += 1
     new[0, n] = old[0, n_old]
-    return n, low, changed
+    return n, taken, changed
 
 
 @inline
@@ -291,20 +328,19 @@ def merge_edges(old, n_old, seg, n_seg, eps, new):
     """Write to `new` the upper envelope of `old` and of the sorted, disjoint segments.
 
     seg[0], seg[1]: start and end; seg[2], seg[3]: the line A + B t. Returns the number of pieces
-    (0: `new` is too small) and the least value of the result.
+    (0: `new` is too small).
     """
     room = new.shape[1] - 4
     n = 0
     k = 0
     m = 0
-    low = BIG
     t = old[0, 0]
     end = old[0, n_old]
     last_a = BIG
     last_b = BIG
     while t < end:
         if n > room:
-            return 0, low
+            return 0
         while k < n_old - 1 and old[0, k + 1] <= t:
             k += 1
         while m < n_seg and seg[1, m] <= t:
@@ -312,14 +348,11 @@ def merge_edges(old, n_old, seg, n_seg, eps, new):
         stop = old[0, k + 1]
         a = old[1, k]
         b = old[2, k]
-        cut = stop
         if m < n_seg:
             if seg[0, m] > t:
                 stop = min(stop, seg[0, m])
-                cut = stop
             else:
                 stop = min(stop, seg[1, m])
-                cut = stop
                 sa = seg[2, m]
                 sb = seg[3, m]
                 d0 = (sa - a) + (sb - b) * t
@@ -333,8 +366,6 @@ def merge_edges(old, n_old, seg, n_seg, eps, new):
                             new[2, n] = sb
                             if sa != last_a or sb != last_b:
                                 n += 1
-                                low = min(low, sa + sb * t)
-                            low = min(low, sa + sb * cut)
                             last_a = sa
                             last_b = sb
                             t = cut
@@ -350,8 +381,6 @@ def merge_edges(old, n_old, seg, n_seg, eps, new):
                             new[2, n] = b
                             if a != last_a or b != last_b:
                                 n += 1
-                                low = min(low, a + b * t)
-                            low = min(low, a + b * cut)
                             last_a = a
                             last_b = b
                             t = cut
@@ -364,11 +393,9 @@ def merge_edges(old, n_old, seg, n_seg, eps, new):
             n += 1
             last_a = a
             last_b = b
-            low = min(low, a + b * t)
-        low = min(low, a + b * stop)
         t = stop
     new[0, n] = end
-    return n, low
+    return n
 
 
 @inline
@@ -461,8 +488,8 @@ def line_coefficients(coef, degree, x, out):
 
 
 @inline
-def post_t(geo, degree, poly, j, i):
-    """Direction t of post i of a line whose polynomial coefficients are in `poly`."""
+def post_uv(geo, degree, poly, j, i):
+    """Coordinates u, v of post i of a line whose polynomial coefficients are in `poly`."""
     v = geo[Y0] + i
     u = geo[X0] + j
     if degree > 1:
@@ -472,14 +499,21 @@ def post_t(geo, degree, poly, j, i):
         for k in range(degree, -1, -1):
             u = u * y + poly[0, k]
             v = v * y + poly[1, k]
+    return u, v
+
+
+@inline
+def post_t(geo, degree, poly, j, i):
+    """Direction t of post i of a line."""
+    u, v = post_uv(geo, degree, poly, j, i)
     if u > 0.0:
         return v / u
     return BIG if v > 0.0 else -BIG
 
 
 @inline
-def fetch(z, main_is_row, main, minor, sign, heights, n):
-    """Copy n elevations of one line into heights, NaN outside the grid."""
+def fetch(z, main_is_row, main, minor, sign, raw, n):
+    """Copy n elevations of one line, NaN outside the grid."""
     rows, cols = z.shape
     n_minor = cols if main_is_row else rows
     inside = 0 <= main < (rows if main_is_row else cols)
@@ -494,90 +528,81 @@ def fetch(z, main_is_row, main, minor, sign, heights, n):
     if not inside:
         stop = start
     for m in range(start):
-        heights[m] = np.nan
+        raw[m] = np.nan
     for m in range(stop, n):
-        heights[m] = np.nan
+        raw[m] = np.nan
     if main_is_row:
-        for m in range(start, stop):
-            heights[m] = z[main, minor + sign * m]
+        if sign > 0:
+            for m in range(start, stop):
+                raw[m] = z[main, minor + m]
+        else:
+            for m in range(start, stop):
+                raw[m] = z[main, minor - m]
     else:
         for m in range(start, stop):
-            heights[m] = z[minor + sign * m, main]
+            raw[m] = z[minor + sign * m, main]
 
 
 @inline
-def place(degree, y0, lo, u_line, scale, poly, u, v, n):
-    """Fill the coordinates u, v of n posts of a line from row lo on."""
+def place(degree, y0, lo, u_line, scale, poly, u, v, first, last):
+    """Fill the coordinates u, v of posts first .. last - 1 of a line whose post 0 is in row lo."""
     if degree <= 1:
-        for m in range(n):
+        for m in range(first, last):
             u[m] = u_line
-        for m in range(n):
+        for m in range(first, last):
             v[m] = y0 + (lo + m)
         return
-    for m in range(n):
+    for m in range(first, last):
         u[m] = poly[0, degree]
-    for m in range(n):
+    for m in range(first, last):
         v[m] = poly[1, degree]
     turn = 1.0 / scale  # a power of two: the product is exact
     for k in range(degree - 1, -1, -1):
         pu = poly[0, k]
         pv = poly[1, k]
-        for m in range(n):
+        for m in range(first, last):
             u[m] = u[m] * ((y0 + (lo + m)) * turn) + pu
-        for m in range(n):
+        for m in range(first, last):
             v[m] = v[m] * ((y0 + (lo + m)) * turn) + pv
 
 
 @inline
-def flatten(heights, raise_by, geo, u, v, f, n):
-    """Flat heights of n posts (of points `raise_by` above them)."""
+def flatten(raw, raise_by, geo, u, v, f, first, last):
+    """Flat heights of posts first .. last - 1 (of points `raise_by` above them)."""
     ze = geo[Z_EYE]
     inv_r = geo[INV_R]
     d20 = geo[D20]
     d11 = geo[D11]
     d02 = geo[D02]
-    for m in range(n):
-        h = heights[m] + raise_by
+    for m in range(first, last):
+        h = np.float64(raw[m]) + raise_by
         drop = d20 * u[m] * u[m] + d11 * u[m] * v[m] + d02 * v[m] * v[m]
         f[m] = (h - ze) * (1.0 - h * inv_r) - drop
 
 
 @inline
-def directions(u, v, f, t, g, n):
-    """Fill t = v / u and g = f / u, g = -BIG where unknown or not ahead."""
-    for m in range(n):
+def directions(line, first, last):
+    """Fill t = v / u and g = f / u of posts first .. last - 1, g = -BIG where unknown or behind."""
+    t, g, f, u, v = line[0], line[1], line[2], line[3], line[4]
+    for m in range(first, last):
         t[m] = v[m] / u[m] if u[m] > 0.0 else (BIG if v[m] > 0.0 else -BIG)
-    for m in range(n):
+    for m in range(first, last):
         q = f[m] / u[m]
         g[m] = q if (u[m] > 0.0 and q == q) else -BIG
 
 
 @inline
-def greatest(g, lo, hi):
-    """Greatest of g[lo:hi] (four chains, since one would wait on itself)."""
-    a = -BIG
-    b = -BIG
-    c = -BIG
-    d = -BIG
-    m = lo
-    while m + 3 < hi:
-        a = g[m] if g[m] > a else a
-        b = g[m + 1] if g[m + 1] > b else b
-        c = g[m + 2] if g[m + 2] > c else c
-        d = g[m + 3] if g[m + 3] > d else d
-        m += 4
-    while m < hi:
-        a = g[m] if g[m] > a else a
-        m += 1
-    return max(max(a, b), max(c, d))
-
-
-@inline
-def edge_planes(u, v, f, plane_a, plane_b, n):
-    """Planes f = A u + B v through the observer and each pair of neighbours of a line."""
-    for m in range(n - 1):
+def edge_planes(line, span, first, last):
+    """Planes f = A u + B v through the observer and posts n, n + 1 of a line, first <= n < last."""
+    if span[2] <= first and last <= span[3]:
+        return
+    span[2] = first
+    span[3] = last
+    last = whole(first, last)
+    f, u, v, plane_a, plane_b = line[2], line[3], line[4], line[5], line[6]
+    for m in range(first, last):
         plane_a[m] = (f[m] * v[m + 1] - f[m + 1] * v[m]) / (u[m] * v[m + 1] - u[m + 1] * v[m])
-    for m in range(n - 1):
+    for m in range(first, last):
         plane_b[m] = (u[m] * f[m + 1] - u[m + 1] * f[m]) / (u[m] * v[m + 1] - u[m + 1] * v[m])
 
 
@@ -746,10 +771,24 @@ def add_strip_gaps(pt, pf, t, f, shift, from_a, to_a, j, lo_prev, low, high, gap
 
 
 @inline
-def survey_line(env, n_env, first, count, t, low, high, at, least, most):
-    """Envelope at each post of a line, and its least and greatest between neighbours."""
-    k = 0
-    for n in range(first, first + count + 1):
+def piece_at(env, n_env, t):
+    """Number of the piece of the envelope at t, the right one of two that meet there."""
+    lo = 0
+    hi = n_env - 1
+    while lo < hi:
+        mid = (lo + hi + 1) >> 1
+        if env[0, mid] <= t:
+            lo = mid
+        else:
+            hi = mid - 1
+    return lo
+
+
+@inline
+def survey_line(env, n_env, first, last, t, low, high, at, least, most):
+    """Envelope at some posts of a line, and its least and greatest between neighbours."""
+    k = piece_at(env, n_env, min(max(t[first], low), high))
+    for n in range(first, last + 1):
         here = min(max(t[n], low), high)
         while k < n_env - 1 and env[0, k + 1] <= here:
             k += 1
@@ -761,7 +800,7 @@ def survey_line(env, n_env, first, count, t, low, high, at, least, most):
         if k > 0 and env[0, k] == here:
             value = max(value, env[1, k - 1] + env[2, k - 1] * here)
         at[n] = value
-        if n == first + count:
+        if n == last:
             return
         there = min(max(t[n + 1], low), high)
         while k < n_env - 1 and env[0, k + 1] < there:
@@ -784,10 +823,10 @@ def survey_line(env, n_env, first, count, t, low, high, at, least, most):
 def block_floors(env, n_env, low, high, floors):
     """Least value of the envelope over each of equal parts of the wedge."""
     k = 0
-    step = (high - low) / BLOCKS
-    for b in range(BLOCKS):
+    step = (high - low) / PARTS
+    for b in range(PARTS):
         t0 = low + step * b
-        t1 = low + step * (b + 1) if b < BLOCKS - 1 else high
+        t1 = low + step * (b + 1) if b < PARTS - 1 else high
         while k > 0 and env[0, k] > t0:
             k -= 1
         while k < n_env - 1 and env[0, k + 1] <= t0:
@@ -802,59 +841,342 @@ def block_floors(env, n_env, low, high, floors):
         floors[b] = bottom
 
 
-@inline
-def loud_posts(
-    t, g, goal_g, pg, shift, n_prev, n_first, n_last, lo, u_line, y0, low, high, floors, least, most
-):
-    """Find the posts of a line between which something may be seen or rise: first and last.
+@exact_max
+def windows(raw, n, highest):
+    """Fill the greatest of 2, 4, 8, 16 and 32 numbers from each of n on, none of them NaN."""
+    most = n + 2 * CHUNK
+    wider = highest[0]
+    for m in range(most):
+        wider[m] = raw[m] if raw[m] > raw[m + 1] else raw[m + 1]
+    reach = 2
+    for k in range(1, WINDOWS):
+        narrow = highest[k - 1]
+        wider = highest[k]
+        most -= reach
+        for m in range(most):
+            a = narrow[m]
+            b = narrow[m + reach]
+            wider[m] = a if a > b else b
+        reach *= 2
 
-    Part by part of the wedge, the line and the one before it are held against the least of the
-    envelope there; `least` and `most` are bounded where nothing rises.
+
+@inline
+def highest_of(highest, first, last):
+    """Greatest of numbers first .. last, at least two, from their windows."""
+    k = 0
+    reach = 2
+    while k < WINDOWS - 1 and 2 * reach <= last + 1 - first:
+        k += 1
+        reach *= 2
+    top = highest[k, last + 1 - reach]
+    for n in range(first, last + 1 - reach, reach):
+        top = max(top, highest[k, n])
+    return np.float64(top)
+
+
+@inline
+def fill_voids(raw, n, clean):
+    """Copy a line with something low in the place of what is not known."""
+    for m in range(n):
+        clean[m] = raw[m] if raw[m] == raw[m] else LOWEST
+
+
+@inline
+def part_ends(geo, degree, poly, j, lo, low, high, n_first, n_last, count, parts, ends):
+    """Fill the first and last posts of each part of a wedge; False if the line is too uneven.
+
+    With the posts of cells that may reach into the part: a cell reaches no farther than three
+    posts along its line, also where the map bends.
     """
-    from_n = n_last + 1
-    to_n = n_first - 1
-    n_a = n_first
-    step = (high - low) / BLOCKS
-    for b in range(BLOCKS):
-        n_b = n_last
-        if b < BLOCKS - 1:
-            edge = low + step * (b + 1)
-            n_b = min(max(int(edge * u_line - y0) + 1 - lo, n_a), n_last)
-            while n_b > n_a and t[n_b - 1] >= edge:
-                n_b -= 1
-            while n_b < n_last and t[n_b] < edge:
-                n_b += 1
-        # a cell reaches no farther than three posts along its line, also where the map bends
-        peak = greatest(g, max(n_a - 3, 0), n_b + 4)
-        peak = max(peak, greatest(goal_g, max(n_a - 3, 0), n_b + 4))
-        peak = max(peak, greatest(pg, max(n_a - 3 - shift, 0), min(n_b + 4 - shift, n_prev)))
-        bottom = floors[b]
-        if peak + 1e-12 >= bottom:
-            from_n = min(from_n, max(n_a - 3, n_first))
-            to_n = max(to_n, min(n_b + 3, n_last))
-        for n in range(n_a, n_b):
-            least[n] = bottom
-            most[n] = BIG
-        if b > 0 and n_a > n_first:
-            least[n_a - 1] = min(least[n_a - 1], bottom)
-        n_a = n_b
-    return from_n, to_n
+    u0, v0 = post_uv(geo, degree, poly, j, lo + n_first)
+    u1, v1 = post_uv(geo, degree, poly, j, lo + n_last)
+    ends[0, 0] = max(n_first - 3, 0)
+    ends[parts - 1, 1] = min(n_last + 3, count - 1)
+    least = min(u0, u1)
+    if least <= 0.0 or abs(u1 - u0) > 0.05 * least:
+        return False
+    if parts > 1:
+        t0 = v0 / u0
+        rate = (n_last - n_first) / (v1 / u1 - t0)
+        step = (high - low) / parts
+        for b in range(1, parts):
+            n = min(max(n_first + int((low + step * b - t0) * rate), n_first), n_last)
+            ends[b - 1, 1] = min(n + 4, count - 1)
+            ends[b, 0] = max(n - 3, 0)
+    return True
 
 
 @inline
-def rising(pg, a, g, b, least, n_first, n_last):
-    """Whether a cell (posts a, a + 1 before, b, b + 1 here) may rise above the envelope."""
-    highest = max(max(pg[a], pg[a + 1]), max(g[b], g[b + 1]))
-    under = BIG
-    for m in range(b - 1, b + 3):
-        under = min(under, least[min(max(m, n_first), n_last - 1)])
-    return highest > under
+def least_drops(geo, degree, poly, j, lo, count, parts, ends, drops, nears, fars):
+    """Bound the drop by the curve of the Earth, and u, over each part of a line.
+
+    The drop is a convex function of the place between the ends of a part, on a bent grid almost.
+    Given out are the least drop and one over the least and the greatest u.
+    """
+    across = abs(geo[D11])
+    if degree <= 1:
+        u = geo[X0] + j
+        for b in range(parts):
+            va = geo[Y0] + (lo + ends[b, 0])
+            vb = geo[Y0] + (lo + ends[b, 1])
+            at_a = (geo[D11] * u + geo[D02] * va) * va
+            at_b = (geo[D11] * u + geo[D02] * vb) * vb
+            drop = geo[D20] * u * u + (at_a if at_a < at_b else at_b)
+            drops[b] = drop - 0.25 * geo[D02] * (vb - va) * (vb - va)
+            nears[b] = 1.0 / u
+            fars[b] = 1.0 / u
+        return
+    bend_u = 0.0
+    bend_v = 0.0
+    y = max(abs(geo[Y0] + lo), abs(geo[Y0] + lo + count)) / geo[SCALE]
+    power = 1.0
+    for k in range(2, degree + 1):
+        bend_u += abs(poly[0, k]) * (k * (k - 1)) * power
+        bend_v += abs(poly[1, k]) * (k * (k - 1)) * power
+        power *= y
+    turn = 0.125 / (geo[SCALE] * geo[SCALE])
+    for b in range(parts):
+        ua, va = post_uv(geo, degree, poly, j, lo + ends[b, 0])
+        ub, vb = post_uv(geo, degree, poly, j, lo + ends[b, 1])
+        reach = ends[b, 1] - ends[b, 0]
+        off_u = bend_u * turn * (reach * reach)
+        off_v = bend_v * turn * (reach * reach)
+        u_least = min(ua, ub) - off_u
+        u_most = max(ua, ub) + off_u
+        v_most = max(abs(va), abs(vb)) + off_v
+        drop = min(
+            geo[D20] * ua * ua + geo[D11] * ua * va + geo[D02] * va * va,
+            geo[D20] * ub * ub + geo[D11] * ub * vb + geo[D02] * vb * vb,
+        )
+        du = ub - ua
+        dv = vb - va
+        drop -= 0.25 * (geo[D20] * du * du + across * abs(du * dv) + geo[D02] * dv * dv)
+        drop -= (2.0 * geo[D20] * u_most + across * v_most) * off_u
+        drop -= (2.0 * geo[D02] * v_most + across * u_most) * off_v
+        drops[b] = drop
+        nears[b] = 1.0 / u_least if u_least > 0.0 else BIG
+        fars[b] = 1.0 / u_most
 
 
 @inline
-def owned(ints, geo, piece, j, i, t):
+def ceilings(geo, raise_by, parts, ends, drops, nears, fars, highest, tops):
+    """Bound g of the posts of a line, or of points `raise_by` above them, part by part."""
+    for b in range(parts):
+        h = highest_of(highest, ends[b, 0], ends[b, 1]) + raise_by
+        f = (h - geo[Z_EYE]) * (1.0 - h * geo[INV_R]) - drops[b] + NEAR
+        tops[b] = f * (fars[b] if f < 0.0 else nears[b])
+    for b in range(parts, PARTS):
+        tops[b] = tops[0]
+
+
+@inline
+def is_quiet(b, parts, tops, goal_tops, tops_prev, floors):
+    """Whether a part of a line, and of the one before, is surely under the horizon."""
+    top = max(max(tops[b], goal_tops[b]), tops_prev[b])
+    bottom = floors[b]
+    if parts == 1:
+        for k in range(1, PARTS):
+            top = max(top, tops_prev[k])
+            bottom = min(bottom, floors[k])
+    return top + 1e-12 < bottom
+
+
+@inline
+def examine(
+    before, here, goal, curved, shift, e_lo, e_hi, w_lo, w_hi, h_lo, h_hi, at, least, peaks, lows,
+    loud,
+):  # fmt: skip
+    """Mark cells e_lo .. e_hi - 1 of a strip that may rise above the envelope, and open targets.
+
+    The envelope is known at posts h_lo .. h_hi. Seen from the observer, the cell between posts n
+    and n + 1 reaches from n to n + 2 at most. Returns how many it marked.
+    """
+    pg, g, u = before[1], here[1], here[3]
+    for n in range(e_lo - 1, h_lo):
+        lows[n] = least[h_lo]
+    for n in range(h_lo, h_hi):
+        lows[n] = least[n]
+    for n in range(h_hi, e_hi + 3):
+        lows[n] = least[h_hi - 1]
+    for n in range(e_lo, e_hi + 1):
+        loud[n] = 0
+        peaks[n] = g[n] if g[n] > pg[n - shift] else pg[n - shift]
+    if curved:  # where the map bends a cell may lean both ways
+        for n in range(e_lo - 1, e_hi + 1):
+            lows[n] = lows[n] if lows[n] < lows[n + 1] else lows[n + 1]
+        for n in range(e_hi, e_lo - 1, -1):
+            lows[n] = lows[n] if lows[n] < lows[n - 1] else lows[n - 1]
+    marked = 0
+    for n in range(e_lo, e_hi):
+        top = peaks[n] if peaks[n] > peaks[n + 1] else peaks[n + 1]
+        bottom = lows[n] if lows[n] < lows[n + 1] else lows[n + 1]
+        rises = 1 if top > bottom - 1e-12 else 0
+        marked += rises
+        loud[n] |= rises * (RISES | BULGES)
+    if marked > 0:
+        for n in range(e_hi, e_lo, -1):
+            loud[n] |= loud[n - 1] & RISES
+    for n in range(max(w_lo, h_lo), min(w_hi, h_hi) + 1):
+        asks = ASKS if goal[n] - at[n] * u[n] > -NEAR else 0
+        marked += asks
+        loud[n] |= asks
+    return marked
+
+
+@inline
+def clear_heights(geo, own, here, goal, at, u_line, lo, first, last, arcs, n_arcs, over):
+    """Fill the heights of targets first .. last of a line over envelope and bulging cells."""
+    t, u = here[0], here[3]
+    for n in range(first, last + 1):
+        over[n] = goal[n] - at[n] * u[n]
+    for k in range(n_arcs):
+        t0 = arcs[k, 0]
+        t1 = arcs[k, 1]
+        if t1 < t[first] or t0 > t[last]:
+            continue
+        n = min(max(int(t0 * u_line - geo[Y0]) + 1 - lo, first), last)
+        while n > first and t[n - 1] >= t0:
+            n -= 1
+        while n <= last and t[n] < t0:
+            n += 1
+        while n <= last and t[n] <= t1:
+            if arcs[k, 2] + arcs[k, 3] * t[n] > at[n]:
+                over[n] = min(over[n], goal[n] - arc_value(arcs, k, own, t[n]) * u[n])
+            n += 1
+
+
+@inline
+def answer_hidden(
+    state, clearance, ints, geo, here, sure, goal, over, w_lo, w_hi, plain, holes, main, minor
+):
+    """Answer the posts w_lo .. w_hi of a line as hidden; those that may be seen come after."""
+    f, u, v = here[2], here[3], here[4]
+    main_is_row = ints[MAIN_IS_ROW] != 0
+    sign = ints[SIGN_MINOR]
+    if plain and not holes:
+        if main_is_row:
+            first = minor + w_lo if sign > 0 else minor - w_hi
+            for c in range(first, first + w_hi - w_lo + 1):
+                state[main, c] = 0
+        else:
+            for n in range(w_lo, w_hi + 1):
+                state[minor + sign * n, main] = 0
+    else:
+        for n in range(w_lo, w_hi + 1):
+            if sure[n] == sure[n] and (plain or asked(ints, geo, u[n], v[n])):
+                if main_is_row:
+                    state[main, minor + sign * n] = 0
+                else:
+                    state[minor + sign * n, main] = 0
+    if ints[WANT_CLEARANCE] != 0:
+        on_ground = ints[HAS_GROUND] != 0
+        for n in range(w_lo, w_hi + 1):
+            if goal[n] == goal[n] and (plain or asked(ints, geo, u[n], v[n])):
+                clear = over[n]
+                if on_ground and f[n] == f[n]:
+                    clear = min(clear, goal[n] - f[n])
+                if main_is_row:
+                    clearance[main, minor + sign * n] = clear
+                else:
+                    clearance[minor + sign * n, main] = clear
+
+
+@inline
+def overtops(pf, f, v, u, shift, n_low, n_high, n_first, n_last):
+    """Whether a line of posts stands above the line before it everywhere, and no cell bulges.
+
+    On an affine grid a sight line to post n crosses the line before between posts n - 1 and n, v / u
+    of the way back from n; one through post n of the line before crosses this line between n and
+    n + 1.
+    """
+    bad = 0
+    spare = 1e-9 * u
+    for n in range(n_first, n_last + 1):
+        a = n - shift
+        bad += f[n] * (u - 1.0) - (pf[a - 1] * v[n] + pf[a] * (u - v[n])) < spare
+    for n in range(n_first - 1, n_last + 1):
+        bad += (f[n] * (u - 1.0 - v[n]) + f[n + 1] * v[n]) - pf[n - shift] * u < spare
+    if bad > 0:
+        return False
+    for n in range(n_low, n_high):
+        a = n - shift
+        bad += f[n + 1] - f[n] - pf[a + 1] + pf[a] < -FLAT
+    if bad == 0:
+        return True
+    for n in range(n_low, n_high):
+        a = n - shift
+        if f[n + 1] - f[n] - pf[a + 1] + pf[a] < -FLAT and not climbs(
+            pf[a], pf[a + 1], f[n], f[n + 1], u - 1.0, u, v[n] / u, v[n + 1] / (u - 1.0)
+        ):
+            return False
+    return True
+
+
+@inline
+def answer_seen(
+    state, clearance, ints, geo, pf, goal, u, v, u_line, shift, w_lo, w_hi, plain, main, minor, over
+):
+    """Answer posts w_lo .. w_hi of a line as seen, the line before being their horizon."""
+    main_is_row = ints[MAIN_IS_ROW] != 0
+    sign = ints[SIGN_MINOR]
+    wants_clearance = ints[WANT_CLEARANCE] != 0
+    if wants_clearance:
+        for n in range(w_lo, w_hi + 1):
+            a = n - shift
+            over[n] = goal[n] - (pf[a - 1] * v[n] + pf[a] * (u_line - v[n])) / (u_line - 1.0)
+    for n in range(w_lo, w_hi + 1):
+        if plain or asked(ints, geo, u[n], v[n]):
+            k = minor + sign * n
+            r = main if main_is_row else k
+            c = k if main_is_row else main
+            state[r, c] = 1
+            if wants_clearance:
+                clearance[r, c] = over[n]
+
+
+@inline
+def line_as_horizon(line, first, last, low, high, env):
+    """Write posts first .. last of a line as the envelope; returns the pieces (0: no room)."""
+    t, plane_a, plane_b = line[0], line[5], line[6]
+    if last - first > env.shape[1] - 4:
+        return 0
+    for n in range(first, last):
+        env[0, n - first] = max(t[n], low)
+        env[1, n - first] = plane_a[n]
+        env[2, n - first] = plane_b[n]
+    env[0, last - first] = high
+    return last - first
+
+
+@inline
+def next_run(loud, n, n_low, n_high):
+    """Find the next posts that are loud or near one, from n on: first and last."""
+    while n <= n_high and loud[n] == 0:
+        n += 1
+    if n > n_high:
+        return n, n - 1
+    first = max(n - 1, n_low)
+    last = n
+    while n <= n_high and n <= last + QUIET_POSTS:
+        if loud[n] != 0:
+            last = n
+        n += 1
+    return first, min(last + 1, n_high)
+
+
+@inline
+def is_ahead(geo, degree, poly, j, i, t):
+    """Whether post i of a line lies in direction t or beyond: v / u >= t, without dividing."""
+    u, v = post_uv(geo, degree, poly, j, i)
+    return v >= t * u if u > 0.0 else v > 0.0
+
+
+@inline
+def owned(ints, geo, degree, poly, piece, j, i):
     """Whether a post belongs to this wedge: each post of the grid belongs to exactly one."""
-    if t < piece[0] or t >= piece[1]:
+    if not is_ahead(geo, degree, poly, j, i, piece[0]):
+        return False
+    if is_ahead(geo, degree, poly, j, i, piece[1]):
         return False
     along = geo[X0] + j
     across = geo[Y0] + i
@@ -863,6 +1185,17 @@ def owned(ints, geo, piece, j, i, t):
     if across == along and ints[OWN_DIAGONAL] == 0:
         return False
     return across != 0.0 or ints[OWN_AXIS] != 0
+
+
+@inline
+def cuts(ints, geo, low, high):
+    """Whether an edge of the sector runs through the directions low .. high."""
+    if ints[HAS_BEARINGS] == 0:
+        return False
+    t_from = geo[B_FROM_V] / geo[B_FROM_U]
+    t_to = geo[B_TO_V] / geo[B_TO_U]
+    spare = 1e-6
+    return low - spare <= t_from <= high + spare or low - spare <= t_to <= high + spare
 
 
 @inline
@@ -908,25 +1241,35 @@ def own_plane(own, far, edge):
 
 
 @inline
-def load_line(z, ints, geo, own, j, lo, n, poly, heights, line):
-    """Fill t, g, f, u, v of the n posts of line j from row lo on."""
-    t, g, f, u, v = line[0], line[1], line[2], line[3], line[4]
-    sign = ints[SIGN_MINOR]
-    main = ints[BASE_MAIN] + ints[SIGN_MAIN] * j
-    fetch(z, ints[MAIN_IS_ROW] != 0, main, ints[BASE_MINOR] + sign * lo, sign, heights, n)
-    place(ints[DEGREE], geo[Y0], lo, geo[X0] + j, geo[SCALE], poly, u, v, n)
-    flatten(heights, 0.0, geo, u, v, f, n)
-    if j <= 1:  # the corners of the own cell, sharp however near the observer
-        for i in range(2):
-            if 0 <= i - lo < n:
-                f[i - lo] = own[O_F + 2 * j + i]
-                u[i - lo] = own[O_U + 2 * j + i]
-                v[i - lo] = own[O_V + 2 * j + i]
-    directions(u, v, f, t, g, n)
+def whole(first, last):
+    """Last rounded up, so that a loop from first on takes whole vectors and no single posts."""
+    return first + (last - first + CHUNK - 1) // CHUNK * CHUNK
 
 
 @inline
-def stand_on_own_cell(z, ints, geo, f, heights, lo, n, goal):
+def work_out(ints, geo, own, j, lo, poly, raw, line, span, first, last):
+    """Fill t, g, f, u, v of posts first .. last - 1 of line j, unless they are there already."""
+    if span[0] <= first and last <= span[1]:
+        return
+    span[0] = first
+    span[1] = last
+    span[2] = 0
+    span[3] = 0
+    last = whole(first, last)
+    f, u, v = line[2], line[3], line[4]
+    place(ints[DEGREE], geo[Y0], lo, geo[X0] + j, geo[SCALE], poly, u, v, first, last)
+    flatten(raw, 0.0, geo, u, v, f, first, last)
+    if j <= 1:  # the corners of the own cell, sharp however near the observer
+        for i in range(2):
+            if first <= i - lo < last:
+                f[i - lo] = own[O_F + 2 * j + i]
+                u[i - lo] = own[O_U + 2 * j + i]
+                v[i - lo] = own[O_V + 2 * j + i]
+    directions(line, first, last)
+
+
+@inline
+def stand_on_own_cell(z, ints, geo, f, raw, lo, n, goal):
     """Work targets at the corners of the own cell from the sharp f of the surface there.
 
     Else a target at the surface itself could lie a rounding error below it.
@@ -937,7 +1280,7 @@ def stand_on_own_cell(z, ints, geo, f, heights, lo, n, goal):
             main = ints[BASE_MAIN] + ints[SIGN_MAIN]
             minor = ints[BASE_MINOR] + ints[SIGN_MINOR] * i
             h = np.float64(z[main, minor] if ints[MAIN_IS_ROW] != 0 else z[minor, main])
-            top = heights[m] + geo[TARGET]
+            top = np.float64(raw[m]) + geo[TARGET]
             goal[m] = f[m] + (top - h) * (1.0 - (top + h - geo[Z_EYE]) * geo[INV_R])
 
 
@@ -965,7 +1308,7 @@ def open_first_strip(geo, own_known, before, lo_prev, n_prev, here, lo, n):
 
 @inline
 def answer(
-    state, clearance, ints, geo, own, before, here, goal, at, wants, j, lo, shift, w_lo, w_hi,
+    state, clearance, ints, geo, own, before, here, goal, at, wants, loud, j, lo, shift, w_lo, w_hi,
     plain, main, minor, arcs, n_arcs, gaps, n_gaps, cell,
 ):  # fmt: skip
     """Answer the posts w_lo .. w_hi of a line, the envelope at them being known."""
@@ -981,6 +1324,8 @@ def answer(
     # the questions, and what their own strip says
     for n in range(w_lo, w_hi + 1):
         wants[n] = 0.0
+        if not want_clearance and not loud[n] & ASKS:
+            continue
         if not (goal[n] == goal[n] and (plain or asked(ints, geo, u[n], v[n]))):
             continue
         wants[n] = 1.0
@@ -1015,6 +1360,8 @@ def answer(
     for k in range(n_arcs):
         t0 = arcs[k, 0]
         t1 = arcs[k, 1]
+        if w_lo > w_hi or t1 < t[w_lo] or t0 > t[w_hi]:
+            continue
         n = int(t0 * u_line - geo[Y0]) + 1 - lo
         n = min(max(n, w_lo), w_hi)
         while n > w_lo and t[n - 1] >= t0:
@@ -1056,10 +1403,10 @@ def answer(
 
 @inline
 def add_cross_edges(
-    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, envs, which, n_env,
-    env_low, seg,
+    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, loud, envs, which, n_env,
+    seg,
 ):  # fmt: skip
-    """Merge the edges between two lines; returns pieces (0: no room), envelope and least value."""
+    """Merge the edges between two lines; returns pieces (0: no room) and which envelope."""
     curved = ints[DEGREE] > 1
     own_known = ints[OWN_KNOWN] != 0
     eps = geo[EPS]
@@ -1076,6 +1423,8 @@ def add_cross_edges(
             a = i - lo_prev
             b = i - lo
             t0 = max(min(t[b], pt[a]), low)
+            if not loud[b] & RISES:
+                continue
             t1 = min(max(t[b], pt[a]), high)
             both = f[b] + pf[a]
             if t1 <= t0 or not (both == both):
@@ -1112,11 +1461,11 @@ def add_cross_edges(
                 seg[3, n_seg] = sb
                 n_seg += 1
         if n_seg > 0:
-            n_env, env_low = merge_edges(envs[which], n_env, seg, n_seg, eps, envs[1 - which])
+            n_env = merge_edges(envs[which], n_env, seg, n_seg, eps, envs[1 - which])
             if n_env == 0:
-                return 0, which, env_low
+                return 0, which
             which = 1 - which
-    return n_env, which, env_low
+    return n_env, which
 
 
 @inline
@@ -1138,7 +1487,7 @@ def drop_arcs(env, n_env, eps, arcs, n_arcs):
 
 @inline
 def add_strip_arcs(
-    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, env, n_env, arcs,
+    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, loud, env, n_env, arcs,
     n_arcs, cell, ts, gs,
 ):  # fmt: skip
     """Add the cells of a strip that bulge above the envelope; -1 if there is no room."""
@@ -1150,6 +1499,8 @@ def add_strip_arcs(
     for i in range(go_lo, go_hi + 1):
         a = i - lo_prev
         b = i - lo
+        if not loud[b] & BULGES:
+            continue
         twist = f[b + 1] - f[b] - pf[a + 1] + pf[a]
         if not (twist < -FLAT or (twist > FLAT and curved)):
             continue  # nowhere concave along a sight line, or unknown
@@ -1219,15 +1570,19 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
         Directions answered, from piece[0] up to but not at piece[1], and those swept, piece[2]
         to piece[3].
     work : tuple of arrays
-        Scratch space: lines (2, 7, w), post (7, w), env (2, 3, e), seg (4, w), arcs (a, 16),
-        gaps (2, b), poly (2, n + 1), cell (1, 16), corner (3, 8).
+        Scratch space: raws (5, w) float32, lines (2, 7, w), spans (2 + PARTS, 4) int64, ends (PARTS, 2) int64, post (9, w), loud
+        (w,) uint8, env (2, 3, e), seg (4, w), arcs (a, 16), gaps (2, b), poly (4, n + 1), cell
+        (1, 16), corner (2, 8), bounds (7, PARTS), highest (WINDOWS, w) float32.
 
     Returns
     -------
     int
         DONE, or FULL if some scratch array is too small; nothing it wrote is wrong then.
     """
-    lines, post, envs, seg, arcs, gaps, poly, cell, corner = work
+    (
+        raws, lines, spans, ends, post, loud, envs, seg, arcs, gaps, poly, cell, corner, bounds,
+        highest,
+    ) = work  # fmt: skip
     degree = ints[DEGREE]
     curved = degree > 1
     own_known = ints[OWN_KNOWN] != 0
@@ -1239,16 +1594,18 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
     target = geo[TARGET]
     low = piece[2]
     high = piece[3]
-    width = lines.shape[2]
+    width = loud.shape[0] - 4 * CHUNK
     rows, cols = z.shape
     n_minor = cols if main_is_row else rows
 
     ts = corner[0]
     gs = corner[1]
-    floors = corner[2]
-    for k in range(BLOCKS):
+    at, least, most, wants, over = post[0], post[1], post[2], post[3], post[4]
+    peaks = post[7]
+    lows = post[8]
+    floors = bounds[0]
+    for k in range(PARTS):
         floors[k] = -BIG
-    heights, at, least, most, wants = post[0], post[1], post[2], post[3], post[4]
 
     # Posts farther than this outside the grid end the wedge. The map of posts means nothing there,
     # and where it turns back a search would not end.
@@ -1257,15 +1614,14 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
     if sign < 0:
         farthest_low = ints[BASE_MINOR] - n_minor - ints[MARGIN] - 8
         farthest_high = ints[BASE_MINOR] + ints[MARGIN] + 8
+    cut = cuts(ints, geo, low, high)
 
     which = 0
-    env = envs[0]
-    env[0, 0] = low
-    env[0, 1] = high
-    env[1, 0] = -BIG
-    env[2, 0] = 0.0
+    envs[0, 0, 0] = low
+    envs[0, 0, 1] = high
+    envs[0, 1, 0] = -BIG
+    envs[0, 2, 0] = 0.0
     n_env = 1
-    env_low = -BIG
     n_arcs = 0
     n_gaps = 0
 
@@ -1274,39 +1630,41 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
     n_prev = 11
     if n_prev > width:
         return FULL
-    x = geo[X0] / geo[SCALE]
     if curved:
-        line_coefficients(coef_u, degree, x, poly[0])
-        line_coefficients(coef_v, degree, x, poly[1])
-    before = lines[0]
-    load_line(z, ints, geo, own, 0, lo_prev, n_prev, poly, heights, before)
-    planes_prev = False
+        line_coefficients(coef_u, degree, geo[X0] / geo[SCALE], poly[0])
+        line_coefficients(coef_v, degree, geo[X0] / geo[SCALE], poly[1])
+    minor = ints[BASE_MINOR] + sign * lo_prev
+    fetch(z, main_is_row, ints[BASE_MAIN], minor, sign, raws[0], n_prev)
+    spans[:] = 0
+    work_out(ints, geo, own, 0, lo_prev, poly[0:2], raws[0], lines[0], spans[0], 0, n_prev)
     void_prev = True
     stale = False
-    stale_floors = False
-    rest = 0
-    top_prev = BIG
+    stale_floors = True
+    is_line = False
+    arcs_kept = 0
     first_prev = 0
     last_prev = 2
     first = 0
     last = 1
 
     for j in range(1, ints[LAST_LINE] + 1):
+        now = j & 1
+        then = 1 - now
         u_line = geo[X0] + j
+        own_poly = poly[2 * now : 2 * now + 2]
         if curved:
-            x = u_line / geo[SCALE]
-            line_coefficients(coef_u, degree, x, poly[0])
-            line_coefficients(coef_v, degree, x, poly[1])
+            line_coefficients(coef_u, degree, u_line / geo[SCALE], own_poly[0])
+            line_coefficients(coef_v, degree, u_line / geo[SCALE], own_poly[1])
         # posts that straddle the wedge: t[first] <= low < ..., ... < high <= t[last]
-        while first > farthest_low and post_t(geo, degree, poly, j, first) > low:
+        while first > farthest_low and post_t(geo, degree, own_poly, j, first) > low:
             first -= 1
-        while first < farthest_high and post_t(geo, degree, poly, j, first + 1) <= low:
+        while first < farthest_high and post_t(geo, degree, own_poly, j, first + 1) <= low:
             first += 1
         if last <= first:
             last = first + 1
-        while last <= farthest_high and post_t(geo, degree, poly, j, last) < high:
+        while last <= farthest_high and post_t(geo, degree, own_poly, j, last) < high:
             last += 1
-        while last - 1 > first and post_t(geo, degree, poly, j, last - 1) >= high:
+        while last - 1 > first and post_t(geo, degree, own_poly, j, last - 1) >= high:
             last -= 1
         lo = min(first, first_prev) - 3
         count = max(last, last_prev) + 4 - lo
@@ -1319,179 +1677,288 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
         if max(minor, beyond) < -ints[MARGIN] or min(minor, beyond) >= n_minor + ints[MARGIN]:
             return DONE
 
-        before = lines[(j - 1) & 1]
-        here = lines[j & 1]
-        pt, pg, pf, pu, pv, pa, pb = (
-            before[0], before[1], before[2], before[3], before[4], before[5], before[6],
-        )  # fmt: skip
-        t, g, f, u, v, ea, eb = here[0], here[1], here[2], here[3], here[4], here[5], here[6]
-        load_line(z, ints, geo, own, j, lo, count, poly, heights, here)
-        if j == 1:
-            open_first_strip(geo, own_known, before, lo_prev, n_prev, here, lo, count)
-
+        before = lines[then]
+        here = lines[now]
+        t, g, f, u, v = here[0], here[1], here[2], here[3], here[4]
+        raw = raws[now]
+        fetch(z, main_is_row, main, minor, sign, raw, count)
+        span = spans[now]
+        span[:] = 0
         n_first = first - lo
         n_last = last - lo
         cell_lo = min(first, first_prev) - 1
         cell_hi = max(last, last_prev)
+        n_low = cell_lo - lo
+        n_high = cell_hi + 1 - lo
         shift = lo_prev - lo  # post a of the line before stands on the row of post a + shift
-        top = greatest(g, cell_lo - lo, cell_hi + 2 - lo)
         unknown = 0
-        for n in range(cell_lo - lo, cell_hi + 2 - lo):
-            unknown |= f[n] != f[n]
+        for n in range(count):
+            unknown += raw[n] != raw[n]
+        ragged = unknown != 0
+        unknown = 0
+        if ragged:
+            for n in range(n_low, n_high + 1):
+                unknown |= raw[n] != raw[n]
         void = unknown != 0
-        if void or void_prev:
+        near = j <= 2  # the sharp posts about the observer: everything is looked at
+        blind = n_gaps == 1 and gaps[0, 0] <= low and gaps[1, 0] >= high
+        opens = (void or void_prev) and not blind
+        if near or opens:
+            work_out(ints, geo, own, j, lo, own_poly, raw, here, span, 0, count)
+            if j == 1:
+                open_first_strip(geo, own_known, before, lo_prev, n_prev, here, lo, count)
+        if opens:
+            work_out(
+                ints, geo, own, j - 1, lo_prev, poly[2 * then : 2 * then + 2], raws[then], before,
+                spans[then], 0, n_prev,
+            )  # fmt: skip
             n_gaps = add_strip_gaps(
-                pt, pf, t, f, shift, cell_lo - lo_prev, cell_hi - lo_prev, j, lo_prev, low, high,
-                gaps, n_gaps,
+                before[0], before[2], t, f, shift, cell_lo - lo_prev, cell_hi - lo_prev, j,
+                lo_prev, low, high, gaps, n_gaps,
             )  # fmt: skip
             if n_gaps < 0:
                 return FULL
 
         # targets
-        nearest = -BIG
-        for n in (n_first, n_last):
-            nearest = max(nearest, distance2(geo, u[n], v[n]))
-        if nearest > geo[RANGE2]:
-            for n in range(n_first, n_last + 1):
-                nearest = min(nearest, distance2(geo, u[n], v[n]))
+        ua, va = post_uv(geo, degree, own_poly, j, first)
+        ub, vb = post_uv(geo, degree, own_poly, j, last)
+        if max(distance2(geo, ua, va), distance2(geo, ub, vb)) > geo[RANGE2]:
+            nearest = BIG
+            for i in range(first, last + 1):
+                ua, va = post_uv(geo, degree, own_poly, j, i)
+                nearest = min(nearest, distance2(geo, ua, va))
             if nearest > geo[RANGE2]:
                 return DONE
         w_lo = n_first
         w_hi = n_last
-        while w_lo <= w_hi and not owned(ints, geo, piece, j, lo + w_lo, t[w_lo]):
+        while w_lo <= w_hi and not owned(ints, geo, degree, own_poly, piece, j, lo + w_lo):
             w_lo += 1
-        while w_hi >= w_lo and not owned(ints, geo, piece, j, lo + w_hi, t[w_hi]):
+        while w_hi >= w_lo and not owned(ints, geo, degree, own_poly, piece, j, lo + w_hi):
             w_hi -= 1
         # distance along a line has no greatest between its ends
-        plain = ints[HAS_BEARINGS] == 0 and w_lo <= w_hi and (
-            asked(ints, geo, u[w_lo], v[w_lo]) and asked(ints, geo, u[w_hi], v[w_hi])
+        ua, va = post_uv(geo, degree, own_poly, j, lo + w_lo)
+        ub, vb = post_uv(geo, degree, own_poly, j, lo + w_hi)
+        plain = (
+            not cut and w_lo <= w_hi and asked(ints, geo, ua, va) and asked(ints, geo, ub, vb)
         )
+        if not plain or (want_clearance and not is_line):
+            work_out(ints, geo, own, j, lo, own_poly, raw, here, span, 0, count)
         goal = f
-        goal_g = g
-        top_goal = top
-        if target != 0.0 or on_ground:
+        goal_raw = raw
+        other_goal = target != 0.0 or on_ground
+        if other_goal:
             goal = post[5]
-            goal_g = post[6]
             if on_ground:
-                fetch(ground, main_is_row, main, minor, sign, heights, count)
-            flatten(heights, target, geo, u, v, goal, count)
-            if on_ground and j == 1:
-                stand_on_own_cell(z, ints, geo, f, heights, lo, count, goal)
-            for n in range(count):
-                goal_g[n] = goal[n] / u[n]
-            top_goal = max(top, greatest(goal_g, w_lo, w_hi + 1))
+                goal_raw = raws[2]
+                fetch(ground, main_is_row, main, minor, sign, goal_raw, count)
 
-        hidden = top_goal + 1e-12 < env_low and not want_clearance
-        rises = max(top, top_prev) > env_low
-        h_lo = n_first
-        h_hi = n_last
-        if not want_clearance and j > 2 and n_last - n_first >= 3 * BLOCKS and (
-            rises or not hidden
-        ):
-            if rest > 0:
-                rest -= 1
-            else:
-                if stale_floors:
-                    block_floors(env, n_env, low, high, floors)
-                    stale_floors = False
-                h_lo, h_hi = loud_posts(
-                    t, g, goal_g, pg, shift, n_prev, n_first, n_last, lo, u_line, geo[Y0], low,
-                    high, floors, least, most,
+        if is_line:
+            # the horizon is the line before: does this one, all of it, take its place?
+            if span[1] < count:
+                place(degree, geo[Y0], lo, u_line, geo[SCALE], own_poly, u, v, 0, whole(0, count))
+                flatten(raw, 0.0, geo, u, v, f, 0, whole(0, count))
+            if not (curved or void or opens or on_ground) and n_gaps == 0 and target >= 0.0 and (
+                overtops(before[2], f, v, u_line, shift, n_low, n_high, n_first, n_last)
+            ):
+                if other_goal:
+                    flatten(raw, target, geo, u, v, goal, 0, whole(0, count))
+                answer_seen(
+                    state, clearance, ints, geo, before[2], goal, u, v, u_line, shift, w_lo, w_hi,
+                    plain, main, minor, over,
                 )  # fmt: skip
-                hidden = hidden or h_lo > h_hi
-                rises = rises and h_lo <= h_hi
-                if h_lo <= n_first and h_hi >= n_last:
-                    rest = 3  # nothing is quiet here, nor likely on the next lines
-        if rises or not hidden:
-            survey_line(env, n_env, h_lo, h_hi - h_lo, t, low, high, at, least, most)
-        r_lo = h_lo
-        if hidden:
-            h_lo = w_hi + 1
-        for n in range(w_lo, w_hi + 1):
-            if h_lo <= n <= h_hi:
+                for b in range(PARTS):
+                    bounds[1 + now, b] = BIG
+                lo_prev = lo
+                n_prev = count
+                first_prev = first
+                last_prev = last
+                void_prev = void
                 continue
-            if goal[n] == goal[n] and (plain or asked(ints, geo, u[n], v[n])):
-                k = minor + sign * n
-                if main_is_row:
-                    state[main, k] = 0
-                else:
-                    state[k, main] = 0
-        if not hidden:
-            answer(
-                state, clearance, ints, geo, own, before, here, goal, at, wants, j, lo, shift,
-                max(w_lo, h_lo), min(w_hi, h_hi), plain, main, minor, arcs, n_arcs, gaps, n_gaps,
-                cell,
+            is_line = False
+            work_out(
+                ints, geo, own, j - 1, lo_prev, poly[2 * then : 2 * then + 2], raws[then], before,
+                spans[then], 0, n_prev,
             )  # fmt: skip
+            edge_planes(before, spans[then], 0, n_prev - 1)
+            n_env = line_as_horizon(
+                before, first_prev - lo_prev, last_prev - lo_prev, low, high, envs[which]
+            )
+            if n_env == 0:
+                return FULL
+            stale = True
+            stale_floors = True
+            if want_clearance:
+                work_out(ints, geo, own, j, lo, own_poly, raw, here, span, 0, count)
 
+        # where may something be seen, or rise above the horizon?
+        tops = bounds[1 + now]
+        goal_tops = bounds[3]
+        tops_prev = bounds[1 + then]
+        for b in range(PARTS):
+            goal_tops[b] = -BIG
+        parts = PARTS if n_last - n_first >= 3 * PARTS and not want_clearance else 1
+        even = part_ends(
+            geo, degree, own_poly, j, lo, low, high, n_first, n_last, count, parts, ends
+        )
+        if near or want_clearance or not even:
+            parts = 1
+            ends[0, 1] = min(n_last + 3, count - 1)
+            for b in range(PARTS):
+                tops[b] = BIG
+        else:
+            least_drops(
+                geo, degree, own_poly, j, lo, count, parts, ends, bounds[4], bounds[5], bounds[6]
+            )
+            sure = raw
+            if ragged:
+                sure = raws[3]
+                fill_voids(raw, whole(0, count), sure)
+            windows(sure, whole(0, count), highest)
+            ceilings(geo, 0.0, parts, ends, bounds[4], bounds[5], bounds[6], highest, tops)
+            if on_ground:
+                fill_voids(goal_raw, whole(0, count), raws[4])
+                windows(raws[4], whole(0, count), highest)
+            if other_goal:
+                ceilings(
+                    geo, target, parts, ends, bounds[4], bounds[5], bounds[6], highest, goal_tops
+                )
+            if stale_floors:
+                block_floors(envs[which], n_env, low, high, floors)
+                stale_floors = False
+        ranges = 0
+        b = 0
+        while b < parts:
+            if is_quiet(b, parts, tops, goal_tops, tops_prev, floors):
+                b += 1
+                continue
+            e_lo = max(ends[b, 0], n_low)
+            b += 1
+            while b < parts and not is_quiet(b, parts, tops, goal_tops, tops_prev, floors):
+                b += 1
+            e_hi = min(ends[b - 1, 1], n_high)
+            a_lo = max(e_lo - 3, 0)
+            a_hi = min(e_hi + 4, count)
+            work_out(ints, geo, own, j, lo, own_poly, raw, here, span, a_lo, a_hi)
+            work_out(
+                ints, geo, own, j - 1, lo_prev, poly[2 * then : 2 * then + 2], raws[then], before,
+                spans[then], max(a_lo - shift, 0), min(a_hi - shift, n_prev),
+            )  # fmt: skip
+            if other_goal:
+                flatten(goal_raw, target, geo, u, v, goal, a_lo, whole(a_lo, a_hi))
+                if on_ground and j == 1:
+                    stand_on_own_cell(z, ints, geo, f, goal_raw, lo, count, goal)
+            h_lo = min(max(e_lo, n_first), n_last - 1)
+            h_hi = max(min(e_hi, n_last), n_first + 1)
+            survey_line(envs[which], n_env, h_lo, h_hi, t, low, high, at, least, most)
+            ranges += 1
+            spans[1 + ranges, 0] = e_lo
+            spans[1 + ranges, 1] = e_hi
+            spans[1 + ranges, 2] = h_lo
+            spans[1 + ranges, 3] = h_hi
+
+        # the rest is hidden
+        if want_clearance and w_lo <= w_hi:
+            clear_heights(geo, own, here, goal, at, u_line, lo, w_lo, w_hi, arcs, n_arcs, over)
+        answer_hidden(
+            state, clearance, ints, geo, here, goal_raw, goal, over, w_lo, w_hi, plain,
+            void or on_ground, main, minor,
+        )  # fmt: skip
+        for b in range(ranges):
+            e_lo, e_hi, h_lo, h_hi = (
+                spans[2 + b, 0], spans[2 + b, 1], spans[2 + b, 2], spans[2 + b, 3],
+            )  # fmt: skip
+            if near:
+                for n in range(e_lo, e_hi + 1):
+                    loud[n] = RISES | ASKS | BULGES
+            elif examine(
+                before, here, goal, curved, shift, e_lo, e_hi, w_lo, w_hi, h_lo, h_hi, at, least,
+                peaks, lows, loud,
+            ) == 0:  # fmt: skip
+                spans[2 + b, 1] = e_lo - 1
+                continue
+            n = e_lo
+            while n <= e_hi:
+                run_lo, run_hi = next_run(loud, n, e_lo, e_hi)
+                n = run_hi + 2
+                if run_lo > run_hi:
+                    break
+                answer(
+                    state, clearance, ints, geo, own, before, here, goal, at, wants, loud, j, lo,
+                    shift, max(w_lo, run_lo), min(w_hi, run_hi), plain, main, minor, arcs, n_arcs, gaps,
+                    n_gaps, cell,
+                )  # fmt: skip
         # merge this strip
-        planes = False
-        if rises:
-            go_lo = cell_lo if r_lo == n_first else lo + r_lo
-            go_hi = cell_hi if h_hi == n_last else lo + h_hi
-            if j > 2:
-                while go_lo <= go_hi and not rising(
-                    pg, go_lo - lo_prev, g, go_lo - lo, least, n_first, n_last
-                ):
-                    go_lo += 1
-                while go_hi > go_lo and not rising(
-                    pg, go_hi - lo_prev, g, go_hi - lo, least, n_first, n_last
-                ):
-                    go_hi -= 1
-            if go_lo <= go_hi:
-                if not planes_prev:
-                    edge_planes(pu, pv, pf, pa, pb, n_prev)
-                edge_planes(u, v, f, ea, eb, count)
-                planes = True
-                if j <= 2:  # close to the observer g of the posts is no bound
-                    for n in range(n_first, n_last):
-                        least[n] = -2.0 * BIG
-                        most[n] = 2.0 * BIG
-                        if g[n] == -BIG or g[n + 1] == -BIG:
-                            least[n] = -2.0 * BIG
-                    if j == 1 and own_known and 0 <= 0 - lo < count:
-                        ea[0 - lo], eb[0 - lo] = own_plane(own, True, 0.0)
-                spare = envs[1 - which]
-                n_new, low_new, changed = merge_line(
-                    env, n_env, n_first, n_last - n_first, t, g, ea, eb, least, most, high, eps,
-                    spare,
+        for b in range(ranges):
+            e_lo, e_hi, h_lo, h_hi = (
+                spans[2 + b, 0], spans[2 + b, 1], spans[2 + b, 2], spans[2 + b, 3],
+            )  # fmt: skip
+            if near:  # close to the observer g of the posts is no bound
+                for n in range(n_first, n_last):
+                    least[n] = -2.0 * BIG
+                    most[n] = 2.0 * BIG
+            n = e_lo
+            while n <= e_hi:
+                run_lo, run_hi = next_run(loud, n, e_lo, e_hi)
+                n = run_hi + 2
+                if run_lo > run_hi:
+                    break
+                rises = 0
+                for m in range(run_lo, run_hi + 1):
+                    rises |= loud[m] & RISES
+                if rises == 0:
+                    continue
+                r_lo = min(max(run_lo, h_lo), h_hi - 1)
+                r_hi = max(min(run_hi, h_hi), h_lo + 1)
+                go_lo = cell_lo if r_lo == n_first else lo + r_lo
+                go_hi = cell_hi if r_hi == n_last else lo + r_hi
+                a_lo = max(run_lo - 3, 0)
+                a_hi = min(run_hi + 3, count - 1)
+                edge_planes(here, span, a_lo, a_hi)
+                edge_planes(
+                    before, spans[then], max(a_lo - shift, 0), min(a_hi - shift, n_prev - 1)
+                )
+                if j == 1 and own_known and 0 <= 0 - lo < count:
+                    here[5, 0 - lo], here[6, 0 - lo] = own_plane(own, True, 0.0)
+                n_new, taken, changed = merge_line(
+                    envs[which], n_env, r_lo, r_hi - r_lo, t, g, here[5], here[6], least, most,
+                    high, eps, envs[1 - which],
                 )  # fmt: skip
                 if n_new == 0:
                     return FULL
-                env_low = low_new
                 if changed:
                     n_env = n_new
                     which = 1 - which
-                    env = spare
-                now = which
-                n_env, which, env_low = add_cross_edges(
-                    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, envs,
-                    which, n_env, env_low, seg,
+                merged = which
+                n_env, which = add_cross_edges(
+                    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, loud,
+                    envs, which, n_env, seg,
                 )  # fmt: skip
                 if n_env == 0:
                     return FULL
-                changed = changed or which != now
-                env = envs[which]
-                # bulges that are still above the envelope: looked after now and then, since one
-                # kept too long costs time but no exactness
-                stale = stale or changed
-                if stale and ((j & 3) == 0 or n_arcs > 2 * (n_last - n_first)):
-                    n_arcs = drop_arcs(env, n_env, eps, arcs, n_arcs)
-                    stale = False
-                stale_floors = stale_floors or changed
+                stale = stale or changed or which != merged
+                stale_floors = stale_floors or changed or which != merged
                 n_arcs = add_strip_arcs(
-                    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, env,
-                    n_env, arcs, n_arcs, cell, ts, gs,
+                    ints, geo, own, before, here, j, lo, lo_prev, go_lo, go_hi, low, high, loud,
+                    envs[which], n_env, arcs, n_arcs, cell, ts, gs,
                 )  # fmt: skip
                 if n_arcs < 0:
                     return FULL
+                is_line = (
+                    taken == n_last - n_first and which == merged and n_arcs == 0
+                    and not (curved or near or void)
+                )  # fmt: skip
+        # bulges that are still above the envelope: looked after now and then, since one kept too
+        # long costs time but no exactness
+        if stale and ((j & 7) == 0 or n_arcs > arcs_kept):
+            n_arcs = drop_arcs(envs[which], n_env, eps, arcs, n_arcs)
+            arcs_kept = 2 * n_arcs + 16
+            stale = False
 
         lo_prev = lo
         n_prev = count
         first_prev = first
         last_prev = last
-        top_prev = top if j > 2 else BIG
         void_prev = void
-        planes_prev = planes
     return DONE
 
 
