@@ -36,6 +36,7 @@ LAYERS = {
     "recording": 6,
     "result": 6,
     "writing": 6,
+    "looking": 6,
     "api": 6,
     "rerun": 6,
     "cli": 7,
