@@ -10,8 +10,10 @@ import logging
 import warnings
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+
 from viewshed.atmosphere import Refraction, parse_refraction
-from viewshed.constants import DEFAULT_RANGE, LAYERS, NODATA, SURVEY_K, WHO_OBSERVERS
+from viewshed.constants import DEFAULT_RANGE, LAYERS, SURVEY_K, WHO_OBSERVERS
 from viewshed.errors import InputError, ViewshedWarning
 from viewshed.looking import Heights, Run
 from viewshed.notes import noted
@@ -22,9 +24,11 @@ from viewshed.visibility import usable_threads
 from viewshed.wording import told_length, told_lengths, told_span
 
 if TYPE_CHECKING:
+    import os
     from collections.abc import Callable, Sequence
 
     from viewshed.io.elevation import Terrain
+    from viewshed.io.room import Room
     from viewshed.io.surface import Surface
 
     Progress = Callable[[float, float], None]
@@ -51,6 +55,8 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
     each: bool = False,
     surface: Surface | None = None,
     notes: Sequence[str] = (),
+    memory: float | None = None,
+    scratch: str | os.PathLike[str] | None = None,
     threads: int | None = None,
     progress: Progress | None = None,
 ) -> MapResult:
@@ -81,6 +87,12 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
         What blocks sight, from `viewshed.open_surface`; None is the ground.
     notes : sequence of str
         What was warned of when the inputs were opened and the result is to say too.
+    memory : float or None
+        What the whole process may take [bytes], at least 600 MB. None is what the system has free,
+        less a margin. The answer is the same to the bit.
+    scratch : path or None
+        Folder in which arrays that do not fit in memory lie as long as the result is kept; None is
+        the system's folder for temporary files.
     threads : int or None
         Threads to use; None is one a processor. The answer is the same to the bit.
     progress : callable or None
@@ -95,11 +107,14 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
     ------
     InputError
         If a value cannot be used: a range that is not positive, an observer outside the grid, on
-        a void, under ground or under the surface, an unknown layer.
+        a void, under ground or under the surface, an unknown layer, too little memory.
     DataError
         If the elevation cannot be read, is void all over, or was replaced while it was read.
     MemoryLimitError
-        If the window does not fit in memory; nothing was read then.
+        If the window does not fit in memory and this system cannot keep arrays in scratch files;
+        nothing was read then.
+    OutputError
+        If the disk has no room for the scratch files.
 
     Examples
     --------
@@ -131,17 +146,17 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
         for one in given
     ]
     window = common_window([one.window for one in placed])
-    _check_memory(window, placed, question, with_surface=surface is not None)
+    room = _room(window, placed, question, surface is not None, memory, scratch)
     _say_cost(placed, usable_threads(threads))
-    heights, met = _read(terrain, surface, window)
-    run = Run(terrain, heights, window, question, placed)
+    heights, met = _read(terrain, surface, window, room)
+    run = Run(terrain, heights, window, question, placed, room)
     run.look(threads, progress)
     told = tuple(dict.fromkeys([*_notes(placed, run.views), *notes, *met]))
     for note in told:
         warnings.warn(note, ViewshedWarning, stacklevel=2)
     for fingerprint in heights.fingerprints:
         fingerprint.confirm()
-    if (run.arrays["visible"] == NODATA).all():
+    if not any(sum(view.tally.counts.values()) for view in run.views):
         where = "" if all(one.sector is None for one in placed) else " and the sector"
         reaches = told_lengths(one.range_m for one in placed)
         msg = f"no known cell centre lies within the range of {reaches}{where}: widen it"
@@ -165,22 +180,39 @@ def _layers(layers: Sequence[str] | None, observers: int) -> tuple[str, ...]:
     return tuple(name for name in LAYERS if name in layers or name == "visible")
 
 
-def _check_memory(
-    window: Window, placed: list[Placed], question: Question, *, with_surface: bool
-) -> None:
-    """Refuse a run whose arrays do not fit in memory."""
-    from viewshed.io._memory import available_memory, check_memory, run_bytes
+def _room(
+    window: Window,
+    placed: list[Placed],
+    question: Question,
+    with_surface: bool,
+    memory: float | None,
+    scratch: str | os.PathLike[str] | None,
+) -> Room:
+    """Make room for the arrays of a run, or refuse it where there is none."""
+    from viewshed.io import _memory
+    from viewshed.io.room import Room, can_map
 
     cells = [float(one.window[2] * one.window[3]) for one in placed]
-    need = run_bytes(
+    need = _memory.run_bytes(
         float(window[2] * window[3]),
         question.layers,
         own_cells=max(cells) if len(placed) > 1 else None,
         surface=with_surface,
         kept_cells=sum(cells) if question.each and len(placed) > 1 else 0.0,
     )
-    cure = None if len(placed) == 1 else "map fewer or nearer observers at a time"
-    check_memory(need, available_memory(), max(one.range_m for one in placed), cure)
+    limit = _memory.usable_memory() if memory is None else _memory.check_limit(memory)
+    if limit < _memory.LEAST or not can_map():
+        cure = None if len(placed) == 1 else "map fewer or nearer observers at a time"
+        _memory.check_memory(need, limit, max(one.range_m for one in placed), cure)
+    room = Room(limit, limit - _memory.LEAST, need - _memory.LEAST, scratch)
+    if room.is_mapped:
+        _log.info(
+            "The run takes %s and may take %s of memory: scratch files in %s hold the rest",
+            _memory.told_size(need),
+            _memory.told_size(limit),
+            room.folder,
+        )
+    return room
 
 
 def _say_cost(placed: list[Placed], threads: int) -> None:
@@ -198,7 +230,9 @@ def _say_cost(placed: list[Placed], threads: int) -> None:
         )
 
 
-def _read(terrain: Terrain, surface: Surface | None, window: Window) -> tuple[Heights, list[str]]:
+def _read(
+    terrain: Terrain, surface: Surface | None, window: Window, room: Room
+) -> tuple[Heights, list[str]]:
     """Read the common window; what the reader warns of becomes notes."""
     fingerprints = [terrain.fingerprint(*window)]
     if surface is not None:
@@ -206,8 +240,9 @@ def _read(terrain: Terrain, surface: Surface | None, window: Window) -> tuple[He
     with noted(told=False) as notes:
         over, median = None, None
         if surface is not None:
-            over = surface.read(*window)
-        reading = terrain.load(*window, cover=over)
+            over = surface.read(*window, out=room.empty(window[2:], np.float32))
+        ground = room.empty(window[2:], np.float32)
+        reading = terrain.load(*window, cover=over, out=ground)
         if over is not None:
             from viewshed.io.surface import compare
 

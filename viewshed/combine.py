@@ -10,6 +10,8 @@ from viewshed.constants import COUNT_NODATA, NODATA, UNRESOLVED, WHO_OBSERVERS
 from viewshed.kernels import gather
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from numpy.typing import NDArray
 
     from viewshed.visibility import Visibility
@@ -41,14 +43,22 @@ class Combination:
         Rows and columns of the grid.
     layers : sequence of str
         Layers to keep beside `visible`.
+    empty : callable
+        What makes arrays, by shape and type.
     """
 
-    def __init__(self, shape: tuple[int, int], layers: tuple[str, ...]) -> None:
-        self.visible = np.full(shape, NODATA, dtype=np.uint8)
+    def __init__(
+        self,
+        shape: tuple[int, int],
+        layers: tuple[str, ...],
+        *,
+        empty: Callable[..., NDArray[Any]] = np.empty,
+    ) -> None:
+        self.visible = _filled(empty(shape, np.uint8), NODATA)
         self._keep = np.array([name in layers for name, _, _ in _KEPT], dtype=np.uint8)
         self._arrays: dict[str, NDArray[Any]] = {
-            name: np.full(shape if kept else (1, 1), empty, dtype=dtype)
-            for (name, dtype, empty), kept in zip(_KEPT, self._keep, strict=True)
+            name: _filled(empty(shape if kept else (1, 1), dtype), nothing)
+            for (name, dtype, nothing), kept in zip(_KEPT, self._keep, strict=True)
         }
         self._added = 0
 
@@ -91,3 +101,10 @@ class Combination:
                     self._arrays[name][part][self.visible[part] == UNRESOLVED] = np.nan
         kept = (name for (name, _, _), keep in zip(_KEPT, self._keep, strict=True) if keep)
         return {"visible": self.visible, **{name: self._arrays[name] for name in kept}}
+
+
+def _filled(array: NDArray[Any], value: float) -> NDArray[Any]:
+    """Fill an array strip by strip."""
+    for start in range(0, array.shape[0], _STRIP_ROWS):
+        array[start : start + _STRIP_ROWS] = value
+    return array

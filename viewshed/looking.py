@@ -24,6 +24,7 @@ if TYPE_CHECKING:
 
     from viewshed.grid import PostMap
     from viewshed.io.elevation import Terrain
+    from viewshed.io.room import Room
     from viewshed.io.surface import Surface
     from viewshed.places import Observer
     from viewshed.visibility import Visibility
@@ -34,6 +35,8 @@ __all__ = ["Heights", "Run"]
 
 #: Clearance is told up to here [m]: an obstacle a hair's breadth before the eye gives millions.
 _GREATEST_CLEARANCE = np.float32(10_000.0)
+#: Rows that are copied or changed at a time.
+_STRIP_ROWS = 256
 
 
 @dataclass(frozen=True)
@@ -57,12 +60,14 @@ class Run:
         window: Window,
         question: Question,
         placed: list[Placed],
+        room: Room,
     ) -> None:
         self.grid = terrain.grid.window(*window)
         self.heights = heights
         self.window = window
         self.question = question
         self.placed = placed
+        self.room = room
         self.areas = cell_areas(self.grid)
         self.views: list[View] = []
         self.kept: Window = (0, 0, 0, 0)
@@ -71,7 +76,9 @@ class Run:
     def look(self, threads: int | None, progress: Progress | None) -> None:
         """Compute what each observer sees and gather it."""
         single = len(self.placed) == 1 and not _needs_gathering(self.question.layers)
-        common = None if single else Combination(self.grid.shape, self.question.layers)
+        common = None if single else Combination(
+            self.grid.shape, self.question.layers, empty=self.room.empty
+        )
         weights = [one.window[2] * one.window[3] for one in self.placed]
         total, before = sum(weights), 0
         for one, weight in zip(self.placed, weights, strict=True):
@@ -98,7 +105,7 @@ class Run:
         row0, col0 = one.window[0] - self.window[0], one.window[1] - self.window[1]
         rows, cols = one.window[2:]
         part = np.s_[row0 : row0 + rows, col0 : col0 + cols]
-        ground = np.ascontiguousarray(self.heights.ground[part])
+        ground = self._own(self.heights.ground, part)
         surface = self.heights.surface
         layers = self.question.layers
         at = (one.row - one.window[0], one.col - one.window[1])
@@ -109,7 +116,7 @@ class Run:
             seen = compute(
                 ground,
                 post_map,
-                surface=None if surface is None else np.ascontiguousarray(surface[part]),
+                surface=None if surface is None else self._own(surface, part),
                 eye_height=eye,
                 target_height=one.target_height,
                 refraction_k=self.question.refraction.k,
@@ -117,6 +124,7 @@ class Run:
                 sector=one.sector,
                 clearance="clearance" in layers,
                 needed_height="needed-height" in layers,
+                empty=self.room.empty,
                 threads=threads,
                 progress=progress,
             )
@@ -124,7 +132,9 @@ class Run:
             msg = f"{told_of(one.observer, one.x, one.y)}: {error}"
             raise InputError(msg) from error
         if seen.clearance is not None:
-            np.minimum(seen.clearance, _GREATEST_CLEARANCE, out=seen.clearance)
+            for first in range(0, rows, _STRIP_ROWS):
+                strip = seen.clearance[first : first + _STRIP_ROWS]
+                np.minimum(strip, _GREATEST_CLEARANCE, out=strip)
         trimmed = _trim(post_map, (rows, cols), one.range_m)
         areas = self.areas.window(row0, col0, rows, cols)
         keep = self.question.each and len(self.placed) > 1
@@ -136,9 +146,19 @@ class Run:
             post_map=post_map.moved(-row0, -col0),
             window=(row0 + trimmed[0], col0 + trimmed[1], *trimmed[2:]),
             tally=tally_up(seen.visible, post_map, areas, one.range_m).moved(-row0, -col0),
-            visible=np.ascontiguousarray(seen.visible[inner]) if keep else None,
+            visible=self._own(seen.visible, inner) if keep else None,
         )
         return seen, view, (row0, col0)
+
+    def _own(self, array: NDArray[Any], part: tuple[slice, slice]) -> NDArray[Any]:
+        """Give a part of an array, as an array of its own unless it is the whole."""
+        cut = array[part]
+        if cut.flags.c_contiguous:
+            return cut
+        own = self.room.empty(cut.shape, cut.dtype)
+        for first in range(0, cut.shape[0], _STRIP_ROWS):
+            own[first : first + _STRIP_ROWS] = cut[first : first + _STRIP_ROWS]
+        return own
 
     def result(
         self, terrain: Terrain, surface: Surface | None, notes: tuple[str, ...]

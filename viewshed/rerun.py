@@ -337,13 +337,14 @@ def _folder(record_path: PathLike) -> Path:
     return path if path.is_dir() else path.parent
 
 
-def rerun(
+def rerun(  # noqa: PLR0913 - where things are, and how it is run
     record_path: PathLike,
     out_dir: PathLike,
     *,
     dem: Sequence[PathLike] = (),
     surface: Sequence[PathLike] = (),
     void_mask: PathLike | None = None,
+    memory: float | None = None,
     threads: int | None = None,
     overwrite: bool = False,
     progress: Callable[[float, float], None] | None = None,
@@ -362,6 +363,8 @@ def rerun(
         Where elevation grid and surface are now, if not where the record says.
     void_mask : path, optional
         Where the mask of voids is now.
+    memory : float, optional
+        What the whole process may take [bytes]; default: what is free, less a margin.
     threads : int, optional
         Threads to use.
     overwrite : bool, optional
@@ -383,7 +386,7 @@ def rerun(
     OutputError
         If the new result cannot be written.
     """
-    from viewshed.io._atomic import check_out_dir
+    from viewshed.io._atomic import check_out_dir, nearest_folder
     from viewshed.io.compare import changes, compare_outputs, verdict
     from viewshed.io.record import read_record
 
@@ -401,7 +404,8 @@ def rerun(
             "--void-mask)"
         )
         raise DataError(msg)
-    _run(asked, out, overwrite=overwrite, threads=threads, progress=progress)
+    how: dict[str, Any] = {"memory": memory, "threads": threads, "progress": progress}
+    _run(asked, out, overwrite=overwrite, scratch=nearest_folder(out), **how)
     new = read_record(out)
     extra = _new_inputs(inputs, new, out)
     _warn_of(extra)

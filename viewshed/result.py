@@ -8,9 +8,6 @@ from functools import cached_property
 from pathlib import PurePath
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
-
-from viewshed.constants import HIDDEN, NODATA, UNRESOLVED, VISIBLE
 from viewshed.wording import (
     told_area,
     told_distance,
@@ -24,6 +21,7 @@ if TYPE_CHECKING:
     from collections.abc import Mapping
     from pathlib import Path
 
+    import numpy as np
     from numpy.typing import NDArray
 
     from viewshed.atmosphere import Refraction
@@ -37,7 +35,7 @@ if TYPE_CHECKING:
 
 __all__ = ["Inputs", "MapResult", "Question", "View"]
 
-_STATES = {"visible": VISIBLE, "hidden": HIDDEN, "unresolved": UNRESOLVED, "nodata": NODATA}
+_STATES = ("visible", "hidden", "unresolved", "nodata")
 
 
 @dataclass(frozen=True)
@@ -259,19 +257,22 @@ class MapResult:
     @cached_property
     def counts(self) -> dict[str, int]:
         """Cells of each state."""
-        found = np.zeros(256, dtype=np.int64)
-        for first in range(0, self.visible.shape[0], 256):  # bincount widens what it is given
-            found += np.bincount(self.visible[first : first + 256].ravel(), minlength=256)
-        return {name: int(found[value]) for name, value in _STATES.items()}
+        known = self._sums[0]
+        return {name: known.get(name, self.visible.size - sum(known.values())) for name in _STATES}
 
     @cached_property
     def areas_m2(self) -> dict[str, float]:
         """True area of the cells of each state on the ellipsoid [m2]."""
-        return {
-            name: round(self.areas.total(self.visible == value), 1)
-            for name, value in _STATES.items()
-            if value != NODATA
-        }
+        return {name: round(self._sums[1][name], 1) for name in _STATES if name != "nodata"}
+
+    @cached_property
+    def _sums(self) -> tuple[dict[str, int], dict[str, float]]:
+        """Cells and areas [m2] of each state that is an answer."""
+        if len(self.views) == 1:
+            return self.views[0].tally.counts, self.views[0].tally.areas_m2
+        from viewshed.tally import sums
+
+        return sums(self.visible, self.areas)
 
     @cached_property
     def farthest_visible(self) -> dict[str, Any] | None:

@@ -222,3 +222,30 @@ def _farthest(
     e, n = float(east[best]), float(north[best])
     bearing = math.degrees(math.atan2(e, n)) % 360.0
     return int(both[best]), int(cols[best]), math.hypot(e, n), bearing
+
+
+def sums(
+    visible: NDArray[np.uint8], areas: CellAreas
+) -> tuple[dict[str, int], dict[str, float]]:
+    """Add up cells and true areas [m2] of each state, whatever their distance."""
+    counts = np.zeros((1, gather.STATES), dtype=np.int64)
+    found = np.zeros((1, gather.STATES), dtype=np.float64)
+    scratch = np.zeros((*found.shape, areas.col_factors.shape[0]))
+    tips = np.empty((2, visible.shape[0]), dtype=np.int64)
+    for start in range(0, visible.shape[0], _STRIP_ROWS):
+        part = slice(start, min(start + _STRIP_ROWS, visible.shape[0]))
+        gather.tally(
+            visible[part],
+            np.empty((0, 2, part.stop - part.start), dtype=np.int64),
+            areas.row_factors[part],
+            areas.col_factors,
+            counts,
+            found,
+            tips[0, part],
+            tips[1, part],
+            scratch,
+        )
+    return (
+        {name: int(n) for name, n in zip(STATE_NAMES, counts[0], strict=True)},
+        {name: float(a) for name, a in zip(STATE_NAMES, found[0], strict=True)},
+    )

@@ -40,6 +40,9 @@ if TYPE_CHECKING:
 
 __all__ = ["Visibility", "compute", "ground_at"]
 
+#: Rows of a layer that are filled or finished at a time.
+_STRIP_ROWS = 256
+
 
 @dataclass(frozen=True)
 class Visibility:
@@ -233,6 +236,7 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     sector: Sector | None = None,
     clearance: bool = False,
     needed_height: bool = False,
+    empty: Callable[..., NDArray[Any]] = np.empty,
     threads: int | None = None,
     progress: Callable[[int, int], None] | None = None,
 ) -> Visibility:
@@ -259,6 +263,8 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
         Bearings looked over; None is all around.
     clearance, needed_height : bool
         Whether to answer with these layers too.
+    empty : callable
+        What makes the arrays of the layers, by shape and type.
     threads : int or None
         Threads to use; None is one a processor. The answer is the same to the bit.
     progress : callable or None
@@ -329,8 +335,11 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
         shift=shift_of(post_map) if post_map.degree > 1 else (0.0, 0.0),
     )
     want = clearance or needed_height
-    state = np.full(elevation.shape, NODATA, dtype=np.uint8)
-    clear = np.full(elevation.shape if want else (1, 1), np.nan, dtype=np.float32)
+    state = empty(elevation.shape, np.uint8)
+    clear = empty(elevation.shape if want else (1, 1), np.float32)
+    for first in range(0, state.shape[0], _STRIP_ROWS):
+        state[first : first + _STRIP_ROWS] = NODATA
+        clear[first : first + _STRIP_ROWS] = np.nan
     pieces, axes = wedges(scene, want)
     workers = _Workers(max(elevation.shape), wedge_count(scene))
 
@@ -353,7 +362,7 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     _answer_own_place(scene, elevation, state, clear if want else None)
     asked = (clearance, needed_height)
     cleared, needed = (
-        _finish(state, clear, eye_height, target_height, asked) if want else (None, None)
+        _finish(state, clear, eye_height, target_height, asked, empty) if want else (None, None)
     )
     return Visibility(state, cleared, needed, eye_elevation=ground + eye_height)
 
@@ -411,6 +420,7 @@ def _finish(
     eye_height: float,
     target_height: float,
     asked: tuple[bool, bool],
+    empty: Callable[..., NDArray[Any]],
 ) -> tuple[NDArray[np.float32] | None, NDArray[np.float32] | None]:
     """Clearance and needed height, with a number also where nothing stands between.
 
@@ -419,9 +429,9 @@ def _finish(
     """
     spare = np.float32(eye_height + target_height)
     target = np.float32(target_height)
-    height = np.empty_like(clear) if asked[1] else None
-    for first in range(0, state.shape[0], 256):
-        rows = slice(first, first + 256)
+    height = (empty(clear.shape, np.float32) if asked[0] else clear) if asked[1] else None
+    for first in range(0, state.shape[0], _STRIP_ROWS):
+        rows = slice(first, first + _STRIP_ROWS)
         part = clear[rows]
         part[np.isposinf(part)] = spare
         part[(state[rows] != VISIBLE) & (state[rows] != HIDDEN)] = np.nan

@@ -23,6 +23,7 @@ from viewshed.cli.options import (
     SectionedCommand,
     SectorType,
     columns,
+    memory_option,
     overwrite_option,
     table,
     threads_option,
@@ -251,11 +252,13 @@ SECTIONS = {
     metavar="NAME=VALUE",
     help="GDAL creation option for the rasters, like COMPRESS=ZSTD; can be repeated.",
 )
+@memory_option
 @threads_option
 @verbosity_options
 @click.pass_context
 def map_command(ctx: click.Context, /, **given: Any) -> None:
     """Map what can be seen from one place or many."""
+    from viewshed.io._atomic import nearest_folder
     from viewshed.notes import noted
     from viewshed.placing import named
     from viewshed.writing import check_outputs
@@ -288,6 +291,8 @@ def map_command(ctx: click.Context, /, **given: Any) -> None:
             each=given["each"],
             surface=surface,
             notes=notes,
+            memory=given["memory"],
+            scratch=nearest_folder(given["out"]),
             threads=given["threads"],
             progress=progress,
         )

@@ -169,6 +169,18 @@ class FolderType(_Text):
         return Path(text)
 
 
+class MemoryType(_Text):
+    """Size of memory, read as bytes."""
+
+    name = "size"
+
+    def read(self, text: str) -> int:
+        """Read bytes from a text such as 2GiB."""
+        from viewshed.io._memory import check_limit, parse_size
+
+        return check_limit(parse_size(text))
+
+
 class PictureType(_Text):
     """A file for a picture, which is always a PNG."""
 
@@ -231,6 +243,13 @@ threads_option = click.option(
     type=click.IntRange(min=1),
     metavar="N",
     help="Threads to use. [default: all there are]",
+)
+memory_option = click.option(
+    "--memory",
+    type=MemoryType(),
+    metavar="SIZE",
+    help="Memory that may be used, like 2GiB; what does not fit lies in scratch files in DIR "
+    "meanwhile. [default: what is free, less a margin]",
 )
 
 

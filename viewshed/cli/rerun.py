@@ -11,6 +11,7 @@ from viewshed.cli.options import (
     FolderType,
     Progress,
     SectionedCommand,
+    memory_option,
     overwrite_option,
     table,
     threads_option,
@@ -93,6 +94,7 @@ _WORDS = {
 )
 @overwrite_option
 @click.option("--json", "as_json", is_flag=True, help="Print the comparison as JSON instead.")
+@memory_option
 @threads_option
 @verbosity_options
 @click.pass_context
@@ -113,6 +115,7 @@ def rerun_command(ctx: click.Context, /, **given: Any) -> None:
             dem=given["dem"],
             surface=given["surface"],
             void_mask=given["void_mask"],
+            memory=given["memory"],
             threads=given["threads"],
             overwrite=given["overwrite"],
             progress=progress,

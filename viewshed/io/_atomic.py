@@ -175,9 +175,7 @@ def check_out_dir(
     folder = Path(out_dir)
     with _as_output_error(folder):
         present = folder.is_dir()
-        place = folder
-        while not os.path.lexists(place) and place != place.parent:
-            place = place.parent
+        place = nearest_folder(folder)
     if not place.is_dir():
         msg = f"{place}: is not a folder; choose another one for the results"
         raise OutputError(msg)
@@ -187,6 +185,14 @@ def check_out_dir(
     if present:
         with locked(folder):
             _refuse_existing(folder, overwrite=overwrite, names=names)
+
+
+def nearest_folder(folder: str | os.PathLike[str]) -> Path:
+    """Give a folder, or what exists of the way to it."""
+    place = Path(folder)
+    while not os.path.lexists(place) and place != place.parent:
+        place = place.parent
+    return place
 
 
 def _refuse_existing(folder: Path, *, overwrite: bool, names: tuple[str, ...]) -> None:

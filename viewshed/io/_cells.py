@@ -17,6 +17,8 @@ from viewshed.io.mosaic import Heights, Part, Tile
 
 #: Most cells of a strip that is read at a time.
 _STRIP_CELLS = 1 << 22
+#: Rows that are made void at a time.
+_VOID_ROWS = 256
 #: Most cells of a tile that are looked at to understand one value.
 _MOST_CELLS = 1 << 28
 #: Fewest cells of a block that a thread unpacks faster than it is handed the block.
@@ -46,6 +48,12 @@ class Noticed:
     missing_blocks: int = 0
     difference: float = np.nan
     where: tuple[int, int] = (0, 0)
+
+
+def fill_void(heights: Heights) -> None:
+    """Make all heights of an array void, strip by strip."""
+    for first in range(0, heights.shape[0], _VOID_ROWS):
+        heights[first : first + _VOID_ROWS] = np.nan
 
 
 def fill(part: Part, window: Heights) -> Noticed:

@@ -1,11 +1,12 @@
-"""How much memory there is, and the refusal of a run that needs more."""
+"""How much memory there is, how much a run takes, and the refusal of one that takes more."""
 
 import os
+import re
 from collections.abc import Iterator, Sequence
 from math import isfinite, sqrt
 from pathlib import Path
 
-from viewshed.errors import MemoryLimitError
+from viewshed.errors import InputError, MemoryLimitError
 
 try:
     import resource
@@ -18,8 +19,17 @@ _NO_LIMIT = 1 << 60
 _FALLBACK = 2 << 30
 #: Bytes a cell of the layers that gather several observers.
 _GATHERED_BYTES = {"count": 2, "count-unresolved": 2, "who": 4}
-#: Memory of the page, the writers and the scratch arrays, beside the arrays of the window [bytes].
-_OVERHEAD = 600e6
+#: Memory of the process beside the arrays of the window [bytes]: libraries, page, writers, scratch.
+LEAST = 600_000_000
+#: Share of the memory that is free which a run takes if it is not told.
+_SHARE = 0.9
+#: Bytes of the units of a size of memory.
+_UNITS = {
+    "": 1, "B": 1, "KB": 10**3, "MB": 10**6, "GB": 10**9, "TB": 10**12,
+    "K": 2**10, "M": 2**20, "G": 2**30, "T": 2**40,
+    "KIB": 2**10, "MIB": 2**20, "GIB": 2**30, "TIB": 2**40,
+}  # fmt: skip
+_SIZE = re.compile(r"\s*(\d+(?:\.\d*)?|\.\d+)\s*([A-Za-z]*)\s*")
 
 
 def available_memory(root: Path = Path("/")) -> int:
@@ -44,6 +54,91 @@ def available_memory(root: Path = Path("/")) -> int:
     if not found:
         found = [*_sysconf()]
     return max(0, min(found, default=_FALLBACK))
+
+
+def resident_memory(root: Path = Path("/")) -> tuple[int, int] | None:
+    """Say how much memory this process takes now.
+
+    Parameters
+    ----------
+    root : pathlib.Path, optional
+        Folder that holds ``proc``.
+
+    Returns
+    -------
+    tuple of int or None
+        All of it, and what of it are pages of files [bytes]; None where the system does not tell.
+    """
+    numbers = _text(root / "proc/self/statm").split()
+    if len(numbers) < 3 or not hasattr(os, "sysconf"):
+        return None
+    page = os.sysconf("SC_PAGE_SIZE")
+    return int(numbers[1]) * page, int(numbers[2]) * page
+
+
+def parse_size(text: str) -> int:
+    """Read a size of memory such as ``2GiB``.
+
+    Parameters
+    ----------
+    text : str
+        A number and a unit: GB and MB of 1000s, GiB, G, MiB and M of 1024s, and so on; bytes when
+        no unit is given.
+
+    Returns
+    -------
+    int
+        Size [bytes].
+
+    Raises
+    ------
+    InputError
+        If it is not understood.
+
+    Examples
+    --------
+    >>> parse_size("2GiB"), parse_size("800 MB")
+    (2147483648, 800000000)
+    """
+    match = _SIZE.fullmatch(text)
+    unit = _UNITS.get(match[2].upper()) if match else None
+    if match is None or unit is None:
+        msg = f"memory {text!r} is not a size; give it like 2GiB or 800MB"
+        raise InputError(msg)
+    return int(float(match[1]) * unit)
+
+
+def check_limit(memory: float) -> int:
+    """Refuse a bound on memory that not even the process itself keeps.
+
+    Parameters
+    ----------
+    memory : float
+        The bound [bytes].
+
+    Returns
+    -------
+    int
+        The same.
+
+    Raises
+    ------
+    InputError
+        If it is too small.
+    """
+    if not memory >= LEAST:
+        msg = (
+            f"memory of {told_size(memory)} is too little: viewshed itself takes up to "
+            f"{told_size(LEAST)}; give at least {LEAST // 10**6}MB"
+        )
+        raise InputError(msg)
+    return int(min(memory, _NO_LIMIT))
+
+
+def usable_memory() -> int:
+    """Say how much memory the whole process may take if nobody says so [bytes]."""
+    used, _ = resident_memory() or (0, 0)
+    return used + int(_SHARE * available_memory())
 
 
 def run_bytes(
@@ -72,17 +167,16 @@ def run_bytes(
     Returns
     -------
     float
-        Memory [bytes]: that of the arrays of the window, and of the page, the writers and the
-        scratch arrays beside them.
+        Memory [bytes]: that of the arrays of the window, and of the libraries, the page, the
+        writers and the scratch arrays beside them.
     """
     heights = 8 if surface else 4
-    clear = 6 if {"clearance", "needed-height"} & set(layers) else 0
-    need = 4 if "needed-height" in layers else 0
+    clear = 4 * len({"clearance", "needed-height"} & set(layers))
     gathered = sum(_GATHERED_BYTES.get(name, 0) for name in layers)
-    each = heights + 3 + clear + need
+    each = heights + 1 + clear
     if own_cells is None:
-        return cells * (each + gathered) + _OVERHEAD
-    return cells * (each + gathered) + own_cells * each + kept_cells + _OVERHEAD
+        return cells * (each + gathered) + LEAST
+    return cells * (each + gathered) + own_cells * each + kept_cells + LEAST
 
 
 def check_memory(

@@ -8,6 +8,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from viewshed.errors import AllVoidError, ViewshedWarning
+from viewshed.io._cells import fill_void
 from viewshed.io.elevation import Terrain
 from viewshed.io.mosaic import Heights
 from viewshed.notes import noted
@@ -35,8 +36,10 @@ class Windows:
         self.terrain = terrain
         self.met: list[str] = []
 
-    def read(self, row_off: int, col_off: int, rows: int, cols: int) -> Heights:
-        """Read a window; give NaN where nothing in it is known.
+    def read(
+        self, row_off: int, col_off: int, rows: int, cols: int, *, out: Heights | None = None
+    ) -> Heights:
+        """Read a window, into an array if one is given; NaN where nothing in it is known.
 
         Raises
         ------
@@ -45,9 +48,10 @@ class Windows:
         """
         with noted(told=False) as met:
             try:
-                heights = self.terrain.read(row_off, col_off, rows, cols)
+                heights = self.terrain.load(row_off, col_off, rows, cols, out=out).elevation
             except AllVoidError:
-                heights = np.full((rows, cols), np.nan, dtype=np.float32)
+                heights = np.empty((rows, cols), dtype=np.float32) if out is None else out
+                fill_void(heights)
         self.met += met
         return heights
 

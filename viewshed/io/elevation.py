@@ -18,7 +18,7 @@ from viewshed import geodesy
 from viewshed.errors import AllVoidError, InputError, ViewshedWarning
 from viewshed.grid import Grid
 from viewshed.io import _index, tiles
-from viewshed.io._cells import Noticed, fill, height_at
+from viewshed.io._cells import Noticed, fill, fill_void, height_at
 from viewshed.io._header import reading_env
 from viewshed.io._reference import HEIGHT_UNITS, settle
 from viewshed.io.fingerprint import Fingerprint
@@ -136,7 +136,14 @@ class Terrain:
         return self.load(row_off, col_off, rows, cols).elevation
 
     def load(
-        self, row_off: int, col_off: int, rows: int, cols: int, *, cover: Heights | None = None
+        self,
+        row_off: int,
+        col_off: int,
+        rows: int,
+        cols: int,
+        *,
+        cover: Heights | None = None,
+        out: Heights | None = None,
     ) -> Reading:
         """Read a window.
 
@@ -149,6 +156,8 @@ class Terrain:
         cover : numpy.ndarray, float32, shape (rows, cols), optional
             Heights of a surface over it [m], changed in place: where both are void and the voids
             are stated to have a height, the surface has it too.
+        out : numpy.ndarray, float32, shape (rows, cols), optional
+            Array to read into.
 
         Returns
         -------
@@ -169,8 +178,10 @@ class Terrain:
         Besides the result it takes the memory of one strip of blocks.
         """
         window = self.grid.window(row_off, col_off, rows, cols)
-        out = np.full((rows, cols), np.nan, dtype=np.float32)
+        out = np.empty((rows, cols), np.float32) if out is None else out
         parts = self._layout.parts(row_off, col_off, rows, cols)
+        if not any(part.covers(rows, cols) for part in parts[:1]):
+            fill_void(out)
         with reading_env(len(self.tiles)):
             notes = [fill(part, out) for part in parts]
             overlap = _overlap(parts, notes)

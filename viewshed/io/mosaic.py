@@ -316,6 +316,10 @@ class Part:
     cols: slice
     shared: tuple[tuple[slice, slice], ...]
 
+    def covers(self, rows: int, cols: int) -> bool:
+        """Tell whether this part is a whole window of that size."""
+        return (self.rows, self.cols) == (slice(0, rows), slice(0, cols))
+
     def holds(self, row: int, col: int) -> bool:
         """Tell whether a cell of the window is in this part."""
         rows, cols = self.rows, self.cols

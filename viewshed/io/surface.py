@@ -18,6 +18,8 @@ from numpy.typing import NDArray
 from viewshed import extent
 from viewshed.errors import DataError, InputError, ViewshedWarning
 from viewshed.grid import FloatArray, Grid
+from viewshed.io._cells import fill_void
+from viewshed.io._median import median
 from viewshed.io._resample import Box, IndexMap, Place, bilinear, block_means, box_round
 from viewshed.io._windows import Windows
 from viewshed.io.elevation import PathLike, Terrain, open_terrain
@@ -112,7 +114,15 @@ class Surface:
         box = box_round(row, col, margin, self.own.grid.shape)
         return Fingerprint(()) if box is None else self.own.fingerprint(*box)
 
-    def read(self, row_off: int, col_off: int, rows: int, cols: int) -> Heights:
+    def read(
+        self,
+        row_off: int,
+        col_off: int,
+        rows: int,
+        cols: int,
+        *,
+        out: Heights | None = None,
+    ) -> Heights:
         """Read a window.
 
         Parameters
@@ -121,6 +131,8 @@ class Surface:
             First row and column of the window in the grid of the ground.
         rows, cols : int
             Size of the window.
+        out : numpy.ndarray, float32, shape (rows, cols), optional
+            Array to read into.
 
         Returns
         -------
@@ -139,7 +151,8 @@ class Surface:
         Besides the result it takes the memory of a block of some million cells.
         """
         self.grid.window(row_off, col_off, rows, cols)
-        out = np.full((rows, cols), np.nan, dtype=np.float32)
+        out = np.empty((rows, cols), np.float32) if out is None else out
+        fill_void(out)
         window, own = (row_off, col_off, rows, cols), Windows(self.own)
         if self.offset is not None:
             self._copy(window, self.offset, own, out)
@@ -159,8 +172,7 @@ class Surface:
         count = [min(shape[i], starts[i] + box[2 + i]) - first[i] for i in (0, 1)]
         if min(count) > 0:
             row, col = (first[i] - starts[i] for i in (0, 1))
-            heights = own.read(first[0], first[1], count[0], count[1])
-            out[row : row + count[0], col : col + count[1]] = heights
+            own.read(*first, *count, out=out[row : row + count[0], col : col + count[1]])
 
     @property
     def _margin(self) -> float:
@@ -310,7 +322,7 @@ def compare(surface: Heights, ground: Heights) -> float | None:
 
     Notes
     -----
-    It takes the memory of one more array of heights.
+    It takes the memory of a strip of rows.
     """
     on_ground = in_both = 0
     for rows in _strips(ground):
@@ -325,29 +337,29 @@ def compare(surface: Heights, ground: Heights) -> float | None:
         warnings.warn(msg, ViewshedWarning, stacklevel=2)
     if not in_both:
         return None
-    differences, filled = np.empty(in_both, dtype=np.float32), 0
-    for rows in _strips(ground):
-        mask = _both(surface[rows], ground[rows])
-        part = surface[rows][mask] - ground[rows][mask]
-        differences[filled : filled + part.size] = part
-        filled += part.size
-    median = float(np.median(differences, overwrite_input=True))
-    tall = int(np.count_nonzero(differences > _TALL))
-    if tall > _TALL_SHARE * in_both and median <= _HIGH_ABOVE:
+
+    def differences() -> Iterator[NDArray[np.float32]]:
+        for rows in _strips(ground):
+            mask = _both(surface[rows], ground[rows])
+            yield surface[rows][mask] - ground[rows][mask]
+
+    middle = median(differences, in_both)
+    tall = sum(int(np.count_nonzero(part > _TALL)) for part in differences())
+    if tall > _TALL_SHARE * in_both and middle <= _HIGH_ABOVE:
         msg = (
             f"the surface is more than {_TALL:g} m above the ground at {_percent(tall / in_both)} "
             "of the posts, taller than woods and houses; check that both share the unit of their "
             "heights"
         )
         warnings.warn(msg, ViewshedWarning, stacklevel=2)
-    if round(median, 2) < 0.0 or median > _HIGH_ABOVE:
-        side = f"{median:.2f} m above" if median > 0.0 else f"{-median:.2f} m below"
+    if round(middle, 2) < 0.0 or middle > _HIGH_ABOVE:
+        side = f"{middle:.2f} m above" if middle > 0.0 else f"{-middle:.2f} m below"
         msg = (
             f"the surface is {side} the ground in the middle of all differences; check that "
             "surface and ground are not swapped and share unit and datum of their heights"
         )
         warnings.warn(msg, ViewshedWarning, stacklevel=2)
-    return median
+    return middle
 
 
 # --- fitting the grids ------------------------------------------------------------------------
