@@ -18,6 +18,7 @@ LAYERS = {
     "constants": 0,
     "notes": 1,
     "_jit": 1,
+    "crew": 1,
     "areas": 2,
     "extent": 2,
     "atmosphere": 2,

@@ -29,6 +29,7 @@ OPTIONS: dict[str, Any] = {
 }
 
 _log = logging.getLogger("viewshed")
+_announced: set[Any] = set()
 
 
 def kernel(function: F) -> F:
@@ -61,8 +62,9 @@ def exact_max(function: F) -> F:
 
 def announce(dispatcher: Any) -> None:
     """Say so, once, when the next call of a kernel will have to compile it."""
-    if dispatcher.overloads or _is_cached(dispatcher):
+    if dispatcher in _announced or dispatcher.overloads or _is_cached(dispatcher):
         return
+    _announced.add(dispatcher)
     kept = " and is kept for the next run" if hasattr(dispatcher._cache, "_cache_file") else ""
     _log.warning("compiling the kernels: this takes about half a minute%s", kept)
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from threading import Lock
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -60,10 +61,10 @@ class Combination:
             name: _filled(empty(shape if kept else (1, 1), dtype), nothing)
             for (name, dtype, nothing), kept in zip(_KEPT, self._keep, strict=True)
         }
-        self._added = 0
+        self._lock = Lock()
 
-    def add(self, seen: Visibility, row0: int, col0: int) -> None:
-        """Add the next observer.
+    def add(self, seen: Visibility, row0: int, col0: int, number: int) -> None:
+        """Add an observer; in any order, and from any thread.
 
         Parameters
         ----------
@@ -71,26 +72,28 @@ class Combination:
             What it sees.
         row0, col0 : int
             Where its first cell lies in the grid.
+        number : int
+            Which observer it is, from 0: its bit in `who`.
         """
         rows = seen.visible.shape[0]
         nothing = np.zeros((1, 1), dtype=np.float32)
         clear = nothing if seen.clearance is None else seen.clearance
         need = nothing if seen.needed_height is None else seen.needed_height
-        bit = np.uint32(1 << (self._added % WHO_OBSERVERS))
+        bit = np.uint32(1 << (number % WHO_OBSERVERS))
         for start in range(0, rows, _STRIP_ROWS):
             part = slice(start, start + _STRIP_ROWS)
-            gather.merge(
-                seen.visible[part],
-                clear if clear is nothing else clear[part],
-                need if need is nothing else need[part],
-                row0 + start,
-                col0,
-                bit,
-                self._keep,
-                self.visible,
-                *self._arrays.values(),
-            )
-        self._added += 1
+            with self._lock:
+                gather.merge(
+                    seen.visible[part],
+                    clear if clear is nothing else clear[part],
+                    need if need is nothing else need[part],
+                    row0 + start,
+                    col0,
+                    bit,
+                    self._keep,
+                    self.visible,
+                    *self._arrays.values(),
+                )
 
     def layers(self) -> dict[str, NDArray[Any]]:
         """Give the layers kept, `visible` first; what is not known is NaN."""

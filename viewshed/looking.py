@@ -2,27 +2,29 @@
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from viewshed._jit import announce
 from viewshed.areas import cell_areas
 from viewshed.combine import Combination
+from viewshed.crew import run_jobs
 from viewshed.errors import InputError
+from viewshed.kernels.sweep import sweep
 from viewshed.placing import Placed, Window, common_window, told_of
 from viewshed.postmap import fit_post_map
 from viewshed.result import Inputs, MapResult, Question, View
-from viewshed.tally import tally_up
-from viewshed.visibility import compute, ground_at
+from viewshed.tally import reached_window, tally_up
+from viewshed.visibility import compute, ground_at, usable_threads
 
 if TYPE_CHECKING:
     from collections.abc import Callable
 
     from numpy.typing import NDArray
 
-    from viewshed.grid import PostMap
+    from viewshed.crew import Share
     from viewshed.io.elevation import Terrain
     from viewshed.io.room import Room
     from viewshed.io.surface import Surface
@@ -37,6 +39,9 @@ __all__ = ["Heights", "Run"]
 _GREATEST_CLEARANCE = np.float32(10_000.0)
 #: Rows that are copied or changed at a time.
 _STRIP_ROWS = 256
+#: What the windows of observers under way beside the first may take [bytes]: what the page and the
+#: writers need later is free while observers look.
+_MORE_WINDOWS = 300e6
 
 
 @dataclass(frozen=True)
@@ -74,47 +79,86 @@ class Run:
         self.arrays: dict[str, NDArray[Any]] = {}
 
     def look(self, threads: int | None, progress: Progress | None) -> None:
-        """Compute what each observer sees and gather it."""
+        """Compute what each observer sees and gather it.
+
+        Parameters
+        ----------
+        threads : int or None
+            Threads to use; None is one a processor.
+        progress : callable or None
+            Called now and then with work done and work in all.
+
+        Raises
+        ------
+        InputError
+            If an observer cannot stand where it is or cannot see from there; it names the first.
+        """
         single = len(self.placed) == 1 and not _needs_gathering(self.question.layers)
         common = None if single else Combination(
             self.grid.shape, self.question.layers, empty=self.room.empty
         )
-        weights = [one.window[2] * one.window[3] for one in self.placed]
-        total, before = sum(weights), 0
-        for one, weight in zip(self.placed, weights, strict=True):
-            tell = _share_of(progress, before, weight, total)
-            before += weight
-            seen, view, at = self._see(one, threads, tell)
-            self.views.append(view)
-            if common is None:
-                self.arrays = {
-                    "visible": seen.visible,
-                    **({} if seen.clearance is None else {"clearance": seen.clearance}),
-                    **({} if seen.needed_height is None else {"needed-height": seen.needed_height}),
-                }
-            else:
-                common.add(seen, *at)
+        footing = [self._footing(one) for one in self.placed]  # before anything long begins
+        views: dict[int, View] = {}
+
+        def job(number: int) -> Callable[[Share], None]:
+            def see(share: Share) -> None:
+                one = self.placed[number]
+                seen, views[number] = self._see(one, footing[number], share)
+                if common is None:
+                    self.arrays = _arrays_of(seen)
+                else:
+                    common.add(seen, *self._corner(one), number)
+
+            return see
+
+        announce(sweep)
+        sizes = [one.window[2] * one.window[3] for one in self.placed]
+        workers = usable_threads(threads)
+        run_jobs(
+            [job(number) for number in range(len(self.placed))],
+            threads=workers,
+            at_once=min(workers, self._at_once(max(sizes))),
+            weights=sizes,
+            progress=progress,
+        )
         if common is not None:
             self.arrays = common.layers()
+        self.views = [views[number] for number in range(len(self.placed))]
         self.kept = common_window([view.window for view in self.views])
 
+    def _at_once(self, cells: int) -> int:
+        """How many observers may be under way together, by the cells of the largest window."""
+        layers = self.question.layers
+        clear = "clearance" in layers or "needed-height" in layers
+        surface = self.heights.surface is not None
+        each = 5 + 4 * surface + 4 * clear + 4 * ("needed-height" in layers)
+        return 1 + int(_MORE_WINDOWS // (each * cells))
+
+    def _corner(self, one: Placed) -> tuple[int, int]:
+        """Where the window of an observer begins in the common one."""
+        return one.window[0] - self.window[0], one.window[1] - self.window[1]
+
+    def _footing(self, one: Placed) -> tuple[float, float]:
+        """Elevation of the ground under an observer, and height of its eye above it [m]."""
+        at = (one.row - self.window[0], one.col - self.window[1])
+        foot = _ground_under(self.heights.ground, at, one)
+        return foot, _eye_height(one.observer, foot)
+
     def _see(
-        self, one: Placed, threads: int | None, progress: Progress | None
-    ) -> tuple[Visibility, View, tuple[int, int]]:
-        """Compute for one observer; also where its window begins in the common one."""
-        row0, col0 = one.window[0] - self.window[0], one.window[1] - self.window[1]
+        self, one: Placed, footing: tuple[float, float], share: Share
+    ) -> tuple[Visibility, View]:
+        """Compute for one observer."""
+        row0, col0 = self._corner(one)
         rows, cols = one.window[2:]
         part = np.s_[row0 : row0 + rows, col0 : col0 + cols]
-        ground = self._own(self.heights.ground, part)
         surface = self.heights.surface
         layers = self.question.layers
         at = (one.row - one.window[0], one.col - one.window[1])
-        foot = _ground_under(ground, at, one)
-        eye = _eye_height(one.observer, foot)
+        foot, eye = footing
         post_map = fit_post_map(self.grid.window(row0, col0, rows, cols), *at, range_m=one.range_m)
         try:
             seen = compute(
-                ground,
+                self._own(self.heights.ground, part),
                 post_map,
                 surface=None if surface is None else self._own(surface, part),
                 eye_height=eye,
@@ -125,8 +169,7 @@ class Run:
                 clearance="clearance" in layers,
                 needed_height="needed-height" in layers,
                 empty=self.room.empty,
-                threads=threads,
-                progress=progress,
+                share=share,
             )
         except InputError as error:
             msg = f"{told_of(one.observer, one.x, one.y)}: {error}"
@@ -135,20 +178,20 @@ class Run:
             for first in range(0, rows, _STRIP_ROWS):
                 strip = seen.clearance[first : first + _STRIP_ROWS]
                 np.minimum(strip, _GREATEST_CLEARANCE, out=strip)
-        trimmed = _trim(post_map, (rows, cols), one.range_m)
+        top, left, high, wide = reached_window(post_map, (rows, cols), one.range_m)
         areas = self.areas.window(row0, col0, rows, cols)
         keep = self.question.each and len(self.placed) > 1
-        inner = np.s_[trimmed[0] : trimmed[0] + trimmed[2], trimmed[1] : trimmed[1] + trimmed[3]]
+        inner = np.s_[top : top + high, left : left + wide]
         view = View(
             placed=one,
             ground=foot,
             eye_height=eye,
             post_map=post_map.moved(-row0, -col0),
-            window=(row0 + trimmed[0], col0 + trimmed[1], *trimmed[2:]),
+            window=(row0 + top, col0 + left, high, wide),
             tally=tally_up(seen.visible, post_map, areas, one.range_m).moved(-row0, -col0),
             visible=self._own(seen.visible, inner) if keep else None,
         )
-        return seen, view, (row0, col0)
+        return seen, view
 
     def _own(self, array: NDArray[Any], part: tuple[slice, slice]) -> NDArray[Any]:
         """Give a part of an array, as an array of its own unless it is the whole."""
@@ -188,13 +231,14 @@ def _needs_gathering(layers: tuple[str, ...]) -> bool:
     return bool({"count", "count-unresolved", "who"} & set(layers))
 
 
-def _share_of(
-    progress: Progress | None, before: float, own: float, total: float
-) -> Progress | None:
-    """Turn the progress of one observer into that of the run."""
-    if progress is None:
-        return None
-    return lambda done, pieces: progress(before + own * done / pieces, total)
+def _arrays_of(seen: Visibility) -> dict[str, NDArray[Any]]:
+    """Give the layers of the only observer."""
+    found = {
+        "visible": seen.visible,
+        "clearance": seen.clearance,
+        "needed-height": seen.needed_height,
+    }
+    return {name: array for name, array in found.items() if array is not None}
 
 
 def _ground_under(
@@ -222,26 +266,3 @@ def _eye_height(observer: Observer, ground: float) -> float:
         )
         raise InputError(msg)
     return height
-
-
-def _trim(post_map: PostMap, shape: tuple[int, int], range_m: float) -> Window:
-    """Find the part of a window that holds cells within range; the observer's cell stays in."""
-    rows, cols = shape
-
-    def reached(row: Any, col: Any) -> bool:
-        east, north = post_map.en(row, col)
-        return bool((np.hypot(east, north) <= range_m).any())
-
-    top, bottom, left, right = 0, rows - 1, 0, cols - 1
-    every_row, every_col = np.arange(float(rows)), np.arange(float(cols))
-    while top < bottom and not reached(float(top), every_col):
-        top += 1
-    while bottom > top and not reached(float(bottom), every_col):
-        bottom -= 1
-    while left < right and not reached(every_row, float(left)):
-        left += 1
-    while right > left and not reached(every_row, float(right)):
-        right -= 1
-    top, bottom = min(top, math.floor(post_map.row0)), max(bottom, math.ceil(post_map.row0))
-    left, right = min(left, math.floor(post_map.col0)), max(right, math.ceil(post_map.col0))
-    return top, left, bottom + 1 - top, right + 1 - left

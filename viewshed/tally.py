@@ -138,29 +138,11 @@ def tally_up(
 
     Notes
     -----
-    Along a row the distance has a least and no greatest between its ends, so what lies within a
-    distance is one run of columns, and the farthest visible cell is an end of the visible ones.
+    Along a row the distance has a least and no greatest between its ends, so the farthest visible
+    cell is an end of the visible ones.
     """
-    rows, cols = visible.shape
     edges = band_edges(range_m)
-    ends = _runs_within(post_map, (rows, cols), edges[:-1])
-    counts = np.zeros((len(edges), gather.STATES), dtype=np.int64)
-    sums = np.zeros((len(edges), gather.STATES), dtype=np.float64)
-    tips = np.full((2, rows), -1, dtype=np.int64)
-    scratch = np.zeros((*sums.shape, areas.col_factors.shape[0]))
-    for start in range(0, rows, _STRIP_ROWS):
-        part = slice(start, min(start + _STRIP_ROWS, rows))
-        gather.tally(
-            visible[part],
-            np.ascontiguousarray(ends[:, :, part]),
-            areas.row_factors[part],
-            areas.col_factors,
-            counts,
-            sums,
-            tips[0, part],
-            tips[1, part],
-            scratch,
-        )
+    counts, sums, tips = _add_up(visible, runs_within(post_map, visible.shape, edges[:-1]), areas)
     named = [dict(zip(STATE_NAMES, (float(v) for v in row), strict=True)) for row in sums]
     total = counts.sum(axis=0)
     return Tally(
@@ -174,39 +156,121 @@ def tally_up(
     )
 
 
-def _runs_within(
-    post_map: PostMap, shape: tuple[int, int], radii: list[float]
-) -> NDArray[np.int64]:
-    """First column within each radius and the one past the last, row by row; by bisection.
+def runs_within(post_map: PostMap, shape: tuple[int, int], radii: list[float]) -> NDArray[np.int64]:
+    """Find what lies within some distances of the observer, row by row.
 
-    All radii and both sides at once: an array of (radii, 2, rows) costs little more than one row.
+    Parameters
+    ----------
+    post_map : PostMap
+        True local coordinates of the cells.
+    shape : tuple of int
+        Rows and columns of the window.
+    radii : list of float
+        Distances [m].
+
+    Returns
+    -------
+    (radii, 2, rows) int64
+        First column within each distance and the one past the last; the same twice where a row has
+        none.
+
+    Notes
+    -----
+    Along a row the distance has a least and no greatest between its ends, so what lies within a
+    distance is one run of columns, whose ends are found by bisection.
     """
-    rows, last = np.arange(float(shape[0])), shape[1] - 1
+    ends = np.empty((len(radii), 2, shape[0]), dtype=np.int64)
+    gather.runs_within(
+        post_map.cp,
+        post_map.cq,
+        post_map.jacobian,
+        np.array([post_map.row0, post_map.col0, post_map.scale]),
+        shape[1],
+        np.array(radii, dtype=np.float64),
+        ends,
+        np.empty((2, post_map.degree + 1)),
+    )
+    return ends
 
-    def distance(cols: NDArray[np.int64]) -> NDArray[np.float64]:
-        return np.hypot(*post_map.en(rows, cols.astype(np.float64)))
 
-    low, high = np.zeros(shape[0], dtype=np.int64), np.full(shape[0], last)
-    while (low < high).any():  # the nearest column
-        middle = (low + high) // 2
-        here, ahead = distance(np.stack([middle, np.minimum(middle + 1, last)]))
-        falls = here > ahead
-        low = np.where(falls, np.minimum(middle + 1, high), low)
-        high = np.where(falls, high, middle)
-        high = np.maximum(low, high)
-    found = np.broadcast_to(low, (len(radii), 2, shape[0])).copy()
-    if not radii:
-        return found
-    within = np.array(radii)[:, np.newaxis, np.newaxis]
-    reached = distance(low) <= within[:, 0]
-    outside = np.empty_like(found)
-    outside[:, 0], outside[:, 1] = -1, last + 1  # surely beyond, and never asked
-    while (np.abs(outside - found) > 1).any():
-        middle = (found + outside) // 2
-        near = distance(middle) <= within
-        found, outside = np.where(near, middle, found), np.where(near, outside, middle)
-    found[:, 1] += reached
-    return found
+def reached_window(
+    post_map: PostMap, shape: tuple[int, int], range_m: float
+) -> tuple[int, int, int, int]:
+    """Find the part of a window that holds cells within range; the observer's cell stays in.
+
+    Parameters
+    ----------
+    post_map : PostMap
+        True local coordinates of the cells.
+    shape : tuple of int
+        Rows and columns of the window.
+    range_m : float
+        Range [m].
+
+    Returns
+    -------
+    tuple of int
+        First row and column, rows and columns.
+    """
+    first, past = runs_within(post_map, shape, [range_m])[0]
+    top, bottom = math.floor(post_map.row0), math.ceil(post_map.row0)
+    left, right = math.floor(post_map.col0), math.ceil(post_map.col0)
+    rows = np.flatnonzero(first < past)
+    if rows.size:
+        top, bottom = min(top, int(rows[0])), max(bottom, int(rows[-1]))
+        left, right = min(left, int(first[rows].min())), max(right, int(past[rows].max()) - 1)
+    return top, left, bottom + 1 - top, right + 1 - left
+
+
+def sums(
+    visible: NDArray[np.uint8], areas: CellAreas
+) -> tuple[dict[str, int], dict[str, float]]:
+    """Add up cells and true areas [m2] of each state, whatever their distance."""
+    counts, found, _ = _add_up(visible, np.empty((0, 2, visible.shape[0]), dtype=np.int64), areas)
+    return (
+        {name: int(n) for name, n in zip(STATE_NAMES, counts[0], strict=True)},
+        {name: float(a) for name, a in zip(STATE_NAMES, found[0], strict=True)},
+    )
+
+
+def _add_up(
+    visible: NDArray[np.uint8], ends: NDArray[np.int64], areas: CellAreas
+) -> tuple[NDArray[np.int64], NDArray[np.float64], NDArray[np.int64]]:
+    """Cells and areas [m2] by band and state, and the first and last visible column of each row."""
+    rows, bands = visible.shape[0], ends.shape[0] + 1
+    counts = np.zeros((bands, gather.STATES), dtype=np.int64)
+    found = np.zeros((bands, gather.STATES), dtype=np.float64)
+    tips = np.full((2, rows), -1, dtype=np.int64)
+    usual, more = _summed(areas.col_factors)
+    scratch = np.zeros((*found.shape, usual.size + 1))
+    for start in range(0, rows, _STRIP_ROWS):
+        part = slice(start, min(start + _STRIP_ROWS, rows))
+        gather.tally(
+            visible[part],
+            np.ascontiguousarray(ends[:, :, part]),
+            areas.row_factors[part],
+            usual,
+            more,
+            counts,
+            found,
+            tips[0, part],
+            tips[1, part],
+            scratch,
+        )
+    return counts, found, tips
+
+
+def _summed(
+    col_factors: NDArray[np.float64],
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Split the numbers of the columns into a usual one and running sums of what is more.
+
+    The numbers hardly differ, so the running sums stay small and their differences sharp.
+    """
+    usual = col_factors.mean(axis=1)
+    more = np.zeros((col_factors.shape[0], col_factors.shape[1] + 1))
+    np.cumsum(col_factors - usual[:, np.newaxis], axis=1, out=more[:, 1:])
+    return usual, more
 
 
 def _farthest(
@@ -222,30 +286,3 @@ def _farthest(
     e, n = float(east[best]), float(north[best])
     bearing = math.degrees(math.atan2(e, n)) % 360.0
     return int(both[best]), int(cols[best]), math.hypot(e, n), bearing
-
-
-def sums(
-    visible: NDArray[np.uint8], areas: CellAreas
-) -> tuple[dict[str, int], dict[str, float]]:
-    """Add up cells and true areas [m2] of each state, whatever their distance."""
-    counts = np.zeros((1, gather.STATES), dtype=np.int64)
-    found = np.zeros((1, gather.STATES), dtype=np.float64)
-    scratch = np.zeros((*found.shape, areas.col_factors.shape[0]))
-    tips = np.empty((2, visible.shape[0]), dtype=np.int64)
-    for start in range(0, visible.shape[0], _STRIP_ROWS):
-        part = slice(start, min(start + _STRIP_ROWS, visible.shape[0]))
-        gather.tally(
-            visible[part],
-            np.empty((0, 2, part.stop - part.start), dtype=np.int64),
-            areas.row_factors[part],
-            areas.col_factors,
-            counts,
-            found,
-            tips[0, part],
-            tips[1, part],
-            scratch,
-        )
-    return (
-        {name: int(n) for name, n in zip(STATE_NAMES, counts[0], strict=True)},
-        {name: float(a) for name, a in zip(STATE_NAMES, found[0], strict=True)},
-    )

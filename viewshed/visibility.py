@@ -16,6 +16,7 @@ import numpy as np
 
 from viewshed._jit import announce
 from viewshed.constants import HIDDEN, NODATA, VISIBLE
+from viewshed.crew import run_jobs
 from viewshed.errors import InputError, ViewshedError
 from viewshed.kernels import sweep as k
 from viewshed.wedges import (
@@ -35,6 +36,7 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
+    from viewshed.crew import Share
     from viewshed.grid import PostMap
     from viewshed.places import Sector
 
@@ -182,48 +184,6 @@ def usable_threads(threads: int | None) -> int:
         return max(1, os.cpu_count() or 1)
 
 
-def _run(
-    tasks: list[Callable[[], None]],
-    threads: int,
-    progress: Callable[[int, int], None] | None,
-) -> None:
-    """Run the tasks on threads; an error or an interrupt ends them after the wedges in hand."""
-    queue = iter(tasks)
-    done: list[None] = []
-    failed: list[BaseException] = []
-    stop = threading.Event()
-
-    def work() -> None:
-        try:
-            for task in queue:  # threads share the iterator: each task is taken once
-                if stop.is_set():
-                    return
-                task()
-                done.append(None)
-        except BaseException as error:
-            failed.append(error)
-            stop.set()
-
-    crew = [threading.Thread(target=work, daemon=True) for _ in range(min(threads, len(tasks)))]
-    try:
-        for worker in crew:
-            worker.start()
-        for worker in crew:
-            while worker.is_alive():
-                worker.join(0.1)
-                if progress is not None:
-                    progress(len(done), len(tasks))
-    finally:
-        stop.set()
-        for worker in crew:
-            if worker.ident is not None:
-                worker.join()
-    if failed:
-        raise failed[0]
-    if progress is not None:
-        progress(len(done), len(tasks))
-
-
 def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     elevation: NDArray[np.float32],
     post_map: PostMap,
@@ -238,7 +198,8 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     needed_height: bool = False,
     empty: Callable[..., NDArray[Any]] = np.empty,
     threads: int | None = None,
-    progress: Callable[[int, int], None] | None = None,
+    progress: Callable[[float, float], None] | None = None,
+    share: Share | None = None,
 ) -> Visibility:
     """Say what one observer sees of every cell of an elevation array.
 
@@ -269,6 +230,8 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
         Threads to use; None is one a processor. The answer is the same to the bit.
     progress : callable or None
         Called with pieces done and pieces in all.
+    share : callable, optional
+        Does the pieces, as of a job of `viewshed.crew`, instead of `threads` and `progress`.
 
     Returns
     -------
@@ -358,7 +321,16 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
             octant.coef_u,
             octant.own,
         )
-    _run([sweep_task(piece) for piece in pieces], n_threads, progress)
+    tasks = [sweep_task(piece) for piece in pieces]
+    if share is None:
+        run_jobs(
+            [lambda together: together(tasks)],
+            threads=n_threads,
+            weights=[len(tasks)],
+            progress=progress,
+        )
+    else:
+        share(tasks)
     _answer_own_place(scene, elevation, state, clear if want else None)
     asked = (clearance, needed_height)
     cleared, needed = (
