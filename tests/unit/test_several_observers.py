@@ -12,7 +12,7 @@ import rasterio
 
 import viewshed
 from tests.unit.test_api import LEFT, TOP, post, write_dem
-from viewshed import api
+from viewshed import api, looking
 from viewshed.constants import MOST_OBSERVERS
 from viewshed.placing import named
 from viewshed.recording import bands_told, observer_table, summary_csv
@@ -136,10 +136,60 @@ def test_the_same_observer_twice_changes_only_the_count(terrain, three):
     assert (twice.count[seen] == 2).all()
 
 
-def test_threads_change_nothing(terrain, three):
-    one, many = (look(terrain, three, layers=EVERY_LAYER, threads=n) for n in (1, 3))
+@pytest.mark.parametrize("room", [0.0, 1e9])
+def test_threads_change_nothing(terrain, three, room, monkeypatch):
+    """Neither with a thread an observer nor with all threads on one after the other."""
+    monkeypatch.setattr(looking, "_MORE_WINDOWS", room)
+    one, many = (look(terrain, three, layers=EVERY_LAYER, each=True, threads=n) for n in (1, 3))
     for layer in EVERY_LAYER:
-        np.testing.assert_array_equal(one.arrays[layer], many.arrays[layer])
+        assert one.arrays[layer].tobytes() == many.arrays[layer].tobytes()
+    assert summary_csv(one) == summary_csv(many)
+    for alone, beside in zip(one.views, many.views, strict=True):
+        assert alone.observer == beside.observer
+        assert alone.tally == beside.tally
+        assert alone.visible.tobytes() == beside.visible.tobytes()
+
+
+@pytest.mark.parametrize(("room", "most"), [(0.0, 1), (1e9, 3)])
+def test_windows_under_way_are_bounded_by_their_size(terrain, three, room, most, monkeypatch):
+    monkeypatch.setattr(looking, "_MORE_WINDOWS", room)
+    asked = []
+    run_jobs = looking.run_jobs
+
+    def told(jobs, **how):
+        asked.append(how["at_once"])
+        run_jobs(jobs, **how)
+
+    monkeypatch.setattr(looking, "run_jobs", told)
+    look(terrain, three, threads=3)
+    assert asked == [most]
+
+
+@pytest.mark.parametrize("threads", [1, 3])
+def test_the_first_who_cannot_see_is_named(terrain, three, threads, monkeypatch):
+    """Both are refused only when they look, and each may be the first to."""
+    compute = looking.compute
+
+    def refuse(*args, **asked):
+        if asked["target_height"] == 7.0:
+            msg = "too much is asked"
+            raise viewshed.InputError(msg)
+        return compute(*args, **asked)
+
+    monkeypatch.setattr(looking, "compute", refuse)
+    bad = [replace(one, name=f"Bad {one.name}", target_height=7.0) for one in three[1:]]
+    with pytest.raises(viewshed.InputError, match=r"'Bad Ridge' at .*: too much is asked"):
+        look(terrain, [three[0], *bad], threads=threads)
+
+
+def test_nobody_looks_before_all_have_found_their_footing(terrain, three, monkeypatch):
+    def never(*args, **asked):
+        pytest.fail("looked")
+
+    monkeypatch.setattr(looking, "compute", never)
+    void = viewshed.Observer(*post(21, 52), name="Last")
+    with pytest.raises(viewshed.InputError, match=r"'Last' at .* beside a void"):
+        look(terrain, [*three, void])
 
 
 def test_progress_runs_to_the_end(terrain, three):

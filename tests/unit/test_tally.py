@@ -5,7 +5,7 @@ import pytest
 
 from tests.helpers import affine_map, bent_map
 from viewshed.grid import CellAreas
-from viewshed.tally import STATE_NAMES, band_edges, tally_up
+from viewshed.tally import STATE_NAMES, band_edges, reached_window, runs_within, tally_up
 
 RANGE = 900.0
 
@@ -97,3 +97,52 @@ def test_a_cell_on_an_edge_belongs_to_the_nearer_band():
     visible = np.ones((1, 7), np.uint8)
     found = tally_up(visible, post_map, CellAreas(np.ones((1, 1)), np.ones((1, 7)), 0.0), 600.0)
     assert [band.areas_m2["visible"] for band in found.bands] == [2, 1, 1, 1, 1, 1]
+
+
+def distances(post_map, shape):
+    rows, cols = np.mgrid[: shape[0], : shape[1]].astype(float)
+    return np.hypot(*post_map.en(rows, cols))
+
+
+@pytest.mark.parametrize("shape", [(60, 61), (1, 50), (50, 1), (3, 3), (1, 1)])
+@pytest.mark.parametrize("place", [(0.5, 0.5), (0.2, 0.9), (0.0, 0.0), (1.4, -0.3), (-0.5, 2.0)])
+@pytest.mark.parametrize("bend", [False, True])
+def test_what_lies_within_a_distance_is_a_run_of_each_row(shape, place, bend):
+    row0, col0 = (part * (n - 1) for part, n in zip(place, shape, strict=True))
+    post_map = bent_map(row0, col0, bend=1e-5) if bend else affine_map(row0, col0)
+    away = distances(post_map, shape)
+    radii = [1.0, 120.0, float(np.median(away)), 900.0, 5000.0]
+    ends = runs_within(post_map, shape, radii)
+    cols = np.arange(shape[1])
+    for radius, (first, past) in zip(radii, ends, strict=True):
+        inside = (cols >= first[:, np.newaxis]) & (cols < past[:, np.newaxis])
+        np.testing.assert_array_equal(inside, away <= radius)
+
+
+@pytest.mark.parametrize("range_m", [5.0, 60.0, 250.0, 900.0, 5000.0])
+@pytest.mark.parametrize("place", [(20.4, 31.7), (0.0, 0.3), (39.0, 49.0)])
+@pytest.mark.parametrize("bend", [False, True])
+def test_the_window_in_range_holds_its_cells_and_the_observer(place, range_m, bend):
+    shape = (40, 50)
+    post_map = bent_map(*place, bend=1e-5) if bend else affine_map(*place)
+    inside = distances(post_map, shape) <= range_m
+    for whole in (np.floor, np.ceil):  # the posts about the observer stay in
+        inside[tuple(int(whole(at)) for at in place)] = True
+    rows, cols = np.flatnonzero(inside.any(axis=1)), np.flatnonzero(inside.any(axis=0))
+    want = (rows[0], cols[0], rows[-1] + 1 - rows[0], cols[-1] + 1 - cols[0])
+    assert reached_window(post_map, shape, range_m) == want
+
+
+def test_long_and_short_runs_of_states_add_up_the_same():
+    """Runs are summed as a whole; lengths about those that are looked at together."""
+    lengths = [1, 2, 15, 16, 17, 31, 32, 33, 34, 49, 100, 1]
+    row = np.repeat(np.resize(np.array([1, 0, 2, 255], np.uint8), len(lengths)), lengths)
+    visible = np.stack([np.roll(row, n) for n in range(40)])
+    post_map, areas = affine_map(20.0, 100.0), areas_of(visible.shape)
+    edges = band_edges(RANGE)
+    counts, sums, _ = plain_sums(visible, post_map, areas, edges)
+    found = tally_up(visible, post_map, areas, RANGE)
+    for n, name in enumerate(STATE_NAMES):
+        assert found.counts[name] == counts[:, n].sum()
+        for band, want in zip(found.bands, sums, strict=True):
+            assert band.areas_m2[name] == pytest.approx(want[n], rel=1e-12)
