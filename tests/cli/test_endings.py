@@ -2,6 +2,7 @@
 
 import logging
 import os
+import re
 import signal
 import subprocess
 import sys
@@ -13,6 +14,7 @@ import click
 import pytest
 from click.testing import CliRunner
 
+from viewshed.cli import options
 from viewshed.cli.options import Program, Progress, table, verbosity, verbosity_options
 from viewshed.errors import DataError, MemoryLimitError, OutputError, ViewshedWarning
 
@@ -120,26 +122,69 @@ def test_verbosity_counts():
     assert told == ["0", "1", "2", "-1"]
 
 
-def test_progress_writes_a_line_now_and_then_in_a_log():
+@pytest.fixture
+def clock(monkeypatch):
+    """A clock that stands still unless it is set."""
+
+    class Clock:
+        now = 0.0
+
+        def monotonic(self):
+            return self.now
+
+    found = Clock()
+    monkeypatch.setattr(options, "time", found)
+    return found
+
+
+def test_progress_writes_a_line_now_and_then_in_a_log(clock):
     def body(ctx):
         with Progress("Looking", hidden=verbosity(ctx) < 0) as progress:
             progress(1, 10)
-            progress.next_line = time.monotonic()
+            clock.now += 11
             progress(4, 10)
             progress(5, 10)
             progress(0, 0)
 
-    assert run(body).stderr == "Looking: 40 %\n"
+    assert run(body).stderr == "Looking: 40 %, about 22 s left\n"
     assert run(body, "-q").stderr == ""
 
 
-def test_progress_is_a_bar_on_a_terminal():
+@pytest.mark.parametrize(
+    ("seconds", "said"),
+    [
+        (30, "about 60 s left"),
+        (60, "about 2 minutes left"),
+        (1200, "about 40 minutes left"),
+        (3600, "about 2.0 hours left"),
+    ],
+)
+def test_time_left_goes_by_the_pace_since_the_first_word(clock, seconds, said):
+    """What was done before it, and how long that took, says nothing of the pace."""
+
+    def body(ctx):
+        clock.now = 1000.0
+        with Progress("Looking") as progress:
+            clock.now += 500.0
+            progress(10, 100)
+            clock.now += seconds
+            progress(40, 100)
+
+    lines = run(body).stderr.splitlines()
+    assert lines[-1] == f"Looking: 40 %, {said}"
+    assert lines[0] == "Looking: 10 %"  # no pace yet
+
+
+def test_progress_is_a_bar_with_the_time_left_on_a_terminal():
     pty = pytest.importorskip("pty")
     leader, follower = pty.openpty()
     code = (
+        "import time\n"
         "from viewshed.cli.options import Progress\n"
         "with Progress('Looking') as p:\n"
-        "    for i in range(5): p(i, 4)\n"
+        "    for i in range(5):\n"
+        "        p(i, 4)\n"
+        "        time.sleep(0.6)\n"
     )
     subprocess.run(
         [sys.executable, "-c", code], stderr=follower, check=True, timeout=60, env=ENVIRONMENT
@@ -148,6 +193,7 @@ def test_progress_is_a_bar_on_a_terminal():
     shown = os.read(leader, 100_000).decode()
     os.close(leader)
     assert "Looking" in shown
+    assert re.search(r"\b(25|50|75)%  00:00:0\d", shown)
     assert "100%" in shown
 
 

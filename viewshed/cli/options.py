@@ -409,6 +409,8 @@ def log_lines(ctx: click.Context) -> Iterator[None]:
 class Progress:
     """A bar on a terminal, a line now and then in a log, nothing when quiet.
 
+    Both say how much time is left, by the pace since the first time that something was told.
+
     Parameters
     ----------
     label : str
@@ -424,6 +426,7 @@ class Progress:
         self.bar: Any = None
         self.shown = 0
         self.next_line = time.monotonic() + LINE_EVERY
+        self.first: tuple[float, float] | None = None
 
     def __enter__(self) -> Progress:
         """Begin."""
@@ -449,10 +452,26 @@ class Progress:
                 self.bar = click.progressbar(length=1000, label=self.label, file=sys.stderr)
                 self.bar.__enter__()
             self.bar.update(max(0, permille - self.shown))
-        elif time.monotonic() >= self.next_line:
-            self.next_line = time.monotonic() + LINE_EVERY
-            click.echo(f"{self.label}: {permille // 10} %", err=True)
+        now, share = time.monotonic(), done / total
+        if self.first is None:
+            self.first = now, share
+        if not self.terminal and now >= self.next_line:
+            self.next_line = now + LINE_EVERY
+            left = _time_left(now - self.first[0], share - self.first[1], share)
+            click.echo(f"{self.label}: {permille // 10} %{left}", err=True)
         self.shown = max(self.shown, permille)
+
+
+def _time_left(seconds: float, gained: float, share: float) -> str:
+    """Say how long the rest takes at the pace so far; nothing where there is no pace yet."""
+    if gained <= 0.0:
+        return ""
+    left = seconds * (1.0 - share) / gained
+    if left < 90.0:
+        return f", about {left:.0f} s left"
+    minutes = left / 60.0
+    told = f"{minutes:.0f} minutes" if minutes < 90.0 else f"{minutes / 60.0:.1f} hours"
+    return f", about {told} left"
 
 
 def table(rows: Sequence[tuple[str, str]]) -> str:
