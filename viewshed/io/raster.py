@@ -29,6 +29,7 @@ from viewshed import geodesy
 from viewshed.errors import InputError, OutputError
 from viewshed.grid import Grid
 from viewshed.io._files import file_sha256
+from viewshed.io._overviews import with_overviews
 
 Colour = tuple[int, int, int]
 
@@ -156,14 +157,17 @@ def write_cog(  # noqa: PLR0913 - path, cells, place, and what the file says of 
     if array.shape != grid.shape:
         msg = f"array of shape {array.shape} does not fit the grid of shape {grid.shape}"
         raise ValueError(msg)
+    draft_name = "draft.tif"
     prefix = f".{final.name}-{os.getpid()}-{uuid.uuid4().hex[:8]}-"
-    draft, made = (final.with_name(prefix + name) for name in ("draft.tif", "cog.tif"))
+    draft, made = (final.with_name(prefix + name) for name in (draft_name, "cog.tif"))
     facts = _Facts(nodata, description, unit, tags, _horizontal_wkt(grid), colours)
     try:
         with _quiet_stderr(), gdal_env():
             _write_draft(draft, array, grid, facts)
-            _copy(draft, made, _cog_options(overview, array.dtype.kind == "f") | chosen)
-            draft.unlink()
+            block = int(chosen.get("blocksize", BLOCK))
+            source = with_overviews(draft, array, overview, nodata, block)
+            _copy(source, draft, made, _cog_options(overview, array.dtype.kind == "f") | chosen)
+            _remove(final.parent, prefix + draft_name)
             _sync(made)
             pixels = _read_back(made, array, grid, facts)
             _read_overviews(made)
@@ -288,17 +292,17 @@ def _cog_options(overview: str, is_float: bool) -> dict[str, Any]:
     }
 
 
-def _copy(draft: Path, made: Path, options: Mapping[str, Any]) -> None:
+def _copy(source: Path, draft: Path, made: Path, options: Mapping[str, Any]) -> None:
     """Make the COG in one call of the library, which Ctrl-C still ends at once.
 
-    The call runs in a thread of its own; taking its source away makes it fail soon.
+    The call runs in a thread of its own; emptying the draft behind its source makes it fail soon.
     """
     failed: list[BaseException] = []
 
     def run() -> None:
         try:
             with gdal_env():
-                rasterio.shutil.copy(draft, made, driver="COG", **options)
+                rasterio.shutil.copy(source, made, driver="COG", **options)
         except BaseException as error:
             failed.append(error)
 
