@@ -1,13 +1,23 @@
 """How much memory there is, and what is refused."""
 
+import resource
 import subprocess
 import sys
 from pathlib import Path
 
 import pytest
 
-from viewshed.errors import MemoryLimitError
-from viewshed.io._memory import available_memory, check_memory
+from viewshed.errors import InputError, MemoryLimitError
+from viewshed.io._memory import (
+    LEAST,
+    available_memory,
+    check_limit,
+    check_memory,
+    parse_size,
+    resident_memory,
+    run_bytes,
+    usable_memory,
+)
 
 GB = 10**9
 MEMINFO = "MemTotal:       24683652 kB\nMemFree:  100 kB\nMemAvailable:   4000000 kB\n"
@@ -128,3 +138,66 @@ def test_enough():
 def test_too_much(need, have, range_m, said):
     with pytest.raises(MemoryLimitError, match=said):
         check_memory(need, have, range_m)
+
+
+@pytest.mark.parametrize(
+    ("text", "size"),
+    [
+        ("700000000", 700_000_000),
+        ("800MB", 800_000_000),
+        ("2GiB", 2 << 30),
+        (" 1.5 gib ", 3 << 29),
+        ("4G", 4 << 30),
+        ("900M", 900 << 20),
+        (".5TB", 500 * GB),
+    ],
+)
+def test_sizes(text, size):
+    assert parse_size(text) == size
+
+
+@pytest.mark.parametrize("text", ["", "abc", "2 GiBs", "-1GB", "1e9", "GB", "2G 3"])
+def test_what_is_no_size(text):
+    with pytest.raises(InputError, match="give it like 2GiB or 800MB"):
+        parse_size(text)
+
+
+@pytest.mark.parametrize("memory", [0, -1, LEAST - 1, float("nan")])
+def test_less_than_the_process_itself_takes(memory):
+    with pytest.raises(InputError, match="give at least 600MB"):
+        check_limit(memory)
+
+
+def test_a_bound_may_be_any_number():
+    assert check_limit(LEAST) == LEAST
+    assert check_limit(float("inf")) > 1 << 50
+
+
+def test_resident_memory(tmp_path):
+    put(tmp_path, {"proc/self/statm": "2000 300 40 5 0 600 0\n"})
+    page = resource.getpagesize()
+    assert resident_memory(tmp_path) == (300 * page, 40 * page)
+    put(tmp_path, {"proc/self/statm": ""})
+    assert resident_memory(tmp_path) is None
+
+
+def test_a_margin_is_left(monkeypatch):
+    monkeypatch.setattr("viewshed.io._memory.available_memory", lambda: 10 * GB)
+    monkeypatch.setattr("viewshed.io._memory.resident_memory", lambda: (GB, 0))
+    assert usable_memory() == 10 * GB
+    monkeypatch.setattr("viewshed.io._memory.resident_memory", lambda: None)
+    assert usable_memory() == 9 * GB
+
+
+@pytest.mark.parametrize(
+    ("layers", "bytes_a_cell"),
+    [
+        (("visible",), 5),
+        (("visible", "clearance"), 9),
+        (("visible", "needed-height"), 9),
+        (("visible", "clearance", "needed-height"), 13),
+    ],
+)
+def test_bytes_of_a_run(layers, bytes_a_cell):
+    assert run_bytes(GB, layers) == bytes_a_cell * GB + LEAST
+    assert run_bytes(GB, layers, surface=True) == (bytes_a_cell + 4) * GB + LEAST

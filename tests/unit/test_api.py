@@ -163,9 +163,9 @@ def test_an_unknown_layer_is_refused(terrain):
 
 
 def test_a_window_that_does_not_fit_is_refused_before_it_is_read(terrain, monkeypatch):
-    monkeypatch.setattr("viewshed.io._memory.available_memory", lambda: 1000)
+    monkeypatch.setattr("viewshed.io._memory.usable_memory", lambda: 1000)
     monkeypatch.setattr(
-        type(terrain), "load", lambda *_: pytest.fail("read although it does not fit")
+        type(terrain), "load", lambda *_, **__: pytest.fail("read although it does not fit")
     )
     with pytest.raises(viewshed.MemoryLimitError, match=r"range 600 m needs .* there are"):
         viewshed.map_visibility(terrain, viewshed.Observer(*post(30, 40)), range_m=600)

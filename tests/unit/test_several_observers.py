@@ -260,7 +260,7 @@ def test_a_message_names_the_observer(terrain):
 
 
 def test_memory_is_checked_for_all_of_them(terrain, three, monkeypatch):
-    monkeypatch.setattr("viewshed.io._memory.available_memory", lambda: 1000)
+    monkeypatch.setattr("viewshed.io._memory.usable_memory", lambda: 1000)
     with pytest.raises(viewshed.MemoryLimitError, match="map fewer or nearer observers"):
         look(terrain, three)
 
