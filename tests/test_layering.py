@@ -53,7 +53,7 @@ LIBRARIES = {
     4: {"numpy", "scipy"},
     5: {
         "numpy", "affine", "rasterio", "geopandas", "pandas", "pyogrio", "shapely", "matplotlib",
-        "mpl_toolkits", "llvmlite",
+        "mpl_toolkits", "llvmlite", "PIL",
     },
     6: {"numpy", "affine"},
     7: {"click"},

@@ -10,7 +10,7 @@ from affine import Affine
 from viewshed.constants import CAUTIONS
 from viewshed.geodesy import crs_from_user, frame_of
 from viewshed.grid import Grid, PostMap
-from viewshed.io import _ground, _page, _round, picture
+from viewshed.io import _canvas, _ground, _page, _round, picture
 from viewshed.io._steps import step_colours
 from viewshed.places import Sector
 from viewshed.postmap import fit_post_map
@@ -62,10 +62,16 @@ def scene(
     return picture.Scene(**facts)
 
 
+def painted(drawn, view):
+    """Colours from 0 to 1, and what was found."""
+    rgb, found = _ground.paint(drawn, view)
+    return rgb / 255, found
+
+
 def colours_at(drawn, places, size=(400, 400)):
     """Colours of a scene at local places east, north [m]."""
     view = _ground.view_of(drawn, *size)
-    rgb, found = _ground.paint(drawn, view)
+    rgb, found = painted(drawn, view)
     pixels = [view.place(east, north) for east, north in places]
     return np.array([rgb[int(y), int(x)] for x, y in pixels]), found, view
 
@@ -85,7 +91,7 @@ def test_the_classes_tell_apart_in_colour_and_in_grey():
     visible[60:, 60:] = 255  # south-east, void
     elevation = np.where(visible == 255, np.nan, 0).astype(np.float32)
     view = _ground.view_of(scene(), 400, 400)
-    rgb, found = _ground.paint(scene(visible=visible, elevation=elevation), view)
+    rgb, found = painted(scene(visible=visible, elevation=elevation), view)
     seen, hidden = rgb[100, 300], rgb[100, 100]
     unsure, void = rgb[250:350, 60:150].reshape(-1, 3), rgb[250:350, 250:340].reshape(-1, 3)
     assert is_plum(seen)
@@ -125,7 +131,7 @@ def test_a_strip_one_cell_wide_stays_on_the_page(n, across):
     visible[(slice(None), line) if across else line] = 1
     drawn = scene(n, n, visible=visible, jacobian=[[cell, 0.0], [0.0, -cell]])
     view = _ground.view_of(drawn, 500, 500)
-    rgb, found = _ground.paint(drawn, view)
+    rgb, found = painted(drawn, view)
     purple = rgb[..., 2] - rgb[..., 1] > 0.08
     along = purple.any(axis=1 if across else 0)
     middle = slice(len(along) // 4, 3 * len(along) // 4)
@@ -137,8 +143,8 @@ def test_scattered_single_cells_do_not_look_solid():
     visible = np.zeros((4000, 4000), np.uint8)
     visible[::8, ::8] = 1
     drawn = scene(4000, 4000, visible=visible, jacobian=[[3.0, 0.0], [0.0, -3.0]])
-    rgb, _ = _ground.paint(drawn, _ground.view_of(drawn, 500, 500))
-    bare, _ = _ground.paint(scene(), _ground.view_of(scene(), 500, 500))
+    rgb, _ = painted(drawn, _ground.view_of(drawn, 500, 500))
+    bare, _ = painted(scene(), _ground.view_of(scene(), 500, 500))
     part = grey(bare[200:300, 200:300].mean((0, 1))) - grey(rgb[200:300, 200:300].mean((0, 1)))
     assert 0.01 < part < 0.25
 
@@ -149,8 +155,10 @@ def test_shares_and_heights_of_blocks(monkeypatch):
     visible = rng.choice(np.array([0, 1, 2, 255], np.uint8), (23, 31))
     elevation = rng.random((23, 31), dtype=np.float32)
     elevation[(visible == 255) & (rng.random((23, 31)) < 0.5)] = np.nan
+    drawn = scene(23, 31, visible=visible, elevation=elevation)
     for by, bx in [(1, 1), (4, 3), (1, 5), (7, 1), (40, 40)]:
-        shares, heights = _ground.blocks(_ground.Kinds(visible), elevation, by, bx)
+        whole = (0, 0, *visible.shape)
+        shares, heights = _ground.blocks(_ground.Kinds(), drawn, whole, (by, bx))
         for i in range(shares.shape[0]):
             for j in range(shares.shape[1]):
                 cut = np.s_[i * by : (i + 1) * by, j * bx : (j + 1) * bx]
@@ -217,19 +225,23 @@ def test_same_input_same_bytes_and_no_date(tmp_path):
 
 @pytest.fixture
 def boxes(monkeypatch):
-    """Boxes of all texts of the page that is drawn, in pixels from the bottom left."""
+    """Boxes of all texts of the page that is drawn, in pixels from the top left; then its size."""
     kept = []
+    write = _canvas.Canvas.text
+
+    def and_look(canvas, x, y, text, *args, **style):
+        box = write(canvas, x, y, text, *args, **style)
+        kept.append((text, *box))
+        return box
+
     compose = _page.Page.compose
 
-    def and_look(page, *args):
+    def and_measure(page, *args):
         compose(page, *args)
-        page.axes.figure.canvas.draw()
-        for text in page.axes.texts:
-            box = text.get_window_extent(page.renderer)
-            kept.append((text.get_text(), *box.extents))
         kept.append((None, 0, 0, page.width, page.height))
 
-    monkeypatch.setattr(_page.Page, "compose", and_look)
+    monkeypatch.setattr(_canvas.Canvas, "text", and_look)
+    monkeypatch.setattr(_page.Page, "compose", and_measure)
     return kept
 
 
@@ -272,15 +284,15 @@ def check_texts(boxes):
     """Every text is on the page and clear of every other."""
     *texts, (_, _, _, width, height) = boxes
     assert len(texts) > 12
-    for text, left, bottom, right, top in texts:
+    for text, left, top, right, bottom in texts:
         assert left >= 0.02 * width, text
         assert right <= 0.98 * width, text
-        assert bottom >= 0.01 * height, text
-        assert top <= 0.99 * height, text
-    for i, (text, left, bottom, right, top) in enumerate(texts):
-        for other, left2, bottom2, right2, top2 in texts[:i]:
+        assert top >= 0.01 * height, text
+        assert bottom <= 0.99 * height, text
+    for i, (text, left, top, right, bottom) in enumerate(texts):
+        for other, left2, top2, right2, bottom2 in texts[:i]:
             apart = (
-                right <= left2 + 1 or right2 <= left + 1 or top <= bottom2 + 2 or top2 <= bottom + 2
+                right <= left2 + 1 or right2 <= left + 1 or bottom <= top2 + 2 or bottom2 <= top + 2
             )
             assert apart, (text, other)
 
@@ -384,22 +396,20 @@ def test_counts_are_drawn_in_the_colours_of_their_steps():
 def test_steps_stay_apart_on_slopes():
     light = np.array([[0.3, 1.0]], np.float32)
     for steps in range(2, 7):
-        ramp, found = step_colours(steps), []
+        ramp, found = _ground.ramp_of(steps), []
         for i in range(steps):
-            shares = np.zeros((1, 2, steps + 4), np.float32)
-            shares[..., i] = 1
-            rgb = np.ones((1, 2, 3), np.float32)
-            _ground.colour(rgb, shares, light, 0, ramp)
-            found.append([grey(c) for c in rgb[0]])
+            shares = np.zeros((1, 2, steps + 4), np.uint8)
+            shares[..., i] = 255
+            rgb = _ground.colour(shares, light, ramp)
+            found.append([grey(c) for c in rgb[0] / 255])
         dark, bright = np.array(found).T
         assert (dark[:-1] > bright[1:]).all()  # each step in shade over the next in light
 
 
 def test_shares_of_steps_within_a_pixel_are_mixed():
-    rgb = np.ones((1, 1, 3), np.float32)
-    shares = np.array([[[0.5, 0.5, 0, 0, 0, 0]]], np.float32)
-    _ground.colour(rgb, shares, np.full((1, 1), 0.8, np.float32), 0, step_colours(2))
-    np.testing.assert_allclose(rgb[0, 0], step_colours(2).mean(axis=0), atol=0.02)
+    shares = np.array([[[128, 128, 0, 0, 0, 0]]], np.uint8)
+    rgb = _ground.colour(shares, np.full((1, 1), 0.8, np.float32), _ground.ramp_of(2))
+    np.testing.assert_allclose(rgb[0, 0] / 255, step_colours(2).mean(axis=0), atol=0.02)
 
 
 def test_shares_of_blocks_with_a_count():
@@ -408,8 +418,8 @@ def test_shares_of_blocks_with_a_count():
     visible = np.where(count > 0, 1, rng.choice([0, 2, 255], count.shape)).astype(np.uint8)
     count[visible == 255] = 65535
     steps = [(1, 1), (2, 3), (4, 5), (6, 8)]
-    kinds = _ground.Kinds(visible, count, steps)
-    shares, _ = _ground.blocks(kinds, np.zeros(count.shape, np.float32), 23, 31)
+    drawn = scene(23, 31, visible=visible, count=count)
+    shares, _ = _ground.blocks(_ground.Kinds(steps), drawn, (0, 0, 23, 31), (23, 31))
     counts = [((count >= a) & (count <= b)).sum() for a, b in steps]
     counts += [(visible == 2).sum(), (visible == 0).sum(), 0, (visible == 255).sum()]
     assert shares[0, 0].tolist() == [int(np.ceil(255 * c / count.size)) for c in counts]
@@ -477,7 +487,7 @@ def test_names_without_room_are_left_out_and_the_key_says_so(tmp_path, boxes):
 
 def test_the_first_row_of_the_table_stands_out(tmp_path, boxes):
     picture.draw_map(tmp_path / "page.png", scene(), WORDS, dpi=100)
-    height = {text: top - bottom for text, _, bottom, _, top in boxes}
+    height = {text: bottom - top for text, _, top, _, bottom in boxes}
     assert height["12.3 km²"] > 1.15 * height["45.6 km²"]
 
 

@@ -5,7 +5,6 @@ from __future__ import annotations
 import os
 import uuid
 from dataclasses import dataclass
-from io import BytesIO
 from math import floor, log10
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -15,8 +14,9 @@ from numpy.typing import NDArray
 
 from viewshed import extent
 from viewshed.errors import OutputError
-from viewshed.io._ground import _hillshade
-from viewshed.io._page import Page
+from viewshed.io._ground import light_on
+from viewshed.io._png import png_of
+from viewshed.io._sheet import Sheet
 from viewshed.io.checkup import Checkup, crs_words, extent_words, told_share
 
 if TYPE_CHECKING:
@@ -43,7 +43,7 @@ CLIPPED = 0.5
 #: Least lightness of ground that lies away from the light.
 DEEPEST_SHADE = 0.62
 
-Rgb = NDArray[np.float32]
+Rgb = NDArray[np.uint8]
 
 
 @dataclass(frozen=True)
@@ -145,21 +145,11 @@ def check_target(path: str | os.PathLike[str], *, overwrite: bool) -> None:
 
 
 def _png(checkup: Checkup) -> bytes:
-    import matplotlib
-    from matplotlib.backends.backend_agg import FigureCanvasAgg
-    from matplotlib.figure import Figure
-
     plane = _plane(checkup)
     width = max(LEAST_WIDTH, MARGIN + plane.width + SIDE)
-    height = HEAD + plane.height + FOOT
-    with matplotlib.rc_context():
-        matplotlib.rcdefaults()
-        figure = Figure(figsize=(width / DPI, height / DPI), dpi=DPI, facecolor="white")
-        renderer: Any = FigureCanvasAgg(figure).get_renderer()  # type: ignore[no-untyped-call]
-        _Sheet(figure, renderer, width, height).draw(checkup, plane)
-        out = BytesIO()
-        figure.savefig(out, format="png", dpi=DPI, metadata={"Software": None})
-    return out.getvalue()
+    sheet = _Sheet(DPI, (width, HEAD + plane.height + FOOT))
+    sheet.draw(checkup, plane)
+    return png_of(sheet.canvas.pixels, DPI)
 
 
 # --- the map ------------------------------------------------------------------------------------
@@ -198,7 +188,7 @@ def _paint(checkup: Checkup, plane: Plane, span: tuple[float, float]) -> Rgb:
     down, right = np.indices(void.shape)
     rgb[_inner(void & np.isnan(z)) & ((down + right) % 12 < 6)] = STRIPE
     rgb[~inside & ~void] = 1.0
-    return np.asarray(rgb, np.float32)
+    return _pixels(rgb)
 
 
 def _add_specks(
@@ -223,8 +213,12 @@ def _light(checkup: Checkup, heights: NDArray[np.float32]) -> NDArray[np.float32
     unit_x, unit_y = extent.unit_lengths(grid, (left + right) / 2.0, (bottom + top) / 2.0)
     steps = np.array([[t.a * unit_x, t.b * unit_x], [t.d * unit_y, t.e * unit_y]])
     steps *= np.array([found.bx, found.by])
-    light = _hillshade(heights, steps)
+    light = light_on(heights, steps)
     return np.asarray(DEEPEST_SHADE + (1.02 - DEEPEST_SHADE) * np.clip(light / 0.85, 0, 1), "f4")
+
+
+def _pixels(rgb: FloatArray) -> Rgb:
+    return (np.clip(rgb, 0, 1) * 255 + 0.5).astype(np.uint8)
 
 
 def _tint(heights: Any, span: tuple[float, float]) -> FloatArray:
@@ -255,13 +249,8 @@ def _span(checkup: Checkup) -> tuple[float, float]:
 # --- the sheet ----------------------------------------------------------------------------------
 
 
-class _Sheet(Page):
+class _Sheet(Sheet):
     """The sheet in pixels, right and down from its top left corner."""
-
-    def __init__(self, figure: Any, renderer: Any, width: int, height: int) -> None:
-        super().__init__(figure, renderer, DPI)
-        self.width, self.height = width, height
-        self.axes.set(xlim=(0, width), ylim=(height, 0))
 
     def draw(self, checkup: Checkup, plane: Plane) -> None:
         """Put everything in its place."""
@@ -269,10 +258,11 @@ class _Sheet(Page):
         self._line(MARGIN, 34, _title(checkup), 15, bold=True)
         self._line(MARGIN, 58, crs_words(checkup.terrain), 9, color=SOFT)
         self.image(_paint(checkup, plane, span), MARGIN, top)
-        self.box(MARGIN, top, plane.width, plane.height, fc="none", ec=INK, lw=0.8, zorder=3)
+        self.box(MARGIN, top, plane.width, plane.height, edge=INK, line=0.8, layer=3)
         self._key(checkup, MARGIN + plane.width + 26, top, span, plane)
         self._bar(plane, top + plane.height + 34)
         self._line(MARGIN, self.height - 16, extent_words(checkup.terrain), 9)
+        self.canvas.finish()
 
     def _line(self, x: float, y: float, text: str, size: float, **style: Any) -> None:
         """Write a line, its middle left out if it would leave the sheet."""
@@ -288,23 +278,23 @@ class _Sheet(Page):
             tall = max(40, min(260, plane.height - 70))
             ramp = np.linspace(span[1], span[0], tall)[:, None]
             self.write(x, y + 10, "Height [m]", 9, color=SOFT)
-            self.image(np.asarray(_tint(ramp, span), np.float32).repeat(22, axis=1), x, y + 20)
-            self.box(x, y + 20, 22, tall, fc="none", ec=SOFT, lw=0.6, zorder=3)
+            self.image(_pixels(_tint(ramp, span)).repeat(22, axis=1), x, y + 20)
+            self.box(x, y + 20, 22, tall, edge=SOFT, line=0.6, layer=3)
             digits = 0 if span[1] - span[0] >= 10 else 2
             found = checkup.found
             ends = {0.0: found.high > span[1], 0.5: False, 1.0: found.low < span[0]}
             for share, is_clipped in ends.items():
                 text = f"{span[1] + share * (span[0] - span[1]):.{digits}f}"
                 text += (" and more" if share == 0.0 else " and less") if is_clipped else ""
-                self.write(x + 30, y + 20 + share * tall, text, 9, va="center")
+                self.write(x + 30, y + 20 + share * tall, text, 9, middle=True)
             y += tall + 40
         if checkup.voids:
             void = np.ones((14, 22), bool)
-            rgb = np.empty((*void.shape, 3), np.float32)
+            rgb = np.empty((*void.shape, 3))
             rgb[:] = VOID
             down, right = np.indices(void.shape)
             rgb[_inner(np.pad(void, 2))[2:-2, 2:-2] & ((down + right) % 12 < 6)] = STRIPE
-            self.image(rgb, x, y)
+            self.image(_pixels(rgb), x, y)
             self.write(x + 30, y + 11, "void", 9)
             self._line(x, y + 30, told_share(checkup.voids, checkup.cells), 9, color=SOFT)
 
@@ -314,7 +304,7 @@ class _Sheet(Page):
         whole = length / plane.pixel_m
         for i in range(4):
             fill = INK if i % 2 == 0 else "white"
-            self.box(MARGIN + i * whole / 4, y - 6, whole / 4, 6, fc=fill, ec=INK, lw=0.6, zorder=3)
+            self.box(MARGIN + i * whole / 4, y - 6, whole / 4, 6, fill=fill, edge=INK, line=0.6)
         told = f"{length / 1000:g} km" if length >= 1000 else f"{length:g} m"
         self.write(MARGIN + whole + 8, y, f"{told} (true at the centre)", 9)
 

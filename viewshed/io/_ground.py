@@ -6,7 +6,8 @@ found through the post map, summed in blocks, shaded and coloured.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Iterable, Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -15,12 +16,14 @@ from numpy.typing import NDArray
 
 from viewshed.constants import HIDDEN, UNRESOLVED, VISIBLE
 from viewshed.io._steps import Step, step_colours
+from viewshed.kernels import page
+from viewshed.visibility import usable_threads
 
 if TYPE_CHECKING:
     from viewshed.io.picture import Scene
 
 Floats = NDArray[np.floating[Any]]
-Rgb = NDArray[np.float32]
+Rgb = NDArray[np.uint8]
 
 #: Side of one pixel of the map in pixels of the finer raster that is averaged into it.
 SUPERSAMPLE = 2
@@ -30,6 +33,8 @@ LATTICE = 65
 STRIP_CELLS = 4_000_000
 #: Rows of the page that are painted at a time.
 BAND = 64
+#: Slopes that are looked at to choose how much the relief is exaggerated, about.
+SLOPES = 200_000
 #: Least tint of a pixel that holds any cell of a class, however few.
 LEAST_TINT = 0.25
 #: Lights of the hillshade: azimuth [degrees], weight; all 42 degrees high.
@@ -43,8 +48,10 @@ LIGHT_ON_FLAT = 0.8
 PLUM = (0.42, 0.16, 0.53)
 OCHRE = (0.98, 0.79, 0.36)
 STRIPE = (0.47, 0.28, 0.02)
-PAPER = (1.0, 1.0, 1.0)
 DOT = (0.55, 0.55, 0.55)
+INKS = np.array([PLUM, OCHRE, STRIPE, DOT])
+#: Classes that the painting tells of, in its order.
+CLASSES = ("unresolved", "void", "outside")
 
 
 @dataclass(frozen=True)
@@ -96,50 +103,51 @@ def paint(scene: Scene, view: View) -> tuple[Rgb, frozenset[str]]:
 
     Returns
     -------
-    rgb : numpy.ndarray, shape (height, width, 3)
-        Colours 0 to 1.
+    rgb : numpy.ndarray, shape (height, width, 3), uint8
+        Colours.
     found : frozenset of str
         Which of "unresolved", "void", "outside" and "mixed" (several cells share a pixel) occur.
     """
-    lat_row, lat_col, right, down = _index_lattice(scene, view)
-    window = _covered(scene, lat_row, lat_col)
+    lattice = _index_lattice(scene, view)
+    window = _covered(scene, *lattice)
+    rgb = np.full((view.height, view.width, 3), 255, np.uint8)
     if window is None:
-        return np.ones((view.height, view.width, 3), np.float32), frozenset()
-    top, left, bottom, end = window
+        return rgb, frozenset()
     cell = np.hypot(*scene.post_map.jacobian)[::-1]
     fine = view.pixel / SUPERSAMPLE
     by, bx = (max(1, int(np.ceil(fine / size - 1e-6))) for size in cell)
-    cut = np.s_[top:bottom, left:end]
-    count = None if scene.count is None else scene.count[cut]
-    kinds = Kinds(scene.visible[cut], count, scene.steps)
-    counts, height = blocks(kinds, scene.elevation[cut], by, bx)
-    steps = scene.post_map.jacobian * np.array([bx, by])
-    light = _hillshade(height, steps)
-    mixed = by * bx > 1 or fine > 0.75 * cell.min()
-    rgb = np.empty((view.height, view.width, 3), np.float32)
-    found: set[str] = set()
-    for first in range(0, view.height, BAND):
-        here = down[first * SUPERSAMPLE : (first + BAND) * SUPERSAMPLE]
-        row = (_spread(lat_row, right, here) - top + 0.5) / by
-        col = (_spread(lat_col, right, here) - left + 0.5) / bx
-        shares = _average(_nearest(counts, row, col)) / np.float32(255)
-        shade = _average(_bilinear(light, row - 0.5, col - 0.5)[..., None])[..., 0]
-        found |= colour(rgb[first : first + BAND], shares, shade, first, kinds.ramp)
-    if mixed:
+    kinds = Kinds(scene.steps)
+    shares, height = blocks(kinds, scene, window, (by, bx))
+    light = light_on(height, scene.post_map.jacobian * np.array([bx, by]))
+    place = np.array([window[0], window[1], by, bx, SUPERSAMPLE], np.int64)
+    marks = np.zeros(len(CLASSES), np.uint8)
+
+    def band(first: int) -> None:
+        ends = first, min(first + BAND, view.height)
+        _paint(rgb, (shares, light), (lattice, place), ends, kinds.ramp, marks)
+
+    _each(band, range(0, view.height, BAND))
+    found = {name for name, mark in zip(CLASSES, marks, strict=True) if mark}
+    if by * bx > 1 or fine > 0.75 * cell.min():
         found.add("mixed")
     return rgb, frozenset(found)
 
 
-def _index_lattice(scene: Scene, view: View) -> tuple[Floats, Floats, Floats, Floats]:
-    """Row and column of a coarse lattice of page places, and where the fine pixels lie in it."""
+def _each(
+    work: Callable[[int], None], pieces: Iterable[int], rest: Callable[[], None] | None = None
+) -> None:
+    """Do pieces of work on all processors; rest after each."""
+    with ThreadPoolExecutor(usable_threads(None)) as crew:
+        for _ in crew.map(work, pieces):
+            if rest is not None:
+                rest()
+
+
+def _index_lattice(scene: Scene, view: View) -> Floats:
+    """Row and column of a coarse lattice of page places."""
     right = np.linspace(0.0, view.width, LATTICE)
     down = np.linspace(0.0, view.height, LATTICE)
-    row, col = index_of(scene, *plane(view, right[None, :], down[:, None]))
-    across, along = (
-        (np.arange(n * SUPERSAMPLE) + 0.5) / SUPERSAMPLE / n * (LATTICE - 1)
-        for n in (view.width, view.height)
-    )
-    return row, col, across, along
+    return np.stack(index_of(scene, *plane(view, right[None, :], down[:, None])))
 
 
 def plane(view: View, right: Floats, down: Floats) -> tuple[Floats, Floats]:
@@ -190,10 +198,6 @@ class Kinds:
 
     Parameters
     ----------
-    visible : numpy.ndarray, shape (rows, cols)
-        The visible layer.
-    count : numpy.ndarray, shape (rows, cols), optional
-        How many observers see each cell.
     steps : sequence of (first, last)
         Steps of the count.
 
@@ -201,190 +205,133 @@ class Kinds:
     ----------
     number : int
         How many kinds there are.
-    ramp : numpy.ndarray or None
-        Colours of the steps; None for visible as one.
+    table : numpy.ndarray, shape (256 + 65536,), uint8
+        Kind of each state, then of each count of a visible cell; `number` where there is no
+        answer.
+    ramp : numpy.ndarray, shape (steps, 3)
+        Colours of the steps; none for visible as one.
     """
 
-    def __init__(
-        self,
-        visible: NDArray[np.uint8],
-        count: NDArray[np.uint16] | None = None,
-        steps: Sequence[Step] = (),
-    ) -> None:
-        self.visible, self.count = visible, count
-        self.ramp = step_colours(len(steps)) if steps else None
+    def __init__(self, steps: Sequence[Step] = ()) -> None:
+        self.ramp = ramp_of(len(steps))
         self.number = max(1, len(steps)) + 2
-        self._of_state = np.full(256, self.number, np.uint8)
-        self._of_state[[VISIBLE, UNRESOLVED, HIDDEN]] = [0, self.number - 2, self.number - 1]
-        self._of_count = np.zeros(1 << 16, np.uint8)
+        self.table = np.full(256 + (1 << 16), self.number, np.uint8)
+        self.table[[VISIBLE, UNRESOLVED, HIDDEN]] = [0, self.number - 2, self.number - 1]
+        self.table[256:] = 0
         for i, (first, last) in enumerate(steps):
-            self._of_count[first : last + 1] = i
-
-    def rows(self, part: slice) -> NDArray[np.uint8]:
-        """Kinds of the cells of some rows; `number` where there is no answer."""
-        kind = self._of_state[self.visible[part]]
-        if self.count is not None:
-            seen = kind == 0
-            kind[seen] = self._of_count[self.count[part][seen]]
-        return kind
+            self.table[256 + first : 256 + last + 1] = i
 
 
-#: Three kinds are counted at once, 21 bits each in one whole number.
-_SHIFTS = (0, 21, 42)
+def ramp_of(steps: int) -> Floats:
+    """Give the colours of steps for `colour`; none where there are none."""
+    return step_colours(steps).astype(np.float64) if steps else np.zeros((0, 3))
 
 
 def blocks(
-    kinds: Kinds, elevation: NDArray[np.float32], by: int, bx: int
+    kinds: Kinds, scene: Scene, window: tuple[int, int, int, int], size: tuple[int, int]
 ) -> tuple[NDArray[np.uint8], NDArray[np.float32]]:
-    """Shares (of each kind, void, outside; 255 is all) and mean height of blocks."""
-    rows, cols = elevation.shape
+    """Shares (of each kind, void, outside; 255 is all) and mean height of blocks of cells.
+
+    Parameters
+    ----------
+    kinds : Kinds
+        What is told apart.
+    scene : Scene
+        Gives the arrays, which are read strip by strip and never copied as a whole.
+    window : tuple of int
+        First row, first column and their ends.
+    size : tuple of int
+        Rows and columns of a block.
+    """
+    top, left, bottom, end = window
+    rows, cols, (by, bx) = bottom - top, end - left, size
     out_rows, out_cols = -(-rows // by), -(-cols // bx)
-    shares = np.zeros((out_rows, out_cols, kinds.number + 2), np.uint8)
-    heights = np.full((out_rows, out_cols), np.nan, np.float32)
+    shares = np.empty((out_rows, out_cols, kinds.number + 2), np.uint8)
+    heights = np.empty((out_rows, out_cols), np.float32)
+    place = np.array([left, end, by, bx], np.int64)
     strip = max(1, STRIP_CELLS // (cols * by))
-    lengths = [np.minimum(b, n - np.arange(0, n, b)) for n, b in ((rows, by), (cols, bx))]
-    packed = [np.zeros(256, np.uint64) for _ in range(0, kinds.number, 3)]
-    for i in range(kinds.number):
-        packed[i // 3][i] = 1 << _SHIFTS[i % 3]
-    for first in range(0, out_rows, strip):
-        part = slice(first * by, min(rows, (first + strip) * by))
+
+    def work(first: int) -> None:
         here = slice(first, min(out_rows, first + strip))
-        cells = np.outer(lengths[0][here], lengths[1])
-        kind = kinds.rows(part)
-        sums = [_block_sums(table[kind], by, bx) for table in packed]
-        counted = [(sums[i // 3] >> _SHIFTS[i % 3]) & 0x1FFFFF for i in range(kinds.number)]
-        ground = elevation[part]
-        known = np.isfinite(ground)
-        some = cells
-        if not known.all():
-            some = _block_sums(known.astype(np.uint32), by, bx)
-            ground = np.where(known, ground, np.float32(0))
-        counted += [cells - some, np.maximum(some - sum(c.astype(np.int64) for c in counted), 0)]
-        for layer, number in enumerate(counted):
-            shares[here, :, layer] = -(-255 * number.astype(np.int64) // cells)
-        total = _block_sums(ground, by, bx)
-        heights[here] = np.where(some > 0, total / np.maximum(some, 1), np.nan)
+        part = slice(top + here.start * by, min(top + here.stop * by, bottom))
+        tallies = np.zeros((here.stop - first, out_cols, kinds.number + 2), np.int32)
+        page.sum_blocks(
+            *(_plain(scene.visible[part]), _plain(_counted(scene, part))),
+            *(_plain(scene.elevation[part]), kinds.table, place),
+            *(tallies, np.zeros(tallies.shape[:2]), shares[here], heights[here]),
+        )
+
+    _each(work, range(0, out_rows, strip), scene.rest)
     return shares, heights
 
 
-def _block_sums(array: NDArray[Any], by: int, bx: int) -> NDArray[Any]:
-    """Sum the blocks of an array; those at its ends can be smaller."""
-    if by > 1:
-        array = np.add.reduceat(array, np.arange(0, array.shape[0], by), axis=0)
-    return np.add.reduceat(array, np.arange(0, array.shape[1], bx), axis=1) if bx > 1 else array
+def _counted(scene: Scene, part: slice) -> NDArray[np.uint16]:
+    return np.empty((0, 0), np.uint16) if scene.count is None else scene.count[part]
 
 
-def _hillshade(height: NDArray[np.float32], jacobian: Floats) -> NDArray[np.float32]:
+def _plain(array: NDArray[Any]) -> NDArray[Any]:
+    """Give an array as the kernels are compiled for; it is copied where it lies otherwise."""
+    return np.require(array, requirements=["C", "W", "E"])
+
+
+def light_on(height: NDArray[np.float32], jacobian: Floats) -> NDArray[np.float32]:
     """Light on the ground, 0 to 1; the relief is exaggerated so that any terrain reads."""
-    level = np.float32(np.sin(np.radians(LIGHT_HEIGHT)))
-    light = np.full(height.shape, level, np.float32)
-    down, right = (
-        np.gradient(height, axis=axis) if height.shape[axis] > 1 else np.zeros_like(height)
-        for axis in (0, 1)
-    )
-    inverse = np.linalg.inv(jacobian).astype(np.float32)
-    east = right * inverse[0, 0] + down * inverse[1, 0]
-    north = right * inverse[0, 1] + down * inverse[1, 1]
-    known = np.isfinite(east) & np.isfinite(north)
-    stride = max(1, int(known.size / 400_000))
-    slopes = np.hypot(east, north)[known][::stride]
+    sun = np.cos(np.radians(LIGHT_HEIGHT))
+    level = float(np.sin(np.radians(LIGHT_HEIGHT)))
+    azimuth, weight = np.array(LIGHTS).T
+    toward = np.sin(np.radians(azimuth)), np.cos(np.radians(azimuth))
+    suns = np.stack([sun * toward[0], sun * toward[1], weight], axis=1)
+    inverse = np.linalg.inv(jacobian)
+    stride = max(1, height.size // SLOPES)
+    slopes = np.empty(-(-height.size // stride))
+    page.steepness(height, inverse, stride, slopes)
+    slopes = slopes[np.isfinite(slopes)]
     steep = float(np.percentile(slopes, 92)) if slopes.size else 0.0
-    factor = np.float32(np.clip(0.75 / max(steep, 1e-9), 0.2, 8.0))
-    east, north = east[known] * factor, north[known] * factor
-    norm = np.sqrt(1 + east * east + north * north)
-    total = np.zeros_like(norm)
-    for azimuth, weight in LIGHTS:
-        sun = np.float32(np.cos(np.radians(LIGHT_HEIGHT)))
-        toward = (np.float32(np.sin(np.radians(azimuth))), np.float32(np.cos(np.radians(azimuth))))
-        dot = (level - sun * (east * toward[0] + north * toward[1])) / norm
-        total += np.float32(weight) * np.maximum(dot, 0)
-    light[known] = total
-    even: NDArray[np.float32] = np.minimum(light * np.float32(LIGHT_ON_FLAT / level), np.float32(1))
-    return even
+    factor = float(np.clip(0.75 / max(steep, 1e-9), 0.2, 8.0))
+    light = np.empty(height.shape, np.float32)
+
+    def band(first: int) -> None:
+        ends = first, min(first + BAND, height.shape[0])
+        page.shade(height, inverse, factor, level, suns, LIGHT_ON_FLAT / level, *ends, light)
+
+    _each(band, range(0, height.shape[0], BAND))
+    return light
 
 
-def _spread(lattice: Floats, right: Floats, down: Floats) -> Floats:
-    """Values between the nodes of a lattice, linear along both axes."""
-    i = np.minimum(down.astype(np.intp), LATTICE - 2)
-    j = np.minimum(right.astype(np.intp), LATTICE - 2)
-    v, u = (down - i)[:, None], (right - j)[None, :]
-    rows = lattice[i] * (1 - v) + lattice[i + 1] * v
-    values: Floats = rows[:, j] * (1 - u) + rows[:, j + 1] * u
-    return values
-
-
-def _nearest(values: NDArray[np.uint8], row: Floats, col: Floats) -> NDArray[np.uint8]:
-    """Value of the block that holds each place; zero off the grid."""
-    inside = (row >= 0) & (col >= 0) & (row < values.shape[0]) & (col < values.shape[1])
-    i = np.where(inside, row, 0).astype(np.int32)
-    j = np.where(inside, col, 0).astype(np.int32)
-    return np.where(inside[..., None], values[i, j], np.uint8(0))
-
-
-def _bilinear(values: NDArray[np.float32], row: Floats, col: Floats) -> NDArray[np.float32]:
-    """Value between four blocks, held at the border."""
-    last_row, last_col = values.shape[0] - 1, values.shape[1] - 1
-    row, col = np.clip(row, 0, last_row), np.clip(col, 0, last_col)
-    i = np.minimum(row.astype(np.int32), max(last_row - 1, 0))
-    j = np.minimum(col.astype(np.int32), max(last_col - 1, 0))
-    v, u = (row - i).astype(np.float32), (col - j).astype(np.float32)
-    below, beside = min(1, last_row), min(1, last_col)
-    upper = values[i, j] * (1 - u) + values[i, j + beside] * u
-    lower = values[i + below, j] * (1 - u) + values[i + below, j + beside] * u
-    value: NDArray[np.float32] = upper * (1 - v) + lower * v
-    return value
-
-
-def _average(fine: NDArray[Any]) -> NDArray[np.float32]:
-    """Mean of each SUPERSAMPLE by SUPERSAMPLE square of fine pixels."""
-    s = SUPERSAMPLE
-    total = np.zeros((fine.shape[0] // s, fine.shape[1] // s, fine.shape[2]), np.float32)
-    for i in range(s):
-        for j in range(s):
-            total += fine[i::s, j::s]
-    mean: NDArray[np.float32] = np.divide(total, s * s, dtype=np.float32)
-    return mean
-
-
-def tint(share: Floats) -> Floats:
-    """Strength of a class's colour where it holds a share of a pixel (see `draw_map`)."""
-    return np.where(share > 0, np.maximum(np.sqrt(share), np.float32(LEAST_TINT)), np.float32(0))
-
-
-def colour(
-    rgb: Rgb, shares: Rgb, shade: NDArray[np.float32], first_row: int, ramp: Rgb | None = None
-) -> set[str]:
-    """Fill a band of the page; tell which classes occur in it.
+def colour(shares: NDArray[np.uint8], light: NDArray[np.float32], ramp: Floats) -> Rgb:
+    """Colour pixels by the shares of their classes and the light on them.
 
     With a ramp, the colours of steps, the light on the ground is held back so that it cannot turn
     one step into the next.
+
+    Parameters
+    ----------
+    shares : numpy.ndarray, shape (height, width, kinds + 2)
+        Shares of the steps (or of visible as one), unresolved, hidden, void and outside; 255 is
+        all.
+    light : numpy.ndarray, shape (height, width)
+        Light on the ground, 0 to 1.
+    ramp : numpy.ndarray, shape (steps, 3)
+        Colours of the steps; none for visible as one.
     """
-    steps = shares[..., :-4]
-    unsure, hidden, void, outside = np.moveaxis(shares[..., -4:], -1, 0)
-    seen = steps.sum(axis=-1)
-    judged = seen + unsure + hidden
-    any_judged = np.maximum(judged, np.float32(1e-6))
-    y, x = np.ogrid[first_row : first_row + rgb.shape[0], : rgb.shape[1]]
-    stripe, dot = (x + y) % 9 < 3, (x % 8 < 2) & ((y + 4 * (x // 8 % 2)) % 8 < 2)
-    light = shade[..., None]
+    height, width = light.shape
+    rgb = np.empty((height, width, 3), np.uint8)
+    corners = np.stack(np.meshgrid([0.0, height], [0.0, width], indexing="ij")) - 0.5
+    place = np.array([0, 0, 1, 1, 1], np.int64)
+    marks = np.zeros(len(CLASSES), np.uint8)
+    _paint(rgb, (shares, light), (corners, place), (0, height), ramp, marks)
+    return rgb
 
-    def lay(mask: Any, colour: Any) -> None:
-        strength = np.asarray(mask, np.float32)[..., None]
-        rgb[:] = rgb * (1 - strength) + np.asarray(colour, np.float32) * strength
 
-    if ramp is None:
-        bare, ink = 0.50 + 0.47 * light, np.array(PLUM, np.float32) * (0.5 + 0.75 * light)
-    else:
-        mix = steps @ ramp / np.maximum(seen, np.float32(1e-6))[..., None]
-        bare, ink = 0.76 + 0.20 * light, mix * (0.88 + 0.15 * light)
-    rgb[:] = PAPER
-    lay(outside > 0, (0.93 if ramp is None else 0.95) + 0.05 * light)
-    lay((void > 0.5) & (judged < 0.5) & dot, DOT)
-    lay(judged > 0, bare * np.array([1.0, 0.995, 0.975], np.float32))
-    unsure_tint = tint(unsure / any_judged)
-    lay(unsure_tint, np.array(OCHRE, np.float32) * (0.82 + 0.2 * light).clip(0, 1))
-    lay(unsure_tint * stripe, STRIPE)
-    lay(tint(seen / any_judged), ink)
-    np.clip(rgb, 0, 1, out=rgb)
-    kinds = {"unresolved": unsure, "void": void, "outside": outside}
-    return {name for name, share in kinds.items() if bool((share > 0).any())}
+def _paint(
+    rgb: Rgb,
+    ground: tuple[NDArray[np.uint8], NDArray[np.float32]],
+    where: tuple[Floats, NDArray[np.int64]],
+    rows: tuple[int, int],
+    ramp: Floats,
+    marks: NDArray[np.uint8],
+) -> None:
+    """Colour some rows; shares and light, lattice and place are as in `page.paint`."""
+    nodes = np.empty((2, where[0].shape[2]))
+    means = np.empty((rgb.shape[1], ground[0].shape[2] + 1))
+    page.paint(*ground, *where, *rows, INKS, ramp, LEAST_TINT, nodes, means, marks, rgb)

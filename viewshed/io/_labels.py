@@ -2,7 +2,7 @@
 
 from collections.abc import Iterator
 from itertools import chain, islice, product
-from math import cos, hypot, pi, sin
+from math import cos, hypot, inf, pi, sin
 from typing import NamedTuple
 
 Box = tuple[float, float, float, float]
@@ -56,11 +56,13 @@ class Room:
 
     def is_free(self, x: float, y: float, dx: float, dy: float) -> bool:
         """Tell whether such a box lies inside the frame and clear of all that is taken."""
-        return (
-            self.holds(x, y, dx, dy)
-            and all(abs(x - u) >= dx + du or abs(y - v) >= dy + dv for u, v, du, dv in self.taken)
-            and not any(_meets(line, (x, y, dx, dy)) for line in self.lines)
-        )
+        if not self.holds(x, y, dx, dy):
+            return False
+        for u, v, du, dv in self.taken:
+            if abs(x - u) < dx + du and abs(y - v) < dy + dv:
+                return False
+        box = x, y, dx, dy
+        return not any(_meets(line, box) for line in self.lines)
 
     def take(self, x: float, y: float, dx: float, dy: float) -> None:
         """Keep such a box for something."""
@@ -103,18 +105,25 @@ def place_names(
         Those for which there is room.
     """
     best: tuple[tuple[int, float], list[Label], Room] | None = None
+    enough = inf
+    shown = sum(dx > 0 and room.holds(*at, 0, 0) for at, (dx, _) in zip(places, sizes, strict=True))
     ways = [True, False] if len(places) <= _FEW else [True]
     for beside, order in product(ways, islice(_orders(places), 13 if len(places) <= 30 else 3)):
         trial = room.copy()
-        found = _place(trial, order, places, sizes, (radius, point, beside))
-        away = sum(hypot(v[2] - v[0], v[3] - v[1]) for v in trial.lines)
-        score = (len(found), -away)
+        found = _place(trial, order, places, sizes, (radius, point, beside), enough)
+        score = (len(found), -_length(trial.lines))
         if best is None or score > best[0]:
             best = score, found, trial
+        if len(found) == shown:
+            enough = min(enough, -score[1])
     if best is None:
         return []
     room.taken, room.lines = best[2].taken, best[2].lines
     return best[1]
+
+
+def _length(lines: list[Line]) -> float:
+    return sum(hypot(x2 - x1, y2 - y1) for x1, y1, x2, y2 in lines)
 
 
 def _orders(places: list[tuple[float, float]]) -> Iterator[list[int]]:
@@ -140,8 +149,12 @@ def _place(
     places: list[tuple[float, float]],
     sizes: list[tuple[float, float]],
     how: tuple[float, float, bool],
+    enough: float,
 ) -> list[Label]:
-    """Place names in an order: all that can stand beside their observers first, if wanted."""
+    """Place names in an order: all that can stand beside their observers first, if wanted.
+
+    It is left unfinished once the lines are as long as another order needs for all names.
+    """
     radius, point, beside = how
     found: list[Label] = []
     gap = _GAP * point
@@ -165,6 +178,8 @@ def _place(
                         room.lines.append(leader)
                     found.append(Label(i, x, y, leader))
                     break
+            if room.lines and _length(room.lines) >= enough:
+                return found
     return found
 
 
@@ -207,11 +222,16 @@ def _meets(line: Line, box: Box) -> bool:
     """Tell whether a line touches a box, by clipping it."""
     x1, y1, x2, y2 = line
     x, y, dx, dy = box
+    if (
+        (x1 <= x - dx and x2 <= x - dx)
+        or (x1 >= x + dx and x2 >= x + dx)
+        or (y1 <= y - dy and y2 <= y - dy)
+        or (y1 >= y + dy and y2 >= y + dy)
+    ):
+        return False
     low, high = 0.0, 1.0
     for start, step, middle, half in ((x1, x2 - x1, x, dx), (y1, y2 - y1, y, dy)):
         if step == 0.0:
-            if abs(start - middle) >= half:
-                return False
             continue
         ends = sorted(((middle - half - start) / step, (middle + half - start) / step))
         low, high = max(low, ends[0]), min(high, ends[1])

@@ -8,11 +8,12 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from viewshed.io._canvas import HALO
 from viewshed.io._ground import Rgb, View, index_of, plane
 from viewshed.io._labels import Room, closest, place_names
 from viewshed.io._reach import joint_outline
 from viewshed.io._round import ring_distances, ticks
-from viewshed.io._sheet import HALO, INK, SOFT, Sheet
+from viewshed.io._sheet import INK, SOFT, Sheet
 from viewshed.wording import told_length
 
 if TYPE_CHECKING:
@@ -24,6 +25,8 @@ MOST_RINGS = 12
 MOST_NAMES = 100
 #: Sizes of the mark of an observer [points].
 MARK, SMALL_MARK, DOT = 9.5, 6.5, 4.0
+#: A dash of a ring and the gap after it [points].
+DASHES = 2.4, 1.8
 #: Room for the coordinates under the map [inches].
 UNDER_MAP = 0.45
 
@@ -61,12 +64,9 @@ class MapBox:
 
     def draw(self, rgb: Rgb) -> None:
         """Draw ground, ranges, sectors, observers with their names, and the frame."""
-        from matplotlib.patches import Rectangle
-
         page, view = self.page, self.view
         page.image(rgb, self.left, self.top)
-        size = (view.width, view.height)
-        clip = Rectangle((self.left, self.top), *size, transform=page.axes.transData)
+        clip = (self.left, self.top, self.right, self.bottom)
         alone = len(self.scene.observers) == 1
         rings = ring_distances(self.scene.observers[0].range_m) if alone else []
         for distance in rings[:-1]:
@@ -74,20 +74,20 @@ class MapBox:
         self._outlines(clip)
         self._observers()
         self._distances(rings)
-        page.box(self.left, self.top, *size, fc="none", ec=INK, lw=0.9, zorder=7)
+        page.box(self.left, self.top, view.width, view.height, edge=INK, line=0.9, layer=7)
 
-    def _over(self, xs: Any, ys: Any, clip: Any, width: float, dashes: Any = "-") -> None:
+    def _over(self, xs: Any, ys: Any, clip: Any, width: float, dashes: Any = None) -> None:
         for wide, color in ((width + 1.4, HALO), (width, INK)):
-            style = {"linestyle": dashes if color == INK else "-", "zorder": 4}
-            alpha = 0.55 if color == HALO else 1.0
-            self.page.line(xs, ys, wide, color, clip=clip, alpha=alpha, **style)
+            style = {"dashes": dashes} if color == INK else {"alpha": 0.55}
+            self.page.line(xs, ys, wide, color, clip=clip, layer=4, **style)
 
     def _ring(self, distance: float, clip: Any) -> None:
         """Draw a ring inside the range of the one observer."""
         sector = self.scene.observers[0].sector
         start, width = (0.0, 360.0) if sector is None else (sector.from_deg, sector.width_deg)
         a = np.radians(start + np.linspace(0.0, width, 721))
-        self._over(*self.at(distance * np.sin(a), distance * np.cos(a)), clip, 0.6, (0, (4, 3)))
+        dashes = tuple(part * self.page.dpi / 72.0 for part in DASHES)
+        self._over(*self.at(distance * np.sin(a), distance * np.cos(a)), clip, 0.6, dashes)
 
     def _outlines(self, clip: Any) -> None:
         """Draw the edge of what each observer reaches, and of all together."""
@@ -121,12 +121,12 @@ class MapBox:
         names = self._names(size)
         halves = [(0.5 * page.length(n, size, bold=True) if n else 0.0, 5 * pt) for n in names]
         for label in place_names(self.room, self.places, halves, radius=radius, point=pt):
-            style = {"ha": "center", "halo": 2.2, "zorder": 7, "bold": True}
+            style = {"align": "center", "halo": 2.2, "layer": 7, "bold": True}
             page.write(label.x, label.y + 0.375 * size * pt, names[label.number], size, **style)
             if label.leader is not None:
                 x1, y1, x2, y2 = label.leader
                 for width, color in ((2.0, HALO), (0.7, INK)):
-                    page.line((x1, x2), (y1, y2), width, color, zorder=5.5)
+                    page.line((x1, x2), (y1, y2), width, color, layer=5.5)
             self.named += 1
 
     def _names(self, size: float) -> list[str]:
@@ -177,8 +177,8 @@ class MapBox:
         page, pt = self.page, self.page.dpi / 72.0
         wide = page.length(text, 7.5) + 2 * pt
         self.room.take(x, y, 0.5 * wide, 6 * pt)
-        page.box(x - wide / 2, y - 4.5 * pt, wide, 9 * pt, fc=HALO, ec="none", zorder=4.9)
-        page.write(x, y + 2.7 * pt, text, 7.5, ha="center", halo=2.4, zorder=5)
+        page.box(x - wide / 2, y - 4.5 * pt, wide, 9 * pt, fill=HALO, layer=4.9)
+        page.write(x, y + 2.7 * pt, text, 7.5, align="center", halo=2.4, layer=5)
 
     def _on_rings(self, rings: list[float]) -> None:
         """Write the distances along the bearing on which most are clear of the observer."""
@@ -225,16 +225,15 @@ class MapBox:
             half = 0.5 * page.length(text, 7)
             if self.left - 10 * pt <= x - half and x + half <= self.right + 10 * pt:
                 page.line((x, x), (self.bottom, self.bottom + 3 * pt), 0.7)
-                page.write(x, self.bottom + 10.5 * pt, text, 7, ha="center", color=SOFT)
+                page.write(x, self.bottom + 10.5 * pt, text, 7, align="center", color=SOFT)
         for place, text in ticks(ys[1], ys[0], edges[1]):
             y = self.top + place
             half = 0.5 * page.length(text, 7)
             if self.top <= y - half and y + half <= self.bottom:
                 page.line((self.left - 3 * pt, self.left), (y, y), 0.7)
-                style = {"ha": "right", "va": "center", "rotation": 90, "rotation_mode": "default"}
-                page.write(self.left - 4.5 * pt, y, text, 7, color=SOFT, **style)
+                page.write(self.left - 4.5 * pt, y, text, 7, color=SOFT, upright=True)
         if crs_name:
             text = page.fitted(f"Coordinates: {crs_name}", 7, page.right - page.left)
             end = self.right if page.length(text, 7) < self.right - page.left else page.right
-            page.write(end, self.bottom + 20.5 * pt, text, 7, ha="right", color=SOFT)
+            page.write(end, self.bottom + 20.5 * pt, text, 7, align="right", color=SOFT)
         return self.bottom + UNDER_MAP * page.dpi

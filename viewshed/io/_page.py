@@ -6,11 +6,11 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from viewshed.io._ground import View, colour, paint, view_of
+from viewshed.io._ground import View, colour, paint, ramp_of, view_of
 from viewshed.io._map_box import MOST_NAMES, MOST_RINGS, UNDER_MAP, MapBox
 from viewshed.io._round import round_down
 from viewshed.io._sheet import INK, RULE, SOFT, Sheet
-from viewshed.io._steps import Step, step_colours, told_step
+from viewshed.io._steps import Step, told_step
 from viewshed.wording import told_length
 
 if TYPE_CHECKING:
@@ -35,13 +35,14 @@ class Page(Sheet):
         box.draw(rgb)
         bottom = box.coordinates(words.crs_name)
         self._band((bottom, foot - 5 * self.dpi / 72), words, box)
+        self.canvas.finish()
 
     def _heading(self, scene: Scene, words: Words) -> float:
         """Write the question and what was asked it of; give where the map can begin."""
         pt, room = self.dpi / 72.0, self.right - self.left
         y = 0.5 * self.dpi + 7 * pt
         self.write(self.left, y, "WHAT CAN BE SEEN", 7.5, color=SOFT, bold=True)
-        self.write(self.right, y, words.made_with, 7.5, color=SOFT, ha="right")
+        self.write(self.right, y, words.made_with, 7.5, color=SOFT, align="right")
         y += 5 * pt
         self.line((self.left, self.right), (y, y), 1.6)
         title = words.question[:1].upper() + words.question[1:]
@@ -83,12 +84,12 @@ class Page(Sheet):
         y += 10 * pt
         for i in range(4):
             fill = INK if i % 2 == 0 else "white"
-            self.box(x + i * whole / 4, y, whole / 4, tall, fc=fill, ec=INK, lw=0.6, zorder=3)
+            self.box(x + i * whole / 4, y, whole / 4, tall, fill=fill, edge=INK, line=0.6)
         unit, factor = ("km", 1000.0) if length >= 1000 else ("m", 1.0)
         for share in (0.0, 0.5, 1.0):
             text = f"{share * length / factor:g}" + (f" {unit}" if share == 1.0 else "")
-            ha = "left" if share == 0 else "center"
-            self.write(x + share * whole, y - 3 * pt, text, 7.5, ha=ha)
+            align = "left" if share == 0 else "center"
+            self.write(x + share * whole, y - 3 * pt, text, 7.5, align=align)
         notes = "Distances and bearings are true from the observer; north is up."
         if len(box.scene.observers) > 1:
             notes = f"North is up. Distances are true to {_stretch(box.view)} all over the map."
@@ -99,15 +100,15 @@ class Page(Sheet):
 
     def _north(self, x: float, y: float, box: MapBox) -> None:
         """Draw an arrow to true north."""
-        from matplotlib.patches import Polygon
-
         pt = self.dpi / 72.0
         tip, foot, half = y + 9 * pt, y + 33 * pt, 6 * pt
         x -= half
         for side, fill in ((-1, INK), (1, "white")):
             corners = [(x, tip), (x + side * half, foot), (x, foot - 5 * pt)]
-            self.axes.add_patch(Polygon(corners, fc=fill, ec=INK, lw=0.7, joinstyle="miter"))
-        self.write(x, y + 7 * pt, "N", 8.5, ha="center", bold=True)
+            self.canvas.add(1, self.canvas.polygon, corners, fill)
+            xs, ys = zip(*corners, corners[0], strict=True)
+            self.canvas.add(1, self.canvas.line, xs, ys, width=0.7 * pt, color=INK)
+        self.write(x, y + 7 * pt, "N", 8.5, align="center", bold=True)
 
     def _legend(self, place: tuple[float, float], room: tuple[float, float], box: MapBox) -> None:
         """Say what the colours and lines mean, in as many rows as there are."""
@@ -124,15 +125,13 @@ class Page(Sheet):
         size = min(size, 0.62 * step / pt)
         shade = np.linspace(0.45, 0.9, wide, dtype=np.float32)[None, :].repeat(tall, axis=0)
         for kind, text in rows:
-            shares = np.zeros((tall, wide, 5), np.float32)
-            shares[..., kind] = 1
+            shares = np.zeros((tall, wide, 5), np.uint8)
+            shares[..., kind] = 255
             if kind == 0 and "mixed" in self.found:
-                part = np.linspace(1.0, 0.0, wide, dtype=np.float32) ** 2
-                shares[..., 0], shares[..., 2] = part, 1 - part
-            rgb = np.ones((tall, wide, 3), np.float32)
-            colour(rgb, shares, shade, 0, step_colours(1) if scene.steps else None)
-            self.image(rgb, x, y)
-            self.box(round(x), round(y), wide, tall, fc="none", ec=SOFT, lw=0.5, zorder=3)
+                part = np.rint(255 * np.linspace(1.0, 0.0, wide) ** 2)
+                shares[..., 0], shares[..., 2] = part, 255 - part
+            self.image(colour(shares, shade, ramp_of(1 if scene.steps else 0)), x, y)
+            self.box(round(x), round(y), wide, tall, edge=SOFT, line=0.5, layer=3)
             self._said(x + wide, y + 0.5 * tall, text, size)
             y += step
         for line, text in lines:
@@ -194,17 +193,15 @@ class Page(Sheet):
         each, tall = round(min(30 * pt, width / len(steps))), round(13 * pt)
         told = [told_step(step) for step in steps]
         size = self._size(told, 0.94 * each)
-        colours = step_colours(len(steps))
+        ramp = ramp_of(len(steps))
         shade = np.linspace(0.45, 0.95, each, dtype=np.float32)[None, :].repeat(tall, axis=0)
         for i, label in enumerate(told):
-            shares = np.zeros((tall, each, len(steps) + 4), np.float32)
-            shares[..., i] = 1
-            rgb = np.ones((tall, each, 3), np.float32)
-            colour(rgb, shares, shade, 0, colours)
+            shares = np.zeros((tall, each, len(steps) + 4), np.uint8)
+            shares[..., i] = 255
             left = round(x) + i * each
-            self.image(rgb, left, y)
-            self.box(left, round(y), each, tall, fc="none", ec=SOFT, lw=0.5, zorder=3)
-            self.write(left + 0.5 * each, y + tall + 8 * pt, label, size, ha="center")
+            self.image(colour(shares, shade, ramp), left, y)
+            self.box(left, round(y), each, tall, edge=SOFT, line=0.5, layer=3)
+            self.write(left + 0.5 * each, y + tall + 8 * pt, label, size, align="center")
         return y + tall + 13 * pt
 
     def _table(self, x: float, ends: tuple[float, float], width: float, words: Words) -> None:
@@ -231,7 +228,7 @@ class Page(Sheet):
             self.write(x, y, self.fitted(label, s, width, bold=main), s, color=color, bold=main)
             y += 0.85 * gap * below * s / size
             text = self.fitted(value, s, width, bold=main)
-            self.write(x + width, y, text, s, ha="right", bold=main)
+            self.write(x + width, y, text, s, align="right", bold=main)
             line = (y + 0.35 * size * pt,) * 2
             self.line((x, x + width), line, rule, INK if main else RULE)
 

@@ -6,7 +6,6 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
-import shapely
 
 from viewshed.geodesy import frame_of
 
@@ -105,6 +104,8 @@ def local(scene: Scene, marker: Marker, bearing: Floats, distance: Floats) -> Fl
 
 def joint_outline(outlines: tuple[Floats, ...]) -> list[Floats]:
     """Give the edges of what all observers together reach, each as east and north [m]."""
+    import shapely
+
     shapes = [shapely.make_valid(shapely.Polygon(rim.T)) for rim in outlines]
     edge = shapely.boundary(shapely.unary_union(shapes))
     return [shapely.get_coordinates(line).T for line in shapely.get_parts(edge)]

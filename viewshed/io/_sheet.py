@@ -1,16 +1,16 @@
 """The sheet that the page is drawn on: lines, boxes, pixels and text.
 
-Everything is placed in pixels of the page. matplotlib is loaded when a page is drawn.
+Everything is placed in pixels of the page; widths of lines and sizes of text are in points.
 """
 
 from __future__ import annotations
 
-from functools import lru_cache
-from pathlib import Path
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+
+from viewshed.io._canvas import HALO, Box, Canvas, Letters, font_of, has_letter
 
 #: Page [inches], A4 upright, and what is kept free at its sides.
 PAGE_WIDTH, PAGE_HEIGHT = 8.27, 11.69
@@ -18,60 +18,39 @@ MARGIN = 0.55
 INK = "#1d1b20"
 SOFT = "#6b6670"
 RULE = "#b9b4bd"
-HALO = "white"
 
 
 class Sheet:
-    """An A4 page in pixels, right and down from its top left corner.
+    """A page in pixels, right and down from its top left corner.
 
     Parameters
     ----------
-    figure : matplotlib.figure.Figure
-        Figure of the size of the page.
-    renderer : matplotlib.backends.backend_agg.RendererAgg
-        Measures text.
     dpi : int
         Pixels an inch.
+    size : (width, height), optional
+        Its size [pixels]; A4 upright unless given.
     """
 
-    def __init__(self, figure: Any, renderer: Any, dpi: int) -> None:
+    def __init__(self, dpi: int, size: tuple[int, int] | None = None) -> None:
         self.dpi = dpi
-        self.renderer = renderer
-        self.width, self.height = round(PAGE_WIDTH * dpi), round(PAGE_HEIGHT * dpi)
-        self.axes = figure.add_axes((0.0, 0.0, 1.0, 1.0))
-        self.axes.set(xlim=(0, self.width), ylim=(self.height, 0))
-        self.axes.set_axis_off()
+        self.width, self.height = size or (round(PAGE_WIDTH * dpi), round(PAGE_HEIGHT * dpi))
+        self.canvas = Canvas(self.width, self.height)
         self.left, self.right = MARGIN * dpi, self.width - MARGIN * dpi
-        self.fonts = _fonts()
         self._lengths: dict[tuple[str, float, bool], float] = {}
 
     def write(self, x: float, y: float, text: str, size: float, **style: Any) -> None:
         """Write one line; y is its base line."""
-        bold = style.pop("bold", False)
-        halo = style.pop("halo", 0)
-        label = self.axes.text(
-            x,
-            y,
-            _printable(text, self.fonts[bold]),
-            fontproperties=self.fonts[bold],
-            fontsize=size,
-            parse_math=False,
-            **{"color": INK, "va": "baseline", **style},
-        )
-        if halo:
-            from matplotlib.patheffects import withStroke
-
-            label.set_path_effects([withStroke(linewidth=halo, foreground=HALO)])
+        pt = self.dpi / 72.0
+        layer, halo = style.pop("layer", 3), 0.5 * style.pop("halo", 0.0) * pt
+        letters = Letters(size * pt, style.pop("color", INK), style.pop("bold", False), halo)
+        self.canvas.add(layer, self.canvas.text, x, y, printable(text), letters, **style)
 
     def length(self, text: str, size: float, *, bold: bool = False) -> float:
         """Width of a line of text [pixels]."""
         key = (text, size, bold)
         if key not in self._lengths:
-            font = self.fonts[bold].copy()
-            font.set_size(size)
-            shown = _printable(text, font)
-            extent = self.renderer.get_text_width_height_descent(shown, font, ismath=False)
-            self._lengths[key] = float(extent[0])
+            font = font_of(size * self.dpi / 72.0, bold)
+            self._lengths[key] = font.getlength(printable(text))
         return self._lengths[key]
 
     def _is_within(self, words: list[str], size: float, width: float, *, bold: bool) -> bool:
@@ -105,63 +84,35 @@ class Sheet:
         return "\u2026"
 
     def line(self, xs: Any, ys: Any, width: float = 0.6, color: str = INK, **style: Any) -> None:
-        """Draw a line, cut off at a rectangle if one is given; its width is in points."""
-        from matplotlib.lines import Line2D
-
-        clip = style.pop("clip", None)
-        line = Line2D(xs, ys, linewidth=width, color=color, **style)
-        self.axes.add_line(line)
-        if clip is not None:
-            line.set_clip_path(clip)
+        """Draw a line, cut off at a box if one is given."""
+        pt = self.dpi / 72.0
+        layer = style.pop("layer", 2)
+        self.canvas.add(layer, self.canvas.line, xs, ys, width=width * pt, color=color, **style)
 
     def box(self, x: float, y: float, width: float, height: float, **style: Any) -> None:
-        """Draw a rectangle from its top left corner."""
-        from matplotlib.patches import Rectangle
+        """Draw a box from its top left corner; the width of its edge is in points."""
+        layer, edge_width = style.pop("layer", 1), style.pop("line", 1.0) * self.dpi / 72.0
+        box: Box = (x, y, x + width, y + height)
+        self.canvas.add(layer, self.canvas.box, box, width=edge_width, **style)
 
-        self.axes.add_patch(Rectangle((x, y), width, height, **style))
-
-    def image(self, rgb: NDArray[np.float32], x: float, y: float) -> None:
+    def image(self, rgb: NDArray[np.uint8], x: float, y: float) -> None:
         """Lay pixels on the page one to one."""
-        x, y = round(x), round(y)
-        whole = (np.clip(rgb, 0, 1) * 255 + 0.5).astype(np.uint8)
-        extent = (x, x + rgb.shape[1], y + rgb.shape[0], y)
-        self.axes.imshow(whole, extent=extent, interpolation="nearest", aspect="auto", zorder=1)
-        self.axes.set(xlim=(0, self.width), ylim=(self.height, 0))
+        self.canvas.add(1, self.canvas.picture, rgb, round(x), round(y))
 
     def mark(self, xs: Any, ys: Any, size: float = 9.5) -> None:
         """Draw observers as rings with a dot, or as dots where that is too small [points]."""
         layers = ((1.0, HALO), (0.79, INK), (0.484, HALO), (0.232, INK))
         for share, color in layers if size > 7 else layers[:2]:
-            style = {"marker": "o", "markersize": size * share, "markeredgewidth": 0, "zorder": 6}
-            self.line(xs, ys, 0, color, **style)
-
-
-def _fonts() -> dict[bool, Any]:
-    """Regular and bold font that come with matplotlib, whatever the machine has."""
-    import matplotlib
-    from matplotlib.font_manager import FontProperties
-
-    folder = Path(matplotlib.get_data_path()) / "fonts" / "ttf"
-    names = {False: "DejaVuSans.ttf", True: "DejaVuSans-Bold.ttf"}
-    return {bold: FontProperties(fname=str(folder / name)) for bold, name in names.items()}
+            whole = size * share * self.dpi / 72.0
+            self.canvas.add(6, self.canvas.discs, xs, ys, whole, color)
 
 
 def is_writable(text: str) -> bool:
     """Tell whether the page's font has every letter of a text."""
-    font = _fonts()[True]
-    return _printable(text, font) == text
+    return printable(text) == text
 
 
-def _printable(text: str, font: Any) -> str:
+def printable(text: str) -> str:
     """Put a box for what the font cannot write and a space for what is no character."""
-    known = _letters(font.get_file())
     spaced = (c if c.isprintable() else " " for c in text)
-    return "".join(c if ord(c) in known else "\u25a1" for c in spaced)
-
-
-@lru_cache(maxsize=2)
-def _letters(file: str) -> frozenset[int]:
-    """Give the codes of the letters of a font."""
-    from matplotlib.font_manager import get_font
-
-    return frozenset(get_font(file).get_charmap())
+    return "".join(c if has_letter(c) else "\u25a1" for c in spaced)

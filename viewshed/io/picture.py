@@ -8,19 +8,19 @@ Only this drawing is resampled, never a result.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
 from viewshed.constants import CAUTIONS, VISIBLE
 from viewshed.io._page import Page
+from viewshed.io._png import png_of
 from viewshed.io._reach import Reach, reach_of
-from viewshed.io._sheet import PAGE_HEIGHT, PAGE_WIDTH
 from viewshed.io._steps import Step, steps_of
 
 if TYPE_CHECKING:
@@ -74,6 +74,8 @@ class Scene:
     count : numpy.ndarray, shape (rows, cols), optional
         How many observers surely see each cell, 65535 for no data; where given, the map shows it
         in steps.
+    rest : callable, optional
+        Called between strips of the arrays, so that what is mapped into memory can be let go.
     """
 
     elevation: NDArray[np.float32]
@@ -82,6 +84,7 @@ class Scene:
     post_map: PostMap
     observers: Sequence[Marker]
     count: NDArray[np.uint16] | None = None
+    rest: Callable[[], None] | None = None
 
     @cached_property
     def reach(self) -> Reach:
@@ -98,6 +101,8 @@ class Scene:
             part = slice(first, first + STRIP_ROWS)
             seen = self.count[part][self.visible[part] == VISIBLE]
             cells += np.bincount(seen, minlength=1 << 16)
+            if self.rest is not None:
+                self.rest()
         return steps_of(cells)
 
 
@@ -160,20 +165,11 @@ def draw_map(path: str | Path, scene: Scene, words: Words, *, dpi: int = 200) ->
     scattered single cells do not look like solid ground (as they would if any cell gave full
     colour). Steps of a count are mixed in proportion within a pixel, and tinted alike.
     """
-    import matplotlib
-    from matplotlib.backends.backend_agg import FigureCanvasAgg
-    from matplotlib.figure import Figure
-
     whole = [
         replace(m, sector=None) if m.sector is not None and m.sector.width_deg >= 360 else m
         for m in scene.observers
     ]
     scene = replace(scene, observers=whole)
-    with matplotlib.rc_context():
-        matplotlib.rcdefaults()
-        figure = Figure(figsize=(PAGE_WIDTH, PAGE_HEIGHT), dpi=dpi, facecolor="white")
-        renderer: Any = FigureCanvasAgg(figure).get_renderer()  # type: ignore[no-untyped-call]
-        Page(figure, renderer, dpi).compose(scene, words)
-        figure.savefig(path, format="png", dpi=dpi, metadata={"Software": None})
-
-
+    page = Page(dpi)
+    page.compose(scene, words)
+    Path(path).write_bytes(png_of(page.canvas.pixels, dpi))
