@@ -1,7 +1,10 @@
 """Where names can stand on a map so that none covers another, nor an observer."""
 
-from collections.abc import Iterator
-from itertools import chain, islice, product
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from functools import cache, partial
+from itertools import chain, islice
 from math import cos, hypot, inf, pi, sin
 from typing import NamedTuple
 
@@ -29,6 +32,13 @@ class Label(NamedTuple):
     leader: Line | None
 
 
+class Limits(NamedTuple):
+    """What another order of the names needs: how many stay out, and how long all lines are."""
+
+    missed: float
+    length: float
+
+
 class Room:
     """What is taken of a map, in pixels of the page.
 
@@ -42,12 +52,6 @@ class Room:
         self.frame = (left, top, right, bottom)
         self.taken: list[Box] = []
         self.lines: list[Line] = []
-
-    def copy(self) -> "Room":
-        """Give a room in which the same is taken."""
-        other = Room(*self.frame)
-        other.taken, other.lines = list(self.taken), list(self.lines)
-        return other
 
     def holds(self, x: float, y: float, dx: float, dy: float) -> bool:
         """Tell whether a box of half sides dx, dy round a place lies inside the frame."""
@@ -70,10 +74,10 @@ class Room:
 
     def is_clear(self, line: Line) -> bool:
         """Tell whether a line crosses nothing that is taken."""
-        return not (
-            any(_meets(line, box) for box in self.taken)
-            or any(_cross(line, other) for other in self.lines)
-        )
+        for box in self.taken:
+            if _meets(line, box):
+                return False
+        return not any(_cross(line, other) for other in self.lines)
 
 
 def place_names(
@@ -105,20 +109,23 @@ def place_names(
         Those for which there is room.
     """
     best: tuple[tuple[int, float], list[Label], Room] | None = None
-    enough = inf
-    shown = sum(dx > 0 and room.holds(*at, 0, 0) for at, (dx, _) in zip(places, sizes, strict=True))
-    ways = [True, False] if len(places) <= _FEW else [True]
-    for beside, order in product(ways, islice(_orders(places), 13 if len(places) <= 30 else 3)):
-        trial = room.copy()
-        found = _place(trial, order, places, sizes, (radius, point, beside), enough)
-        score = (len(found), -_length(trial.lines))
-        if best is None or score > best[0]:
-            best = score, found, trial
-        if len(found) == shown:
-            enough = min(enough, -score[1])
+    limits = Limits(inf, inf)
+    shown = {i for i, at in enumerate(places) if sizes[i][0] > 0 and room.holds(*at, 0, 0)}
+    number = 13 if len(places) <= 30 else 3
+    for beside in [True, False] if len(places) <= _FEW else [True]:
+        passes = _passes(room, places, sizes, (radius, point, beside))
+        for order in islice(_orders(places), number):
+            trial = Room(*room.frame)
+            trial.lines = list(room.lines)
+            found = _place(trial, [i for i in order if i in shown], passes, sizes, _GAP * point, limits)
+            score = (len(found), -_length(trial.lines))
+            if best is None or score > best[0]:
+                best = score, found, trial
+                limits = Limits(len(shown) - len(found), -score[1])
     if best is None:
         return []
-    room.taken, room.lines = best[2].taken, best[2].lines
+    room.taken += best[2].taken
+    room.lines = best[2].lines
     return best[1]
 
 
@@ -143,47 +150,74 @@ def _orders(places: list[tuple[float, float]]) -> Iterator[list[int]]:
         yield along[1::2] + along[::2]
 
 
-def _place(
+#: Middle of a name and the line to it, if any.
+Try = tuple[float, float, Line | None]
+
+
+def _passes(
     room: Room,
-    order: list[int],
     places: list[tuple[float, float]],
     sizes: list[tuple[float, float]],
     how: tuple[float, float, bool],
-    enough: float,
-) -> list[Label]:
-    """Place names in an order: all that can stand beside their observers first, if wanted.
+) -> list[Callable[[int], list[Try]]]:
+    """Tell where each name can stand, clear of what is taken before any name is placed.
 
-    It is left unfinished once the lines are as long as another order needs for all names.
+    All names that can stand beside their observers come first, if wanted.
     """
     radius, point, beside = how
-    found: list[Label] = []
     gap = _GAP * point
     middle = sum(x for x, _ in places) / max(len(places), 1)
-    for sides in (_SIDES, ()) if beside else (_SIDES[:2],):
-        done = {label.number for label in found}
+
+    def tries_of(sides: tuple[tuple[int, int], ...], i: int) -> list[Try]:
+        place, half = places[i], sizes[i]
+        tries = _beside(place, half, radius + gap, sides)
+        if sides != _SIDES:
+            out = 0.0 if beside else (-0.9 if place[0] < middle else 0.9)
+            tries = chain(tries, _apart(place, half, (radius, point), out))
+        return [one for one in tries if _fits(room, one, half, gap)]
+
+    ways = [_SIDES, ()] if beside else [_SIDES[:2]]
+    return [cache(partial(tries_of, sides)) for sides in ways]
+
+
+def _fits(room: Room, one: Try, half: tuple[float, float], gap: float) -> bool:
+    x, y, leader = one
+    return room.is_free(x, y, half[0] + gap, half[1] + gap / 2) and (
+        leader is None or room.is_clear(leader)
+    )
+
+
+def _place(
+    room: Room,
+    order: list[int],
+    passes: list[Callable[[int], list[Try]]],
+    sizes: list[tuple[float, float]],
+    gap: float,
+    limits: Limits,
+) -> list[Label]:
+    """Place names in an order, each where it fits first.
+
+    It is left unfinished once another order is known to do no worse.
+    """
+    found: list[Label] = []
+    for tries_of in passes:
+        done, missed = {label.number for label in found}, 0
         for i in order:
-            place, (dx, dy) = places[i], sizes[i]
-            if i in done or dx <= 0 or not room.holds(*place, 0, 0):
+            if i in done:
                 continue
-            tries = _beside(place, (dx, dy), radius + gap, sides)
-            if sides != _SIDES:
-                out = 0.0 if beside else (-0.9 if place[0] < middle else 0.9)
-                tries = chain(tries, _apart(place, (dx, dy), (radius, point), out))
-            for x, y, leader in tries:
-                if room.is_free(x, y, dx + gap, dy + gap / 2) and (
-                    leader is None or room.is_clear(leader)
-                ):
-                    room.take(x, y, dx, dy)
-                    if leader is not None:
-                        room.lines.append(leader)
-                    found.append(Label(i, x, y, leader))
-                    break
-            if room.lines and _length(room.lines) >= enough:
+            fit = next((one for one in tries_of(i) if _fits(room, one, sizes[i], gap)), None)
+            if fit is None:
+                missed += 1
+            else:
+                x, y, leader = fit
+                room.take(x, y, *sizes[i])
+                if leader is not None:
+                    room.lines.append(leader)
+                found.append(Label(i, x, y, leader))
+            same = missed == limits.missed and _length(room.lines) >= limits.length
+            if tries_of is passes[-1] and (missed > limits.missed or same):
                 return found
     return found
-
-
-Try = tuple[float, float, Line | None]
 
 
 def _beside(

@@ -12,6 +12,7 @@ import os
 import platform
 import re
 from collections.abc import Iterator, Mapping
+from contextlib import suppress
 from functools import cache
 from importlib import metadata, resources
 from pathlib import Path, PurePosixPath
@@ -57,12 +58,16 @@ def library_versions() -> dict[str, str]:
     dict of str to str
         Packages, and ``GDAL`` and ``PROJ`` as they read the rasters and measure the ground.
     """
-    found = {"GDAL": str(rasterio.__gdal_version__), "PROJ": geodesy.proj_version()}
+    own = {"GDAL": str(rasterio.__gdal_version__), "PROJ": geodesy.proj_version()}
+    return own | _package_versions()
+
+
+@cache
+def _package_versions() -> dict[str, str]:
+    found = {}
     for name in _LIBRARIES:
-        try:
+        with suppress(metadata.PackageNotFoundError):
             found[name] = metadata.version(name)
-        except metadata.PackageNotFoundError:
-            continue
     return found
 
 
