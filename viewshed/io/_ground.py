@@ -222,6 +222,21 @@ class Kinds:
             self.table[256 + first : 256 + last + 1] = i
 
 
+def counted(scene: Scene) -> NDArray[np.int64]:
+    """Cells that are seen by 0, 1, 2, ... observers."""
+    rows, cols = scene.visible.shape
+    strip = max(1, STRIP_CELLS // cols)
+    seen = np.zeros((-(-rows // strip), 1 << 16), np.int64)
+
+    def work(first: int) -> None:
+        part = slice(first, first + strip)
+        arrays = _plain(scene.visible[part]), _plain(_counts(scene, part))
+        page.count_seen(*arrays, seen[first // strip])
+
+    _each(work, range(0, rows, strip), scene.rest)
+    return np.asarray(seen.sum(axis=0))
+
+
 def ramp_of(steps: int) -> Floats:
     """Give the colours of steps for `colour`; none where there are none."""
     return step_colours(steps).astype(np.float64) if steps else np.zeros((0, 3))
@@ -256,7 +271,7 @@ def blocks(
         part = slice(top + here.start * by, min(top + here.stop * by, bottom))
         tallies = np.zeros((here.stop - first, out_cols, kinds.number + 2), np.int32)
         page.sum_blocks(
-            *(_plain(scene.visible[part]), _plain(_counted(scene, part))),
+            *(_plain(scene.visible[part]), _plain(_counts(scene, part))),
             *(_plain(scene.elevation[part]), kinds.table, place),
             *(tallies, np.zeros(tallies.shape[:2]), shares[here], heights[here]),
         )
@@ -265,7 +280,7 @@ def blocks(
     return shares, heights
 
 
-def _counted(scene: Scene, part: slice) -> NDArray[np.uint16]:
+def _counts(scene: Scene, part: slice) -> NDArray[np.uint16]:
     return np.empty((0, 0), np.uint16) if scene.count is None else scene.count[part]
 
 

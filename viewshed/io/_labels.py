@@ -117,7 +117,8 @@ def place_names(
         for order in islice(_orders(places), number):
             trial = Room(*room.frame)
             trial.lines = list(room.lines)
-            found = _place(trial, [i for i in order if i in shown], passes, sizes, _GAP * point, limits)
+            named = [i for i in order if i in shown]
+            found = _place(trial, named, passes, sizes, _GAP * point, limits)
             score = (len(found), -_length(trial.lines))
             if best is None or score > best[0]:
                 best = score, found, trial

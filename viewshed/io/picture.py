@@ -14,21 +14,19 @@ from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-import numpy as np
-from numpy.typing import NDArray
-
-from viewshed.constants import CAUTIONS, VISIBLE
+from viewshed.constants import CAUTIONS
+from viewshed.io._ground import counted
 from viewshed.io._page import Page
 from viewshed.io._png import png_of
 from viewshed.io._reach import Reach, reach_of
 from viewshed.io._steps import Step, steps_of
 
 if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
+
     from viewshed.grid import Grid, PostMap
     from viewshed.places import Sector
-
-#: Rows whose counts are looked at at a time.
-STRIP_ROWS = 256
 
 
 @dataclass(frozen=True)
@@ -96,13 +94,7 @@ class Scene:
         """Steps of the count that are told apart; none where there is no count."""
         if self.count is None:
             return []
-        cells = np.zeros(1 << 16, dtype=np.int64)
-        for first in range(0, self.count.shape[0], STRIP_ROWS):
-            part = slice(first, first + STRIP_ROWS)
-            seen = self.count[part][self.visible[part] == VISIBLE]
-            cells += np.bincount(seen, minlength=1 << 16)
-            if self.rest is not None:
-                self.rest()
+        cells = counted(self)
         return steps_of(cells)
 
 

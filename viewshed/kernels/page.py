@@ -12,6 +12,25 @@ SEEN, UNSURE, STRIPE, DOT = 0, 1, 2, 3
 OUTSIDE, VOID, HIDDEN, UNRESOLVED = 1, 2, 3, 4
 
 
+@kernel
+def count_seen(visible, count, seen):
+    """Add up the cells that are visible, by how many observers see them.
+
+    Parameters
+    ----------
+    visible : (rows, cols) uint8
+        The visible layer.
+    count : (rows, cols) uint16
+        How many observers see each cell.
+    seen : (65536,) int64
+        Cells seen by 0, 1, 2, ... observers; added to.
+    """
+    for r in range(visible.shape[0]):
+        for c in range(visible.shape[1]):
+            if visible[r, c] == 1:
+                seen[count[r, c]] += 1
+
+
 @inline
 def _share(part, cells):
     """Part of some cells in 255ths, rounded up: a single cell is not lost."""
