@@ -12,12 +12,13 @@ Everything is loaded on first use, so importing the package costs nothing.
 
 from __future__ import annotations
 
-from importlib import import_module
-from typing import TYPE_CHECKING, Any
-
 from viewshed._version import __version__
 
+#: Known to be true by checkers of types; `typing` would take longer to load than the rest.
+TYPE_CHECKING = False
 if TYPE_CHECKING:
+    from typing import Any
+
     from viewshed.api import map_visibility
     from viewshed.atmosphere import Refraction, parse_refraction
     from viewshed.errors import (
@@ -91,6 +92,8 @@ _HOME = {
 
 def __getattr__(name: str) -> Any:
     """Load a public name from its module on first use."""
+    from importlib import import_module
+
     if name not in _HOME:
         msg = f"module 'viewshed' has no attribute {name!r}"
         raise AttributeError(msg)
