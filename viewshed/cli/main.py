@@ -5,10 +5,9 @@ from __future__ import annotations
 import contextlib
 import os
 import signal
-import socket
 import threading
 import time
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 
@@ -17,6 +16,9 @@ from viewshed.cli.map import map_command
 from viewshed.cli.options import INTERRUPTED, Program
 from viewshed.cli.polygons import polygons_command
 from viewshed.cli.rerun import rerun_command
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
 
 #: Seconds a run has for leaving in good order after Ctrl-C.
 GRACE = 0.8
@@ -60,8 +62,11 @@ def _version(ctx: click.Context, _: click.Parameter, asked: bool) -> None:
     callback=_version,
     help="Show the version and leave.",
 )
-def cli() -> None:
-    """Hold the commands together."""
+@click.pass_obj
+def cli(prepare: Callable[[], None] | None) -> None:
+    """Hold the commands together; prepare for a command that is about to run."""
+    if prepare is not None:
+        prepare()
 
 
 cli.add_command(map_command)
@@ -72,13 +77,17 @@ cli.add_command(polygons_command)
 
 def main(args: list[str] | None = None) -> Any:
     """Run the program; the exit code is 0, 1 (failed), 2 (wrong call) or 130 (Ctrl-C)."""
+    try:
+        return cli.main(args=args, prog_name="viewshed", obj=_heed_signals)
+    except KeyboardInterrupt:
+        raise SystemExit(INTERRUPTED) from None
+
+
+def _heed_signals() -> None:
+    """End in good order on Ctrl-C and SIGTERM, where signals can be heeded."""
     with contextlib.suppress(ValueError, OSError):
         _leave_in_time()
         signal.signal(signal.SIGTERM, _end)
-    try:
-        return cli.main(args=args, prog_name="viewshed")
-    except KeyboardInterrupt:
-        raise SystemExit(INTERRUPTED) from None
 
 
 def _end(number: int, _: object) -> None:
@@ -94,6 +103,8 @@ def _leave_in_time() -> None:
     process after a moment of grace. What is then left half done is hidden and is swept by the
     next run.
     """
+    import socket
+
     waiting, told = socket.socketpair()
     waiting.setblocking(True)
     told.setblocking(False)
