@@ -497,3 +497,93 @@ def test_several_observers_give_the_same_bytes(tmp_path):
     for path, one in zip(paths, drawn, strict=True):
         picture.draw_map(path, one, WORDS, dpi=60)
     assert paths[0].read_bytes() == paths[1].read_bytes()
+
+
+# --- how it is worked out -----------------------------------------------------------------------
+
+
+def rough_scene(**changes):
+    rng = np.random.default_rng(8)
+    count = rng.integers(0, 9, (120, 120)).astype(np.uint16)
+    visible = np.where(count > 0, 1, rng.choice([0, 2, 255], count.shape)).astype(np.uint8)
+    elevation = (300 * rng.random((120, 120))).astype(np.float32)
+    elevation[visible == 255] = np.where(rng.random((visible == 255).sum()) < 0.5, np.nan, 5)
+    facts = {"count": count, "visible": visible, "elevation": elevation, **changes}
+    return real_scene([(60, 60), (40, 70)], **facts)
+
+
+def page_of(drawn, folder):
+    picture.draw_map(folder / "page.png", drawn, WORDS, dpi=80)
+    return (folder / "page.png").read_bytes()
+
+
+def test_neither_threads_nor_strips_change_the_page(tmp_path, monkeypatch):
+    expected = page_of(rough_scene(), tmp_path)
+    monkeypatch.setattr(_ground, "STRIP_CELLS", 700)
+    for threads in (1, 3):
+        monkeypatch.setattr(_ground, "usable_threads", lambda _, n=threads: n)
+        monkeypatch.setattr(_ground, "BAND", 16 * threads)
+        assert page_of(rough_scene(), tmp_path) == expected
+
+
+def test_arrays_may_lie_anywhere_and_stay_as_they_are(tmp_path):
+    expected = page_of(rough_scene(), tmp_path)
+    plain, moved = rough_scene(), {}
+    for name in ("count", "visible", "elevation"):
+        array = getattr(plain, name)
+        wide = np.zeros((130, 140), array.dtype)
+        wide[3:123, 7:127] = array
+        moved[name] = wide[3:123, 7:127]
+        moved[name].flags.writeable = False
+    assert page_of(rough_scene(**moved), tmp_path) == expected
+
+
+def test_the_caller_can_let_go_of_what_was_read_strip_by_strip(tmp_path, monkeypatch):
+    monkeypatch.setattr(_ground, "STRIP_CELLS", 1200)
+    calls = []
+    page_of(rough_scene(rest=lambda: calls.append(1)), tmp_path)
+    assert len(calls) > 1.25 * 120 * 120 / 1200  # for the counts, then for the blocks
+
+
+def test_steps_come_from_the_counts_of_visible_cells_alone(monkeypatch):
+    monkeypatch.setattr(_ground, "STRIP_CELLS", 500)
+    drawn = rough_scene()
+    drawn.count[drawn.visible != 1] = 65535
+    expected = np.bincount(drawn.count[drawn.visible == 1], minlength=1 << 16)
+    np.testing.assert_array_equal(_ground.counted(drawn), expected)
+    assert drawn.steps[-1][1] == 8
+
+
+def plain_light(height, jacobian):
+    """Light of each block by the formula, block by block."""
+    slopes = np.gradient(height.astype(float))
+    inverse = np.linalg.inv(jacobian)
+    east = slopes[1] * inverse[0, 0] + slopes[0] * inverse[1, 0]
+    north = slopes[1] * inverse[0, 1] + slopes[0] * inverse[1, 1]
+    known = np.isfinite(east + north)
+    steep = np.percentile(np.hypot(east, north)[known], 92)
+    factor = np.clip(0.75 / steep, 0.2, 8.0)
+    high = np.radians(_ground.LIGHT_HEIGHT)
+    total = np.zeros(height.shape)
+    for azimuth, weight in _ground.LIGHTS:
+        toward = np.sin(np.radians(azimuth)), np.cos(np.radians(azimuth))
+        rise = factor * (east * toward[0] + north * toward[1])
+        norm = np.sqrt(1 + factor**2 * (east**2 + north**2))
+        total += weight * np.maximum((np.sin(high) - np.cos(high) * rise) / norm, 0)
+    total[~known] = np.sin(high)
+    return np.minimum(total * _ground.LIGHT_ON_FLAT / np.sin(high), 1)
+
+
+def test_light_is_that_of_the_formula():
+    rng = np.random.default_rng(9)
+    height = (200 * rng.random((40, 50))).astype(np.float32)
+    height[rng.random(height.shape) < 0.05] = np.nan
+    jacobian = np.array([[90.0, 20.0], [15.0, -80.0]])
+    light = _ground.light_on(height, jacobian)
+    np.testing.assert_allclose(light, plain_light(height, jacobian), atol=1e-5)
+
+
+@pytest.mark.parametrize("shape", [(1, 1), (1, 9), (9, 1)])
+def test_a_single_row_or_column_has_light(shape):
+    light = _ground.light_on(np.zeros(shape, np.float32), np.diag([50.0, -50.0]))
+    np.testing.assert_allclose(light, _ground.LIGHT_ON_FLAT, atol=1e-6)

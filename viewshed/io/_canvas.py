@@ -204,33 +204,21 @@ class Canvas:
         font = font_of(letters.size, letters.bold)
         left, top, right, bottom = font.getbbox(text, anchor="ls")
         if upright:
-            mask = np.rot90(self._mask(font, text, (0.0, 0.0), 0.0)[0])
-            place = round(x) - mask.shape[1], round(y - mask.shape[0] / 2)
-            self._stain(mask, *place, letters.color)
-            return *place, place[0] + mask.shape[1], place[1] + mask.shape[0]
+            mask, _ = _mask(font, text, 0.0)
+            turned = np.rot90(mask)[1:-1, 1:-1]
+            tall, wide = turned.shape
+            corner = round(x) - wide, round(y - tall / 2)
+            self._stain(turned, *corner, letters.color)
+            return *corner, corner[0] + wide, corner[1] + tall
         x -= {"left": 0.0, "center": 0.5, "right": 1.0}[align] * font.getlength(text)
         if middle:
             y -= 0.5 * (top + bottom)
-        whole = int(np.floor(x)), int(np.floor(y))
-        part = x - whole[0], y - whole[1]
+        x, y = round(x), round(y)
         under = [(letters.halo, HALO)] if letters.halo else []
         for stroke, ink in [*under, (0.0, letters.color)]:
-            mask, corner = self._mask(font, text, part, stroke)
-            self._stain(mask, whole[0] + corner[0], whole[1] + corner[1], ink)
+            mask, corner = _mask(font, text, stroke)
+            self._stain(mask, x + corner[0], y + corner[1], ink)
         return x + left, y + top, x + right, y + bottom
-
-    @staticmethod
-    def _mask(
-        font: ImageFont.FreeTypeFont, text: str, part: tuple[float, float], stroke: float
-    ) -> tuple[NDArray[np.uint8], tuple[int, int]]:
-        """How much the letters cover of the pixels, and where the first of these lies."""
-        left, top, right, bottom = font.getbbox(text, anchor="ls", stroke_width=stroke)
-        x, y = int(np.floor(left)) - 1, int(np.floor(top)) - 1
-        image = Image.new("L", (int(np.ceil(right)) + 2 - x, int(np.ceil(bottom)) + 2 - y))
-        at = part[0] - x, part[1] - y
-        draw = ImageDraw.Draw(image)
-        draw.text(at, text, fill=255, font=font, anchor="ls", stroke_width=stroke)
-        return np.asarray(image), (x, y)
 
     def _stain(self, mask: NDArray[np.uint8], x: int, y: int, color: str) -> None:
         """Colour pixels as far as a mask (255 is all) says."""
@@ -276,6 +264,19 @@ class Canvas:
         under = flat[at].astype(np.float32)
         flat[at] = (under + (_rgb(color) - under) * part + np.float32(0.5)).astype(np.uint8)
         self._covered[at] = 0
+
+
+def _mask(
+    font: ImageFont.FreeTypeFont, text: str, stroke: float
+) -> tuple[NDArray[np.uint8], tuple[int, int]]:
+    """Give what letters cover of pixels, a pixel kept free all round, and where it begins."""
+    box = font.getbbox(text, anchor="ls", stroke_width=stroke)
+    left, top = (int(np.floor(v)) - 1 for v in box[:2])
+    right, bottom = (int(np.ceil(v)) + 1 for v in box[2:])
+    image = Image.new("L", (right - left, bottom - top))
+    draw = ImageDraw.Draw(image)
+    draw.text((-left, -top), text, fill=255, font=font, anchor="ls", stroke_width=stroke)
+    return np.asarray(image), (left, top)
 
 
 def _pieces(starts: Floats, ends: Floats) -> tuple[Floats, Floats]:
