@@ -169,51 +169,46 @@ def shade(heights, inverse, factor, level, suns, brightness, first, last, light)
 
 
 @inline
-def _tint(share, least):
-    """Strength of the colour of a class that holds a share of a pixel."""
-    return max(sqrt(share), least)
-
-
-@inline
-def _ink(means, x, y, light, inks, ramp, least, rgb):
-    """Colour one pixel by the shares of its classes and the light on it."""
+def _ink(means, y, inks, ramp, least, rgb):
+    """Colour a row by the shares of the classes and the light on each pixel."""
     kinds = means.shape[1] - 1
     steps = kinds - 4
-    unsure, hidden = means[x, kinds - UNRESOLVED], means[x, kinds - HIDDEN]
-    void, outside = means[x, kinds - VOID], means[x, kinds - OUTSIDE]
     ramped = ramp.shape[0] > 0
-    seen = 0.0
-    for k in range(steps):
-        seen += means[x, k]
-    judged = seen + unsure + hidden
-    some = max(judged, 1e-6)
-    doubt = _tint(unsure / some, least) if unsure > 0.0 else 0.0
-    sure = _tint(seen / some, least) if seen > 0.0 else 0.0
-    striped = doubt > 0.0 and (x + y) % 9 < 3
-    dotted = void > 0.5 and judged < 0.5 and x % 8 < 2 and (y + 4 * (x // 8 % 2)) % 8 < 2
-    for c in range(3):
-        v = 1.0
-        if outside > 0.0:
-            v = (0.95 if ramped else 0.93) + 0.05 * light
-        if dotted:
-            v = inks[DOT, c]
-        if judged > 0.0:
-            bare = 0.76 + 0.20 * light if ramped else 0.50 + 0.47 * light
-            v = bare * (1.0 if c == 0 else (0.995 if c == 1 else 0.975))
-        if doubt > 0.0:
-            v = v * (1.0 - doubt) + doubt * inks[UNSURE, c] * min(0.82 + 0.2 * light, 1.0)
-            if striped:
-                v = v * (1.0 - doubt) + doubt * inks[STRIPE, c]
-        if sure > 0.0:
-            if ramped:
-                ink = 0.0
-                for k in range(steps):
-                    ink += means[x, k] * ramp[k, c]
-                ink = ink / max(seen, 1e-6) * (0.88 + 0.15 * light)
-            else:
-                ink = inks[SEEN, c] * (0.5 + 0.75 * light)
-            v = v * (1.0 - sure) + sure * ink
-        rgb[y, x, c] = int(min(max(v, 0.0), 1.0) * 255.0 + 0.5)
+    for x in range(means.shape[0]):
+        unsure, light = means[x, kinds - UNRESOLVED], means[x, kinds]
+        void = means[x, kinds - VOID]
+        seen = 0.0
+        for k in range(steps):
+            seen += means[x, k]
+        judged = seen + unsure + means[x, kinds - HIDDEN]
+        some = 1.0 / max(judged, 1e-6)
+        doubt = max(sqrt(unsure * some), least) if unsure > 0.0 else 0.0
+        sure = max(sqrt(seen * some), least) if seen > 0.0 else 0.0
+        striped = doubt > 0.0 and (x + y) % 9 < 3
+        dotted = void > 0.5 and judged < 0.5 and x % 8 < 2 and (y + 4 * (x // 8 % 2)) % 8 < 2
+        for c in range(3):
+            v = 1.0
+            if means[x, kinds - OUTSIDE] > 0.0:
+                v = (0.95 if ramped else 0.93) + 0.05 * light
+            if dotted:
+                v = inks[DOT, c]
+            if judged > 0.0:
+                bare = 0.76 + 0.20 * light if ramped else 0.50 + 0.47 * light
+                v = bare * (1.0 if c == 0 else (0.995 if c == 1 else 0.975))
+            if doubt > 0.0:
+                v = v * (1.0 - doubt) + doubt * inks[UNSURE, c] * min(0.82 + 0.2 * light, 1.0)
+                if striped:
+                    v = v * (1.0 - doubt) + doubt * inks[STRIPE, c]
+            if sure > 0.0:
+                if ramped:
+                    ink = 0.0
+                    for k in range(steps):
+                        ink += means[x, k] * ramp[k, c]
+                    ink = ink / max(seen, 1e-6) * (0.88 + 0.15 * light)
+                else:
+                    ink = inks[SEEN, c] * (0.5 + 0.75 * light)
+                v = v * (1.0 - sure) + sure * ink
+            rgb[y, x, c] = int(min(max(v, 0.0), 1.0) * 255.0 + 0.5)
 
 
 @inline
@@ -314,4 +309,4 @@ def paint(shares, light, lattice, place, first, last, inks, ramp, least, nodes, 
                 found[1] = 1
             if means[x, kinds - OUTSIDE] > 0.0:
                 found[2] = 1
-            _ink(means, x, y, means[x, bright], inks, ramp, least, rgb)
+        _ink(means, y, inks, ramp, least, rgb)
