@@ -72,7 +72,8 @@ def test_build_refuses_what_is_no_json():
 def test_versions_of_everything_the_numbers_come_from():
     found = library_versions()
     assert {
-        "numpy", "numba", "rasterio", "geopandas", "pyogrio", "shapely", "matplotlib", "pyproj",
+        "numpy", "numba", "rasterio", "geopandas", "pyogrio", "shapely", "matplotlib", "pillow",
+        "pyproj",
     } <= set(found)  # fmt: skip
     assert found["GDAL"] == rasterio.__gdal_version__
     assert found["PROJ"] == geodesy.proj_version()

@@ -35,8 +35,8 @@ except (ImportError, OSError):  # pragma: no cover  (numba brings it)
 #: Version of the shape of the record; a record without one is of version 1.
 FORMAT_VERSION = 2
 _LIBRARIES = (
-    "affine", "geopandas", "llvmlite", "matplotlib", "numba", "numpy", "pyogrio", "pyproj",
-    "rasterio", "shapely",
+    "affine", "geopandas", "llvmlite", "matplotlib", "numba", "numpy", "pillow", "pyogrio",
+    "pyproj", "rasterio", "shapely",
 )  # fmt: skip
 
 
