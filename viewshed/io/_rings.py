@@ -1,17 +1,55 @@
-"""Patches of equal cells as polygons whose edges are edges of cells."""
+"""Patches of equal cells as polygons whose edges are edges of cells.
 
-from collections.abc import Iterator
-from typing import Any, NamedTuple
+The cells are gone through by strips of rows, three times: patches are joined, measured, and the
+corners of their rings are found. So memory holds a strip, a few numbers a patch and the corners.
+"""
+
+import zlib
+from collections.abc import Callable, Iterator
+from typing import Any, NamedTuple, Protocol
 
 import numpy as np
 import shapely
 from numpy.typing import NDArray
 
+from viewshed.constants import NODATA
+from viewshed.errors import DataError
 from viewshed.grid import CellAreas, FloatArray, Grid
 from viewshed.kernels import rings as k
 
 #: Cells that a kernel goes through at a time, so that Ctrl-C is heard.
 _CELLS_A_CALL = 1 << 22
+#: Corners that become polygons at a time, but for a single polygon that has more.
+_CORNERS_A_BATCH = 1 << 20
+#: Most corners whose nodes are told apart by 32 bits.
+_MOST_NARROW = 2**31 - 1
+
+
+#: A strip, its first row, the codes of states, and the runs of the last two rows.
+Strip = tuple[
+    NDArray[np.uint8],
+    int,
+    NDArray[np.uint8],
+    NDArray[np.int32],
+    NDArray[np.uint8],
+    NDArray[np.int32],
+    NDArray[np.int64],
+]
+
+
+class Rows(Protocol):
+    """States of cells that are read by slices of rows, like an array."""
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """Number of rows and columns."""
+
+    @property
+    def dtype(self) -> np.dtype[Any]:
+        """Type of the cells."""
+
+    def __getitem__(self, rows: slice, /) -> NDArray[Any]:
+        """Give some rows."""
 
 
 class Found(NamedTuple):
@@ -19,29 +57,95 @@ class Found(NamedTuple):
 
     Attributes
     ----------
-    patches : numpy.ndarray, shape (rows + 2, cols + 2)
-        Number of the patch of each cell, -1 for none, with a rim of one cell.
+    numbers : numpy.ndarray, shape (m,)
+        Number of the patch of each label, in the order in which the kernels meet them.
     code : numpy.ndarray, shape (n,)
         What the cells of each patch hold.
     cells : numpy.ndarray, shape (n,)
         Cells of each patch.
     area : numpy.ndarray, shape (n,)
         True area of each patch [m2].
+    corners : numpy.ndarray, shape (n,)
+        Corners of the rings of each patch.
     """
 
-    patches: NDArray[np.int32]
+    numbers: NDArray[np.int32]
     code: NDArray[np.uint8]
     cells: NDArray[np.int64]
     area: FloatArray
+    corners: NDArray[np.int64]
 
 
-def find_patches(codes: NDArray[np.uint8], areas: CellAreas) -> Found:
+class Sweep:
+    """The strips of an array, and the last row of the strip before, for the kernels.
+
+    Parameters
+    ----------
+    states : Rows
+        States of the cells, uint8.
+    code_of : numpy.ndarray, shape (256,)
+        Code of each state; cells of code 0 are in no patch.
+    rest : callable, optional
+        Called after each strip.
+    """
+
+    def __init__(
+        self, states: Rows, code_of: NDArray[np.uint8], rest: Callable[[], None] | None = None
+    ) -> None:
+        self.states = states
+        self.rows, self.cols = states.shape
+        self._code_of = code_of
+        self._rest = rest
+        self._sums: dict[int, int] = {}
+        self._step = max(1, _CELLS_A_CALL // self.cols)
+        self._room = np.empty((min(self._step, self.rows), self.cols), np.uint8)
+        runs = (2, self.cols + 1)
+        self._starts, self._codes = np.empty(runs, np.int32), np.empty(runs, np.uint8)
+        self._names, self._count = np.empty(runs, np.int32), np.empty(2, np.int64)
+
+    def strips(self) -> Iterator[Strip]:
+        """Give each strip, its first row and what the kernels need with them.
+
+        Raises
+        ------
+        DataError
+            If a strip is not what it was the time before.
+        """
+        self._start()
+        for first in range(0, self.rows, self._step):
+            strip = self._room[: min(self._step, self.rows - first)]
+            strip[...] = self.states[first : first + len(strip)]
+            found = zlib.crc32(strip.data)
+            if self._sums.setdefault(first, found) != found:
+                msg = f"the states changed in row {first} or later while they were read; run again"
+                raise DataError(msg)
+            yield self._with_runs(strip, first)
+            if self._rest is not None:
+                self._rest()
+
+    def end(self) -> Strip:
+        """Give a row without any patch as the last strip, which closes all rings."""
+        return self._with_runs(np.full((1, self.cols), NODATA, np.uint8), self.rows)
+
+    def _start(self) -> None:
+        """Let the row above the first one be without any patch."""
+        self._starts[1, :2] = 0, self.cols
+        self._codes[1, :2] = 0
+        self._names[1, :2] = k.NONE
+        self._count[1] = 1
+
+    def _with_runs(self, strip: NDArray[np.uint8], first: int) -> Strip:
+        runs = (self._starts, self._codes, self._names, self._count)
+        return strip, first, self._code_of, *runs
+
+
+def find_patches(sweep: Sweep, areas: CellAreas) -> Found:
     """Find the patches of cells that hold the same code.
 
     Parameters
     ----------
-    codes : numpy.ndarray, shape (rows, cols)
-        A code of each cell; cells with 0 are in no patch.
+    sweep : Sweep
+        The cells.
     areas : CellAreas
         True areas of the cells.
 
@@ -50,34 +154,42 @@ def find_patches(codes: NDArray[np.uint8], areas: CellAreas) -> Found:
     Found
         The patches.
     """
-    rows, cols = codes.shape
-    patches = np.full((rows + 2, cols + 2), k.NONE, np.int32)
     labels = np.empty(0, np.int32)
     used = 0
-    for first, last in _strips(rows, cols):
-        room = used + (last - first) * cols
+    for strip in sweep.strips():
+        room = used + strip[0].size
         if room > labels.size:
             grown = np.empty(max(room, 3 * used // 2), np.int32)
             grown[:used] = labels[:used]
             labels = grown
-        used = int(k.join(codes, patches, labels, used, first, last))
-    count = int(k.number(labels, used))
-    found = Found(patches, np.zeros(count, np.uint8), np.zeros(count, np.int64), np.zeros(count))
-    col_sums = np.zeros((areas.col_factors.shape[0], cols + 1))
+        used = int(k.join(*strip, labels, used))
+    n = int(k.number(labels, used))
+    found = Found(
+        labels[:used].copy(),
+        np.zeros(n, np.uint8),
+        np.zeros(n, np.int64),
+        np.zeros(n),
+        np.zeros(n, np.int64),
+    )
+    col_sums = np.zeros((areas.col_factors.shape[0], sweep.cols + 1))
     np.cumsum(areas.col_factors, axis=1, out=col_sums[:, 1:])
-    sums = (areas.row_factors, col_sums, found.code, found.cells, found.area)
-    for first, last in _strips(rows, cols):
-        k.measure(codes, patches, labels, *sums, first, last)
+    met = 0
+    sums = (areas.row_factors, col_sums, found.code, found.cells, found.area, found.corners)
+    for strip in sweep.strips():
+        met = k.measure(*strip, found.numbers, met, *sums)
+    k.measure(*sweep.end(), found.numbers, met, *sums)
     return found
 
 
-def outlines(found: Found, order: NDArray[np.intp], grid: Grid) -> NDArray[Any]:
+def outlines(sweep: Sweep, found: Found, order: NDArray[np.intp], grid: Grid) -> NDArray[Any]:
     """Give the polygons of some patches.
 
     Parameters
     ----------
+    sweep : Sweep
+        The cells.
     found : Found
-        The patches of an array.
+        Their patches.
     order : numpy.ndarray, shape (n,)
         Numbers of the patches that are wanted, in the order in which they are wanted.
     grid : Grid
@@ -89,56 +201,67 @@ def outlines(found: Found, order: NDArray[np.intp], grid: Grid) -> NDArray[Any]:
         A `shapely.Polygon` of each, outer ring anticlockwise. Corners of rings are corners of
         cells at which the ring turns; equal corners have equal coordinates to the last bit.
     """
-    wanted = np.zeros(found.code.size, np.bool_)
-    wanted[order] = True
-    corners, ring_patch, ring_end = _trace(found.patches, wanted)
-    rank = np.empty(found.code.size, np.int64)
-    rank[order] = np.arange(order.size)
-    by_rank = np.argsort(rank[ring_patch], kind="stable")
-    start = np.concatenate([[0], ring_end[:-1]])[by_rank]
-    length = np.diff(ring_end, prepend=0)[by_rank]
+    nodes, down_ranks = _trace(sweep, found, order)
+    first, rank, length = _link(nodes, down_ranks)
+    rings = np.argsort(rank, kind="stable")
+    ring_at = np.concatenate([[0], np.cumsum(length[rings] + 1, dtype=np.int64)])
+    polygon_at = np.searchsorted(rank[rings], np.arange(order.size + 1))
     t = grid.transform
-    if t.a * t.e - t.b * t.d > 0.0:  # a mirrored grid turns all rings round
-        source = _spread(start + length - 1, length, -1)
-    else:
-        source = _spread(start, length, 1)
-    row, col = corners[source].T
-    x, y = grid.xy(row - 0.5, col - 0.5)
-    rings = np.concatenate([[0], np.cumsum(length)])
-    polygons = np.searchsorted(rank[ring_patch[by_rank]], np.arange(order.size + 1))
-    coordinates = np.stack([x, y], axis=1)
-    made: NDArray[Any] = shapely.from_ragged_array(
-        shapely.GeometryType.POLYGON, coordinates, (rings, polygons)
-    )
+    backward = t.a * t.e - t.b * t.d > 0.0  # a mirrored grid turns all rings round
+    made = np.empty(order.size, object)
+    for begin, end in _batches(ring_at[polygon_at]):
+        a, b = polygon_at[[begin, end]]
+        corners = np.empty((ring_at[b] - ring_at[a], 2))
+        k.fill(nodes, rings[a:b], first, length, backward, corners)
+        for part in _parts(corners):
+            part[:, 0], part[:, 1] = grid.xy(part[:, 0] - 0.5, part[:, 1] - 0.5)
+        ends = (ring_at[a : b + 1] - ring_at[a], polygon_at[begin : end + 1] - a)
+        made[begin:end] = shapely.from_ragged_array(shapely.GeometryType.POLYGON, corners, ends)
     return made
 
 
 def _trace(
-    patches: NDArray[np.int32], wanted: NDArray[np.bool_]
-) -> tuple[NDArray[np.int32], NDArray[np.int32], NDArray[np.int64]]:
-    """Give the closed rings of wanted patches: corners, patch of each ring, end of each ring."""
-    rows, cols = patches.shape[0] - 2, patches.shape[1] - 2
-    strips = list(_strips(rows, cols))
-    count = sum(int(k.count_corners(patches, wanted, *strip)) for strip in strips)
-    most = count // 4  # rings, each with four corners or more and one to close it
-    corners = np.empty((count + most, 2), np.int32)
-    ring_patch, ring_end = np.empty(most, np.int32), np.empty(most, np.int64)
-    walked = np.zeros((rows, cols), np.uint8)
-    rings = 0
-    for strip in strips:
-        rings = int(k.trace(patches, wanted, walked, corners, ring_patch, ring_end, rings, *strip))
-    return corners, ring_patch[:rings], ring_end[:rings]
+    sweep: Sweep, found: Found, order: NDArray[np.intp]
+) -> tuple[NDArray[Any], NDArray[np.int32]]:
+    """Give the corners of the rings of wanted patches, and whose those are that leave downward."""
+    ranks = np.full(found.code.size, k.NONE, np.int32)
+    ranks[order] = np.arange(order.size)
+    ranks = ranks[found.numbers]
+    corners = int(np.sum(found.corners[order]))
+    kind = np.int32 if corners <= _MOST_NARROW else np.int64
+    nodes, down_ranks = np.empty((corners, 3), kind), np.empty(corners // 2, np.int32)
+    down, up = np.empty((2, sweep.cols + 1), np.int64)
+    at, met = np.zeros(2, np.int64), 0
+    for strip in sweep.strips():
+        met = k.trace(*strip, ranks, met, down, up, nodes, at, down_ranks)
+    k.trace(*sweep.end(), ranks, met, down, up, nodes, at, down_ranks)
+    return nodes, down_ranks
 
 
-def _spread(first: NDArray[np.int64], length: NDArray[np.int64], step: int) -> NDArray[np.int64]:
-    """Count on from each `first` in steps, `length` times."""
-    before = np.cumsum(length) - length
-    spread: NDArray[np.int64] = np.repeat(first - step * before, length)
-    spread += step * np.arange(spread.size)
-    return spread
+def _link(
+    nodes: NDArray[Any], down_ranks: NDArray[np.int32]
+) -> tuple[NDArray[np.int64], NDArray[np.int32], NDArray[np.int64]]:
+    """Give the rings of corners: the first one, whose it is, and how many there are."""
+    most = len(nodes) // 4
+    first, length = np.empty((2, most), np.int64)
+    rank = np.empty(most, np.int32)
+    downs = rings = 0
+    for begin in range(0, len(nodes), _CORNERS_A_BATCH):
+        end = min(begin + _CORNERS_A_BATCH, len(nodes))
+        downs, rings = k.link(nodes, down_ranks, begin, end, downs, rings, first, rank, length)
+    return first[:rings], rank[:rings], length[:rings]
 
 
-def _strips(rows: int, cols: int) -> Iterator[tuple[int, int]]:
-    step = max(1, _CELLS_A_CALL // cols)
-    for first in range(0, rows, step):
-        yield first, min(rows, first + step)
+def _batches(at: NDArray[np.int64]) -> Iterator[tuple[int, int]]:
+    """Cut polygons, of which each begins `at` a corner, into batches of about as many corners."""
+    begin = 0
+    while begin < at.size - 1:
+        end = int(np.searchsorted(at, at[begin] + _CORNERS_A_BATCH, "right")) - 1
+        end = max(end, begin + 1)
+        yield begin, end
+        begin = end
+
+
+def _parts(corners: FloatArray) -> Iterator[FloatArray]:
+    for begin in range(0, len(corners), _CORNERS_A_BATCH):
+        yield corners[begin : begin + _CORNERS_A_BATCH]

@@ -1,6 +1,6 @@
 """Patches of cells of one state as polygons, and the files that hold them."""
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from math import isfinite
 from typing import Any
@@ -15,7 +15,7 @@ from viewshed.atmosphere import Refraction
 from viewshed.constants import HIDDEN, UNRESOLVED, VISIBLE
 from viewshed.errors import InputError
 from viewshed.grid import CellAreas, Grid
-from viewshed.io._rings import Found, find_patches, outlines
+from viewshed.io._rings import Found, Rows, Sweep, find_patches, outlines
 from viewshed.io._vector import FORMATS, write_polygons
 
 __all__ = ["FORMATS", "STATES", "Patches", "join_patches", "polygonise", "write_polygons"]
@@ -53,7 +53,7 @@ class Patches:
 
 
 def polygonise(
-    visible: NDArray[np.uint8],
+    visible: NDArray[np.uint8] | Rows,
     grid: Grid,
     areas: CellAreas,
     *,
@@ -61,6 +61,7 @@ def polygonise(
     k: float,
     states: tuple[str, ...] = ("visible", "unresolved"),
     min_patch_m2: float = 0.0,
+    rest: Callable[[], None] | None = None,
 ) -> Patches:
     """Make polygons of the patches of cells that have the same state.
 
@@ -71,7 +72,8 @@ def polygonise(
     Parameters
     ----------
     visible : numpy.ndarray, shape (rows, cols)
-        States of the cells: 1 visible, 0 hidden, 2 unresolved, 255 no data.
+        States of the cells: 1 visible, 0 hidden, 2 unresolved, 255 no data. It is read by strips of
+        rows, each three times, and never copied whole, so it may be mapped from a file.
     grid : Grid
         Where the cells are.
     areas : CellAreas
@@ -85,6 +87,8 @@ def polygonise(
     min_patch_m2 : float, optional
         Patches with a smaller true area are left out [m2]. They leave a gap: neither are they
         given to another state nor are holes in other patches filled.
+    rest : callable, optional
+        Called after each strip of rows, without arguments.
 
     Returns
     -------
@@ -95,11 +99,12 @@ def polygonise(
     ------
     InputError
         If arrays and grid do not fit together, or a state, `min_patch_m2` or `k` is not usable.
+    DataError
+        If the states change while they are read.
     """
-    values = np.asarray(visible)
-    if values.dtype != np.uint8 or values.shape != grid.shape or areas.shape != grid.shape:
+    if visible.dtype != np.uint8 or visible.shape != grid.shape or areas.shape != grid.shape:
         msg = (
-            f"states of type {values.dtype} and shape {values.shape} and areas of shape "
+            f"states of type {visible.dtype} and shape {visible.shape} and areas of shape "
             f"{areas.shape} do not fit the grid of shape {grid.shape}; give uint8 and one grid"
         )
         raise InputError(msg)
@@ -110,14 +115,17 @@ def polygonise(
     if not (isfinite(min_patch_m2) and min_patch_m2 >= 0.0):
         msg = f"least area {min_patch_m2!r} of a patch is not usable; give 0 or more [m2]"
         raise InputError(msg)
+    refraction = Refraction(float(k))
     code_of_value = np.zeros(256, np.uint8)
     for code, (state, value) in enumerate(STATES.items(), 1):
         code_of_value[value] = code if state in states else 0
-    found = find_patches(code_of_value[values], areas)
+    sweep = Sweep(visible, code_of_value, rest)
+    found = find_patches(sweep, areas)
     keep = found.area >= min_patch_m2
     chosen = np.flatnonzero(keep)
     order = chosen[np.lexsort((-found.area[chosen], found.code[chosen]))]
-    frame = _frame(found, order, grid, observer, Refraction(float(k)))
+    geometry = outlines(sweep, found, order, grid)
+    frame = _frame(found, order, geometry, grid, observer, refraction)
     return Patches(frame, _left_out(found, ~keep, states))
 
 
@@ -133,7 +141,12 @@ def join_patches(found: Sequence[Patches]) -> Patches:
 
 
 def _frame(
-    found: Found, order: NDArray[np.intp], grid: Grid, observer: str, refraction: Refraction
+    found: Found,
+    order: NDArray[np.intp],
+    geometry: NDArray[Any],
+    grid: Grid,
+    observer: str,
+    refraction: Refraction,
 ) -> geopandas.GeoDataFrame:
     crs = geodesy.crs_from_user(grid.crs_wkt)
     unit, t = geodesy.horizontal_unit_factor(crs), grid.transform
@@ -147,7 +160,6 @@ def _frame(
         "refr_k": np.full(order.size, refraction.k),
         "earth_fac": np.full(order.size, refraction.K),
     }
-    geometry = outlines(found, order, grid)
     return geopandas.GeoDataFrame(columns, geometry=geometry, crs=crs.to_2d().to_wkt("WKT2_2019"))
 
 

@@ -1,4 +1,4 @@
-"""Patches of cells with one code, and the rings along their edges.
+"""Patches of cells of one state, and the rings along their edges, row by row.
 
 A patch is a set of cells of one code that hang together by their edges (4-connected). Its rings
 run along edges of cells with the patch on the left, rows counted downward, so on a north-up map
@@ -6,15 +6,35 @@ the outer ring runs anticlockwise and holes run clockwise. Where two cells of a 
 corner alone, the ring crosses over from one to the other: as the patch is joined elsewhere, the
 two other cells at that corner are parted by it, and so no ring ever meets itself.
 
-Arrays of patches have a rim of one cell on all sides that belongs to no patch, so row r and
-column c of the grid are at [r + 1, c + 1] there. Corner (r, c) is the top left one of a cell.
+Rows come in strips, any number at a time, and of the rows before only the last one is kept, as
+*runs*: cells of one state side by side. Run i of row r begins at column starts[k, i], holds
+codes[k, i] and is called names[k, i], with k the parity of r; there are count[k] runs, and behind
+the last one stands one more of code 0 that begins where the row ends. A code of 0 is in no patch.
+Corner (r, c) is the top left one of a cell.
 """
 
 from viewshed._jit import inline, kernel
 
 NONE = -1
-#: Directions of a step along a ring.
-DOWN, RIGHT, UP, LEFT = 0, 1, 2, 3
+
+
+@inline
+def find_runs(states, r, code_of, k, starts, codes):
+    """Find the runs of row r of a strip; return how many."""
+    cols = states.shape[1]
+    n = 0
+    c = 0
+    while c < cols:
+        state = states[r, c]
+        starts[k, n] = c
+        codes[k, n] = code_of[state]
+        n += 1
+        c += 1
+        while c < cols and states[r, c] == state:
+            c += 1
+    starts[k, n] = cols
+    codes[k, n] = 0
+    return n
 
 
 @inline
@@ -27,36 +47,42 @@ def root_of(parent, label):
 
 
 @kernel
-def join(codes, patches, parent, n, first, last):
-    """Label the cells of rows first to last - 1; return the number of labels so far.
+def join(states, first, code_of, starts, codes, names, count, parent, n):
+    """Label the runs of a strip that begins with row `first`; return the number of labels so far.
 
-    Code 0 is in no patch. `parent` needs room for one label a cell of these rows.
+    A run that touches none of its code in the row above gets a new label; labels of one patch are
+    joined in `parent`, which needs room for one label a cell of the strip.
     """
-    for r in range(first, last):
-        for c in range(codes.shape[1]):
-            code = codes[r, c]
+    for r in range(states.shape[0]):
+        k = (first + r) % 2
+        p = 1 - k
+        count[k] = find_runs(states, r, code_of, k, starts, codes)
+        j = 0
+        for i in range(count[k]):
+            code = codes[k, i]
+            names[k, i] = NONE
             if code == 0:
-                patches[r + 1, c + 1] = NONE
                 continue
-            above, before = NONE, NONE
-            if r > 0 and codes[r - 1, c] == code:
-                above = root_of(parent, patches[r, c + 1])
-            if c > 0 and codes[r, c - 1] == code:
-                before = root_of(parent, patches[r + 1, c])
-            if above == NONE and before == NONE:
+            own = NONE
+            while starts[p, j + 1] <= starts[k, i]:
+                j += 1
+            q = j
+            while q < count[p] and starts[p, q] < starts[k, i + 1]:
+                if codes[p, q] == code:
+                    root = root_of(parent, names[p, q])
+                    if own == NONE:
+                        own = root
+                    elif root < own:
+                        parent[own] = root
+                        own = root
+                    elif own < root:
+                        parent[root] = own
+                q += 1
+            if own == NONE:
+                own = n
                 parent[n] = n
-                patches[r + 1, c + 1] = n
                 n += 1
-            elif above == NONE:
-                patches[r + 1, c + 1] = before
-            elif before == NONE:
-                patches[r + 1, c + 1] = above
-            else:
-                kept, gone = above, before
-                if before < above:
-                    kept, gone = before, above
-                parent[gone] = kept
-                patches[r + 1, c + 1] = kept
+            names[k, i] = own
     return n
 
 
@@ -76,106 +102,226 @@ def number(parent, n):
     return count
 
 
-@kernel
-def measure(codes, patches, numbers, row_factors, col_sums, code_of, cells, area, first, last):
-    """Put numbers of patches for labels in rows first to last - 1, and sum up the patches.
+@inline
+def name_runs(k, starts, codes, names, count, name_of, n):
+    """Name the runs of a row by the names of labels; return the number of labels so far.
 
-    The area of a run of cells from column a to b - 1 of row r is the sum over k of
-    row_factors[r, k] * (col_sums[k, b] - col_sums[k, a]).
+    Labels are met in the same order as by `join`.
     """
-    cols = codes.shape[1]
-    for r in range(first, last):
-        c = 0
-        while c < cols:
-            if codes[r, c] == 0:
-                c += 1
-                continue
-            patch = numbers[patches[r + 1, c + 1]]
-            start = c
-            while c < cols and codes[r, c] == codes[r, start]:
-                patches[r + 1, c + 1] = patch
-                c += 1
-            code_of[patch] = codes[r, start]
-            cells[patch] += c - start
-            for k in range(row_factors.shape[1]):
-                area[patch] += row_factors[r, k] * (col_sums[k, c] - col_sums[k, start])
+    p = 1 - k
+    j = 0
+    for i in range(count[k]):
+        code = codes[k, i]
+        names[k, i] = NONE
+        if code == 0:
+            continue
+        while starts[p, j + 1] <= starts[k, i]:
+            j += 1
+        q = j
+        while q < count[p] and starts[p, q] < starts[k, i + 1] and codes[p, q] != code:
+            q += 1
+        if q < count[p] and starts[p, q] < starts[k, i + 1]:
+            names[k, i] = names[p, q]
+        else:
+            names[k, i] = name_of[n]
+            n += 1
+    return n
 
 
 @kernel
-def count_corners(patches, wanted, first, last):
-    """Count the corners of the rings of wanted patches, cell by cell of rows first to last - 1."""
-    found = 0
-    for r in range(first + 1, last + 1):
-        for c in range(1, patches.shape[1] - 1):
-            own = patches[r, c]
-            if own == NONE or not wanted[own]:
+def measure(
+    states, first, code_of, starts, codes, names, count, numbers, n,
+    row_factors, col_sums, code_in, cells, area, corners,
+):  # fmt: skip
+    """Sum up the patches over the runs of a strip; return the number of labels so far.
+
+    The area of a run from column a to b - 1 of row r is the sum over m of
+    row_factors[r, m] * (col_sums[m, b] - col_sums[m, a]). `corners` counts those of the rings,
+    in the line of corners above each row.
+    """
+    for r in range(states.shape[0]):
+        k = (first + r) % 2
+        count[k] = find_runs(states, r, code_of, k, starts, codes)
+        n = name_runs(k, starts, codes, names, count, numbers, n)
+        for i in range(count[k]):
+            patch = names[k, i]
+            if patch == NONE:
                 continue
-            for dr in (-1, 1):
-                for dc in (-1, 1):
-                    beside = patches[r, c + dc] == own
-                    over = patches[r + dr, c] == own
-                    if beside == over and (not beside or patches[r + dr, c + dc] != own):
-                        found += 1
-    return found
+            code_in[patch] = codes[k, i]
+            a, b = starts[k, i], starts[k, i + 1]
+            cells[patch] += b - a
+            for m in range(row_factors.shape[1]):
+                area[patch] += row_factors[first + r, m] * (col_sums[m, b] - col_sums[m, a])
+        count_corners(k, starts, names, count, corners)
+    return n
 
 
 @inline
-def turn(patches, own, r, c, direction):
-    """Direction in which a ring leaves corner (r, c)."""
-    if direction == DOWN:
-        left, right = patches[r + 1, c + 1], patches[r + 1, c]
-    elif direction == RIGHT:
-        left, right = patches[r, c + 1], patches[r + 1, c + 1]
-    elif direction == UP:
-        left, right = patches[r, c], patches[r, c + 1]
-    else:
-        left, right = patches[r + 1, c], patches[r, c]
-    if right == own:
-        return (direction + 3) % 4
-    if left == own:
-        return direction
-    return (direction + 1) % 4
+def count_corners(k, starts, names, count, corners):
+    """Count the corners of rings on the line above a row, by patch."""
+    p = 1 - k
+    i, j, c = 0, 0, 0
+    nw, ne, sw, se = NONE, NONE, NONE, NONE
+    names[k, count[k]] = NONE
+    names[p, count[p]] = NONE
+    end = starts[k, count[k]]
+    while True:
+        if starts[p, j] == c:
+            ne = names[p, j]
+            j += 1
+        if starts[k, i] == c:
+            se = names[k, i]
+            i += 1
+        if (nw != ne or sw != se) and (nw != sw or ne != se):
+            if nw != NONE and (nw == ne) == (nw == sw) and (nw != ne or nw != se):
+                corners[nw] += 1
+            if ne != NONE and (ne == nw) == (ne == se) and (ne != nw or ne != sw):
+                corners[ne] += 1
+            if sw != NONE and (sw == nw) == (sw == se) and (sw != nw or sw != ne):
+                corners[sw] += 1
+            if se != NONE and (se == ne) == (se == sw) and (se != ne or se != nw):
+                corners[se] += 1
+        if c == end:
+            return
+        nw, sw = ne, se
+        c = min(starts[p, j], starts[k, i])
 
 
 @kernel
-def trace(patches, wanted, walked, corners, ring_patch, ring_end, rings, first, last):
-    """Trace the rings that begin in rows first to last - 1; return the number of rings so far.
+def trace(
+    states, first, code_of, starts, codes, names, count, ranks, n,
+    down, up, nodes, at, down_ranks,
+):  # fmt: skip
+    """Find the corners of rings on the line above each row of a strip; return labels so far.
 
-    A ring begins at its first left edge in the order of cells, so the first ring of a patch is
-    its outer one. `corners` gets row and column of each corner, the first one again at the end of
-    a ring; ring i ends before corner ring_end[i]. `walked` marks left edges that are done.
+    `ranks` is the rank of the patch of each label, NONE where it is not wanted. A node is a
+    corner of a ring: its row, its column and the node that follows. Rings run both with the
+    sweep and against it, so a node that comes first waits: down[c] and up[c] at the edge below
+    that it leaves and that it is reached by. at[0] counts nodes, at[1] those that leave downward,
+    of which `down_ranks` tells the rank of the patch.
     """
+    for r in range(states.shape[0]):
+        k = (first + r) % 2
+        count[k] = find_runs(states, r, code_of, k, starts, codes)
+        n = name_runs(k, starts, codes, names, count, ranks, n)
+        trace_line(first + r, starts, names, count, down, up, nodes, at, down_ranks)
+    return n
+
+
+@inline
+def trace_line(r, starts, names, count, down, up, nodes, at, down_ranks):
+    """Find the corners of rings on the line above row r."""
+    k = r % 2
+    p = 1 - k
+    i, j, c = 0, 0, 0
+    nw, ne, sw, se = NONE, NONE, NONE, NONE
+    names[k, count[k]] = NONE
+    names[p, count[p]] = NONE
+    end = starts[k, count[k]]
+    right, left = NONE, NONE  # the node that left to the right, and the one reached from there
+    while True:
+        if starts[p, j] == c:
+            ne = names[p, j]
+            j += 1
+        if starts[k, i] == c:
+            se = names[k, i]
+            i += 1
+        if (nw != ne or sw != se) and (nw != sw or ne != se):
+            from_left, to_left, from_above, to_above = NONE, NONE, NONE, NONE
+            from_right, to_right, from_below, to_below = NONE, NONE, NONE, NONE
+            node = at[0]
+            if nw != NONE and nw != ne and nw != sw:
+                from_left, to_above = node, node
+                node += 1
+            if se != NONE and se != ne and se != sw:
+                from_right, to_below = node, node
+                node += 1
+                if se == nw:
+                    to_above, to_below = to_below, to_above
+            if ne != NONE and ne != nw and ne != se:
+                from_above, to_right = node, node
+                node += 1
+            if sw != NONE and sw != nw and sw != se:
+                from_below, to_left = node, node
+                node += 1
+                if sw == ne:
+                    to_right, to_left = to_left, to_right
+            if nw == ne and nw == sw and nw != NONE:
+                from_below, to_right = node, node
+                node += 1
+            elif nw == ne and nw == se and nw != NONE:
+                from_left, to_below = node, node
+                node += 1
+            elif nw == sw and nw == se and nw != NONE:
+                from_right, to_above = node, node
+                node += 1
+            elif ne == sw and ne == se and ne != NONE:
+                from_above, to_left = node, node
+                node += 1
+            for new in range(at[0], node):
+                nodes[new, 0], nodes[new, 1] = r, c
+            at[0] = node
+            if from_above != NONE:
+                nodes[down[c], 2] = from_above
+            if to_above != NONE:
+                nodes[to_above, 2] = up[c]
+            if from_left != NONE:
+                nodes[right, 2] = from_left
+            if to_left != NONE:
+                nodes[to_left, 2] = left
+            if from_below != NONE:
+                up[c] = from_below
+            if to_right != NONE:
+                right = to_right
+            if from_right != NONE:
+                left = from_right
+            if to_below != NONE:
+                down[c] = to_below
+                down_ranks[at[1]] = se
+                at[1] += 1
+        if c == end:
+            return
+        nw, sw = ne, se
+        c = min(starts[p, j], starts[k, i])
+
+
+@kernel
+def link(nodes, down_ranks, first, last, downs, rings, ring_first, ring_rank, ring_length):
+    """Find the rings that begin at nodes first to last - 1; return downs and rings so far.
+
+    A ring begins where it first leaves downward in the order of cells, so the first ring of a
+    patch is its outer one. Nodes that are done have -1 - x for the node x that follows.
+    """
+    for begin in range(first, last):
+        after = nodes[begin, 2]
+        done = after < 0
+        if done:
+            after = -1 - after
+        if nodes[after, 0] <= nodes[begin, 0]:
+            continue
+        rank = down_ranks[downs]
+        downs += 1
+        if done:
+            continue
+        node, length = begin, 0
+        while nodes[node, 2] >= 0:
+            after = nodes[node, 2]
+            nodes[node, 2] = -1 - after
+            node = after
+            length += 1
+        ring_first[rings], ring_rank[rings], ring_length[rings] = begin, rank, length
+        rings += 1
+    return downs, rings
+
+
+@kernel
+def fill(nodes, chosen, ring_first, ring_length, backward, row_col):
+    """Write row and column of the corners of chosen rings, the first again at the end of each."""
     at = 0
-    if rings > 0:
-        at = ring_end[rings - 1]
-    for row in range(first, last):
-        for col in range(walked.shape[1]):
-            own = patches[row + 1, col + 1]
-            if own == NONE or patches[row + 1, col] == own or walked[row, col] != 0:
-                continue
-            if not wanted[own]:
-                continue
-            r, c, direction = row, col, DOWN
-            corners[at, 0], corners[at, 1] = r, c
-            at += 1
-            while True:
-                if direction == DOWN:
-                    walked[r, c] = 1
-                    r += 1
-                elif direction == RIGHT:
-                    c += 1
-                elif direction == UP:
-                    r -= 1
-                else:
-                    c -= 1
-                way = turn(patches, own, r, c, direction)
-                if way != direction:
-                    corners[at, 0], corners[at, 1] = r, c
-                    at += 1
-                    direction = way
-                    if r == row and c == col and way == DOWN:
-                        break
-            ring_patch[rings] = own
-            ring_end[rings] = at
-            rings += 1
-    return rings
+    for ring in chosen:
+        node, length = ring_first[ring], ring_length[ring]
+        for step in range(length + 1):
+            to = at + length - step if backward else at + step
+            row_col[to, 0], row_col[to, 1] = nodes[node, 0], nodes[node, 1]
+            node = -1 - nodes[node, 2]
+        at += length + 1
