@@ -120,7 +120,7 @@ def polygons_command(ctx: click.Context, /, **given: Any) -> None:
     from viewshed.areas import cell_areas
     from viewshed.io._beside import check_place, placed
     from viewshed.io._vector import SIDE_SUFFIXES, check_format, file_names
-    from viewshed.io._visible import read_visible
+    from viewshed.io._visible import open_visible
     from viewshed.io.polygons import polygonise, write_polygons
 
     began, out, fmt = time.perf_counter(), given["out"], given["out"].suffix[1:]
@@ -131,16 +131,16 @@ def polygons_command(ctx: click.Context, /, **given: Any) -> None:
         "overwrite": given["overwrite"],
     }
     check_place(out.parent, names, **place)
-    seen = read_visible(given["raster"])
-    patches = polygonise(
-        seen.visible,
-        seen.grid,
-        cell_areas(seen.grid),
-        observer=given["observer"] or seen.observer,
-        k=seen.k,
-        states=given["states"],
-        min_patch_m2=given["min_patch_m2"],
-    )
+    with open_visible(given["raster"]) as seen:
+        patches = polygonise(
+            seen.visible,
+            seen.grid,
+            cell_areas(seen.grid),
+            observer=given["observer"] or seen.observer,
+            k=seen.k,
+            states=given["states"],
+            min_patch_m2=given["min_patch_m2"],
+        )
     with placed(out.parent, names, **place) as folder:
         write_polygons(folder / out.stem, patches.frame, fmt)
     if verbosity(ctx) >= 0:
