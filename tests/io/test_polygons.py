@@ -1,5 +1,7 @@
 """Polygons of a map: they tile it, they are valid, and their areas are those of the cells."""
 
+import itertools
+
 import numpy as np
 import pytest
 import shapely
@@ -11,7 +13,7 @@ from pyproj import CRS
 from rasterio.features import rasterize
 
 from viewshed.areas import cell_areas
-from viewshed.errors import InputError
+from viewshed.errors import DataError, InputError
 from viewshed.grid import CellAreas, Grid
 from viewshed.io import _rings
 from viewshed.io.polygons import STATES, polygonise
@@ -260,15 +262,146 @@ def test_only_states_asked_for():
     assert list(patches.left_out) == ["hidden"]
 
 
-def test_strips_give_the_same_as_one_piece(monkeypatch):
-    visible = states_at_random((60, 40), values=(0, 0, 1))
-    whole = make(visible).frame
-    monkeypatch.setattr(_rings, "_CELLS_A_CALL", 80)
-    parts = make(visible).frame
+# --- strips of rows -------------------------------------------------------------------------------
+
+
+def plain_patches(visible):
+    """Cells of each patch, found by walking from cell to cell, in the order of first cells."""
+    free = {(int(r), int(c)) for r, c in np.argwhere(visible != 255)}
+    found = []
+    while free:
+        cells, edge = set(), [min(free)]
+        while edge:
+            r, c = edge.pop()
+            if (r, c) in free and (not cells or visible[r, c] == visible[min(cells)]):
+                free.remove((r, c))
+                cells.add((r, c))
+                edge += [(r + 1, c), (r - 1, c), (r, c + 1), (r, c - 1)]
+        found.append(cells)
+    return found
+
+
+def plain_edges(cells):
+    """Edges between cells of a patch and others, from corner to corner, the patch on the left."""
+    edges = set()
+    for r, c in cells:
+        corners = [(r, c), (r + 1, c), (r + 1, c + 1), (r, c + 1)]  # down, right, up, left
+        others = [(r, c - 1), (r + 1, c), (r, c + 1), (r - 1, c)]
+        for i, other in enumerate(others):
+            if other not in cells:
+                edges.add((corners[i], corners[(i + 1) % 4]))
+    return edges
+
+
+def edges_of(polygon, grid):
+    """Edges of cells that the rings of a polygon run along, from corner to corner."""
+    edges = []
+    for ring in (polygon.exterior, *polygon.interiors):
+        row, col = (np.rint(v + 0.5).astype(int) for v in grid.rowcol(*np.array(ring.coords).T))
+        corners = list(zip(row.tolist(), col.tolist(), strict=True))
+        for (r, c), (to_r, to_c) in itertools.pairwise(corners):
+            n = abs(to_r - r) + abs(to_c - c)
+            steps = [(r + (to_r - r) * i // n, c + (to_c - c) * i // n) for i in range(n + 1)]
+            edges += itertools.pairwise(steps)
+    return edges
+
+
+@given(
+    arrays.arrays(
+        np.uint8,
+        st.tuples(st.integers(1, 9), st.integers(1, 9)),
+        elements=st.sampled_from([0, 1, 1, 2, 255]),
+    ),
+    st.integers(1, 3),
+    st.sampled_from([0.0, 1500.0]),
+)
+def test_strips_agree_with_a_plain_walk_from_cell_to_cell(visible, rows_a_strip, least):
+    _, grid = scene(visible)
+    areas = cell_areas(grid)
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(_rings, "_CELLS_A_CALL", rows_a_strip * grid.cols)
+        patch.setattr(_rings, "_CORNERS_A_BATCH", 10)
+        frame = make(visible, min_patch_m2=least).frame
+    plain = {}
+    for cells in plain_patches(visible):
+        area = float(np.sum(areas.at(*np.transpose(list(cells)))))
+        if area >= least:
+            plain[frozenset(plain_edges(cells))] = visible[min(cells)], area
+    found = {}
+    for state, area, polygon in zip(frame.state, frame.area_m2, frame.geometry, strict=True):
+        edges = edges_of(polygon, grid)
+        assert len(set(edges)) == len(edges)
+        found[frozenset(edges)] = STATES[state], area
+    assert found.keys() == plain.keys()
+    for edges, facts in found.items():
+        assert facts == pytest.approx(plain[edges], rel=1e-12)
+    order = [(list(STATES).index(s), -a) for s, a in zip(frame.state, frame.area_m2, strict=True)]
+    assert order == sorted(order)
+    assert np.all(shapely.is_valid(frame.geometry.to_numpy()))
+
+
+SNAKES = np.array([[1, 1, 1, 1, 1], [0, 0, 0, 0, 1], [1, 1, 1, 0, 1], [1, 0, 0, 0, 1]] * 12)
+
+
+@pytest.mark.parametrize("visible", [states_at_random((60, 40), values=(0, 0, 1)), SNAKES])
+@pytest.mark.parametrize("least", [0.0, 5000.0])
+@pytest.mark.parametrize("transform", [TRANSFORMS["turned"], TRANSFORMS["south up"]])
+@pytest.mark.parametrize(
+    ("name", "value"),
+    [("_CELLS_A_CALL", 1), ("_CELLS_A_CALL", 120), ("_CORNERS_A_BATCH", 7), ("_MOST_NARROW", 9)],
+)
+def test_pieces_give_the_same_as_the_whole(monkeypatch, visible, least, transform, name, value):
+    whole = make(visible, transform, min_patch_m2=least).frame
+    monkeypatch.setattr(_rings, name, value)
+    parts = make(visible, transform, min_patch_m2=least).frame
     assert parts.drop(columns="geometry").equals(whole.drop(columns="geometry"))
     assert shapely.to_wkb(parts.geometry.to_numpy()).tolist() == [
         *shapely.to_wkb(whole.geometry.to_numpy())
     ]
+
+
+class Watched:
+    """Rows that note what is asked of them, and change after some strips."""
+
+    def __init__(self, visible, lasts=10**6):
+        self.visible, self.lasts = visible, lasts
+        self.shape, self.dtype, self.asked = visible.shape, visible.dtype, []
+
+    def __getitem__(self, rows):
+        self.asked.append(rows)
+        return self.visible[rows] if len(self.asked) <= self.lasts else 1 - self.visible[rows]
+
+
+def test_rows_are_asked_for_strip_by_strip_with_a_rest_after_each(monkeypatch):
+    visible, grid = scene(states_at_random((7, 40)))
+    monkeypatch.setattr(_rings, "_CELLS_A_CALL", 3 * 40)
+    rows, rests = Watched(visible), []
+    polygonise(
+        rows, grid, cell_areas(grid), observer="o", k=0.13, rest=lambda: rests.append(len(rests))
+    )
+    assert rows.asked == [slice(0, 3), slice(3, 6), slice(6, 7)] * 3
+    assert len(rests) == 9
+
+
+def test_states_may_be_a_view_or_mapped_from_a_file(tmp_path):
+    visible = states_at_random((30, 20))
+    visible.tofile(tmp_path / "states")
+    mapped = np.memmap(tmp_path / "states", np.uint8, "r", shape=visible.shape)
+    want = make(visible).frame
+    _, grid = scene(visible)
+    for given_states in (mapped, np.asfortranarray(visible), np.repeat(visible, 2, 1)[:, ::2]):
+        found = polygonise(
+            given_states, grid, cell_areas(grid), observer="mast", k=0.13, states=ALL
+        ).frame
+        assert found.equals(want)
+
+
+@pytest.mark.parametrize("lasts", [3, 4, 8])
+def test_states_that_change_while_they_are_read_are_refused(monkeypatch, lasts):
+    visible, grid = scene(states_at_random((6, 40), values=(0, 1)))
+    monkeypatch.setattr(_rings, "_CELLS_A_CALL", 2 * 40)
+    with pytest.raises(DataError, match=r"the states changed in row [024] or later .*; run again"):
+        polygonise(Watched(visible, lasts), grid, cell_areas(grid), observer="o", k=0.13)
 
 
 @pytest.mark.parametrize(

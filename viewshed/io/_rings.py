@@ -15,12 +15,13 @@ from numpy.typing import NDArray
 from viewshed.constants import NODATA
 from viewshed.errors import DataError
 from viewshed.grid import CellAreas, FloatArray, Grid
+from viewshed.io._batches import CORNERS, batches
 from viewshed.kernels import rings as k
 
 #: Cells that a kernel goes through at a time, so that Ctrl-C is heard.
 _CELLS_A_CALL = 1 << 22
 #: Corners that become polygons at a time, but for a single polygon that has more.
-_CORNERS_A_BATCH = 1 << 20
+_CORNERS_A_BATCH = CORNERS
 #: Most corners whose nodes are told apart by 32 bits.
 _MOST_NARROW = 2**31 - 1
 
@@ -209,7 +210,7 @@ def outlines(sweep: Sweep, found: Found, order: NDArray[np.intp], grid: Grid) ->
     t = grid.transform
     backward = t.a * t.e - t.b * t.d > 0.0  # a mirrored grid turns all rings round
     made = np.empty(order.size, object)
-    for begin, end in _batches(ring_at[polygon_at]):
+    for begin, end in batches(ring_at[polygon_at], _CORNERS_A_BATCH):
         a, b = polygon_at[[begin, end]]
         corners = np.empty((ring_at[b] - ring_at[a], 2))
         k.fill(nodes, rings[a:b], first, length, backward, corners)
@@ -250,16 +251,6 @@ def _link(
         end = min(begin + _CORNERS_A_BATCH, len(nodes))
         downs, rings = k.link(nodes, down_ranks, begin, end, downs, rings, first, rank, length)
     return first[:rings], rank[:rings], length[:rings]
-
-
-def _batches(at: NDArray[np.int64]) -> Iterator[tuple[int, int]]:
-    """Cut polygons, of which each begins `at` a corner, into batches of about as many corners."""
-    begin = 0
-    while begin < at.size - 1:
-        end = int(np.searchsorted(at, at[begin] + _CORNERS_A_BATCH, "right")) - 1
-        end = max(end, begin + 1)
-        yield begin, end
-        begin = end
 
 
 def _parts(corners: FloatArray) -> Iterator[FloatArray]:

@@ -13,6 +13,7 @@ import shapely
 from numpy.typing import NDArray
 
 from viewshed.errors import OutputError
+from viewshed.io._batches import batches
 
 #: Files of a shapefile, the one to open first.
 SUFFIXES = (".shp", ".shx", ".dbf", ".prj", ".cpg")
@@ -86,26 +87,40 @@ def holds(path: Path, geometry: NDArray[Any]) -> bool:
         Whether each record has the parts, corners and box of its polygon, and all coordinates
         are there to the last bit.
     """
-    words = np.fromfile(path, "<i4")
-    index = np.fromfile(path.with_suffix(".shx"), ">i4")[_HEADER // 4 :]
     corners = shapely.get_num_coordinates(geometry)
     rings = 1 + shapely.get_num_interior_rings(geometry)
-    length = 11 + rings + 4 * corners  # of each record after its header, in words
+    length = 11 + rings + 4 * corners.astype(np.int64)  # of each record after its header, in words
     end = _HEADER // 4 + np.cumsum(length + 2)
     offset = end - length - 2
-    if len(words) != (end[-1] if len(end) else _HEADER // 4):
+    if path.stat().st_size != (4 * end[-1] if len(end) else _HEADER):
         return False
+    index = np.fromfile(path.with_suffix(".shx"), ">i4")[_HEADER // 4 :]
     if not np.array_equal(index.reshape(-1, 2), 2 * np.column_stack([offset, length])):
         return False
-    facts = words[offset[:, None] + np.array([2, 11, 12])]
+    at = np.concatenate([[0], np.cumsum(corners, dtype=np.int64)])
+    for a, b in batches(at):
+        words = np.fromfile(path, "<i4", int(end[b - 1] - offset[a]), offset=4 * int(offset[a]))
+        facts = np.column_stack([rings[a:b], corners[a:b]])
+        if not _is_same(words, offset[a:b] - offset[a], facts, geometry[a:b]):
+            return False
+    return True
+
+
+def _is_same(
+    words: NDArray[np.int32],
+    offset: NDArray[np.int64],
+    facts: NDArray[np.int64],
+    geometry: NDArray[Any],
+) -> bool:
+    """Tell whether records hold polygons of which `facts` are the numbers of rings and corners."""
+    types = words[offset[:, None] + np.array([2, 11, 12])]
     boxes = words[offset[:, None] + np.arange(3, 11)].view("<f8")
-    if not np.array_equal(facts[:, 0], np.full(len(offset), _POLYGON)):
+    if not (np.all(types[:, 0] == _POLYGON) and np.array_equal(types[:, 1:], facts)):
         return False
-    if not np.array_equal(facts[:, 1:], np.column_stack([rings, corners])):
-        return False
+    first = offset + 13 + facts[:, 0]
     step = np.zeros(len(words) + 1, np.int8)
-    step[offset + 13 + rings] = 1
-    step[end] = -1
+    step[first] = 1
+    step[first + 4 * facts[:, 1]] = -1
     is_corner = np.cumsum(step[:-1], dtype=np.int8) == 1
     read = words[is_corner].view("<f8").reshape(-1, 2)
     wrote = shapely.get_coordinates(geometry)
