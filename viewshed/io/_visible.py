@@ -66,7 +66,9 @@ class VisibleRows:
         with _told(self._path):
             window = Window(0, first, self.shape[1], last - first)
             cells: NDArray[np.uint8] = self._file.read(1, window=window)
-        strange = np.logical_and.reduce([cells != state for state in _STATES])
+        strange = np.ones(cells.shape, np.bool_)
+        for state in _STATES:
+            strange &= cells != state
         if strange.any():
             least = cells[strange].min()
             msg = f"{self._path}: holds the value {least}, which is no state; make it again"
