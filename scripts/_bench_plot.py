@@ -1,12 +1,16 @@
 """The picture of cost: time a cell against range, between copying the grid and walking."""
 
+import math
+
 import numpy as np
 
 SIZE, DPI = (9.0, 6.2), 150
 #: Colours by turns, of clearly different lightness, never red beside green.
-INKS = ("#1b3a6b", "#d9822b", "#5d5d5d", "#3f8fc4", "#7a4a12", "#9467ae", "#000000")
+INKS = (
+    "#1b3a6b", "#d9822b", "#5d5d5d", "#3f8fc4", "#7a4a12", "#9467ae", "#000000", "#b39b2e",
+)  # fmt: skip
 STYLES = ("-", "--", "-.", (0, (1, 1.2)))
-MARKS = "osD^vPX"
+MARKS = "osD^vPXh"
 GREY = "#777777"
 #: Room that a label takes, of the height of the axes.
 LABEL_STEP = 0.032
@@ -78,7 +82,7 @@ def draw(found, path):
     lines = lines_of(found)
     figure = Figure(figsize=SIZE, dpi=DPI)
     FigureCanvasAgg(figure)
-    axes = figure.add_axes((0.085, 0.1, 0.66, 0.8))
+    axes = figure.add_axes((0.085, 0.1, 0.64, 0.8))
     axes.set_xscale("log")
     axes.set_yscale("log")
     for n, (label, (ranges, ns)) in enumerate(lines.items()):
@@ -114,6 +118,11 @@ def draw(found, path):
     figure.savefig(path, metadata={"Software": None})
 
 
+def told(value):
+    """Write a number with two digits that count, and no power of ten."""
+    return f"{value:.{max(0, 1 - math.floor(math.log10(value)))}f}"
+
+
 def label_ends(axes, lines):
     """Write the name of each line at its end, moved apart and led to it."""
     to_axes = axes.transScale + axes.transLimits
@@ -124,15 +133,22 @@ def label_ends(axes, lines):
         edge = label.startswith(("copy", "walk"))
         ink = GREY if edge else INKS[n % len(INKS)]
         axes.annotate(
-            f"{label}, {ends[label][1]:.2g} ns",
+            f"{label}, {told(ends[label][1])} ns",
             xy=at,
             xytext=(1.04, height),
             xycoords="axes fraction",
             textcoords="axes fraction",
             fontsize=8.5,
             weight="bold" if edge else "normal",
-            color=ink,
+            color="#222222",
             va="center",
             annotation_clip=False,
-            arrowprops={"arrowstyle": "-", "color": ink, "linewidth": 0.6, "shrinkB": 3},
+            arrowprops={
+                "arrowstyle": "-",
+                "color": ink,
+                "linewidth": 0.6,
+                "relpos": (0.0, 0.5),
+                "shrinkA": 1,
+                "shrinkB": 4,
+            },
         )
