@@ -4,6 +4,7 @@ import time
 from functools import partial
 from unittest import mock
 
+import numba
 import numpy as np
 from _bench_common import THREADS, Clock, K, others
 from _terrains import SCENES
@@ -76,7 +77,8 @@ class Run:
         )
 
     def walkers(self):
-        """Walkers on the same scene, compiled."""
+        """Walkers on the same scene, compiled, on as many threads as the engine."""
+        numba.set_num_threads(min(THREADS, numba.config.NUMBA_NUM_THREADS))
         eye, range_m = self.eye_elevation, self.reach * self.scene.cell
         walkers = Walkers(self.z, self.map, eye_elevation=eye, range_m=range_m, k=K)
         for bounded in (False, True):
@@ -127,7 +129,7 @@ def check(run, step, ways, checks, name):
 
 
 def largest_piece(run):
-    """Share that the largest piece of work has in all of them, on one thread."""
+    """Ask on one thread; return the share that the largest piece of work has in all of them."""
     times = []
     sweep = visibility._sweep_piece
 
@@ -197,8 +199,7 @@ def measure_scene(scene, sizes, checks):
                 clock.run(f"visible {reach}", run.ask)
         if turn < sizes.turns:
             clock.run("clearance", partial(first.ask, clearance=True))
-            clock.run("one", partial(first.ask, threads=1))
-            pieces.append(largest_piece(first))
+            pieces.append(clock.run("one", partial(largest_piece, first)))
     share = others(start)
     points = [point_of(run, clock) for run in runs.values()]
     by_range = {point["range"]: point for point in points}

@@ -1,6 +1,7 @@
 """Measure against yardsticks of the same run: copying, walking, reading and writing, imports.
 
-    python scripts/bench.py [--quick] [--json] [--only NAME ...] [--cache FOLDER] [--readme]
+    python scripts/bench.py [--quick] [--json] [--only NAME ...] [--cache FOLDER]
+    python scripts/bench.py --readme [--from FILE]
 
 Prints one table of what is asked and what came out, and what lies behind it. Kernels warm, medians
 of rounds in which all ways take turns, fixed seeds. Needs the libraries of the package, 10 GB of
@@ -24,7 +25,7 @@ ROOT = Path(__file__).resolve().parent.parent
 sys.path.insert(0, str(ROOT))
 
 from _bench_asked import agreement, rows_of  # noqa: E402
-from _bench_common import FULL, QUICK  # noqa: E402
+from _bench_common import FULL, QUICK, Sizes  # noqa: E402
 from _bench_engine import measure_scene, measure_walkers  # noqa: E402
 from _bench_observers import measure_observers  # noqa: E402
 from _bench_plot import draw  # noqa: E402
@@ -117,6 +118,13 @@ def parse(words):
     parser.add_argument(
         "--readme", action="store_true", help="write the tables and the picture into the README"
     )
+    parser.add_argument(
+        "--from",
+        dest="source",
+        type=Path,
+        metavar="FILE",
+        help="measure nothing; take what an earlier --json printed",
+    )
     options = parser.parse_args(words)
     only = options.only or GROUPS
     options.names = [name for name in GROUPS if name in only and name != "scenes"]
@@ -129,13 +137,18 @@ def parse(words):
 def main(words=None, sizes=None):
     """Measure and print; return the exit code."""
     options = parse(words)
-    sizes = sizes or (QUICK if options.quick else FULL)
-    host, start = machine(), time.perf_counter()
-    with contextlib.ExitStack() as stack:
-        folder = options.cache or Path(stack.enter_context(tempfile.TemporaryDirectory()))
-        folder.mkdir(parents=True, exist_ok=True)
-        found = measure(options.names, sizes, folder)
-    took = time.perf_counter() - start
+    if options.source:
+        told = json.loads(options.source.read_text(encoding="utf-8"))
+        host, found, took = told["machine"], told["found"], told["seconds"]
+        sizes = Sizes(**told["sizes"])
+    else:
+        sizes = sizes or (QUICK if options.quick else FULL)
+        host, start = machine(), time.perf_counter()
+        with contextlib.ExitStack() as stack:
+            folder = options.cache or Path(stack.enter_context(tempfile.TemporaryDirectory()))
+            folder.mkdir(parents=True, exist_ok=True)
+            found = measure(options.names, sizes, folder)
+        took = time.perf_counter() - start
     if options.json:
         rows = rows_of(found, sizes)
         result = {"machine": host, "sizes": vars(sizes), "seconds": took, "rows": rows}
@@ -144,6 +157,11 @@ def main(words=None, sizes=None):
         print("\n".join(printed(found, sizes, host)))
         print(f"Took {took:.0f} s.")
     if options.readme:
+        missing = [name for name in GROUPS if name not in found]
+        if missing or not sizes.full:
+            lacks = f"lacks {', '.join(missing)}" if missing else "is of small sizes"
+            msg = f"{options.source} {lacks}, so README is left as it is: measure everything first"
+            raise SystemExit(msg)
         draw(found, PICTURE)
         write_readme(README, readme_lines(found, sizes, host))
     return 1 if found.get("agreement", {}).get("unlike") else 0

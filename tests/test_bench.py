@@ -2,8 +2,10 @@
 
 import dataclasses
 import importlib
+import itertools
 import json
 import os
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
@@ -221,15 +223,41 @@ def test_a_wrong_answer_ends_with_1(bench, monkeypatch, sizes, capsys):
         assert line.split()[:4] == ["wrong", "answers", "of", "15"]
 
 
-def test_readme_and_picture_are_written_at_the_end(bench, monkeypatch, found, full, tmp_path):
+def test_readme_and_picture_are_written_at_the_end(
+    bench, monkeypatch, found, full, tmp_path, capsys
+):
     table = importlib.import_module("_bench_table")
-    (tmp_path / "README.md").write_text(f"{table.BEGIN}\n{table.END}\n", encoding="utf-8")
-    monkeypatch.setattr(bench, "README", tmp_path / "README.md")
-    monkeypatch.setattr(bench, "PICTURE", tmp_path / "cost.png")
+    readme, picture = tmp_path / "README.md", tmp_path / "cost.png"
+    readme.write_text(f"{table.BEGIN}\n{table.END}\n", encoding="utf-8")
+    monkeypatch.setattr(bench, "README", readme)
+    monkeypatch.setattr(bench, "PICTURE", picture)
+    monkeypatch.setattr(bench, "GROUPS", list(found))
     monkeypatch.setattr(bench, "measure", lambda *_: found)
-    assert bench.main(["--readme"], full) == 0
-    assert "| flat sea |" in (tmp_path / "README.md").read_text(encoding="utf-8")
-    assert (tmp_path / "cost.png").is_file()
+    assert bench.main(["--readme", "--json"], full) == 0
+    told = tmp_path / "told.json"
+    told.write_text(capsys.readouterr().out, encoding="utf-8")
+    made = readme.read_bytes(), picture.read_bytes()
+    assert b"| flat sea |" in made[0]
+    readme.write_text(f"{table.BEGIN}\n{table.END}\n", encoding="utf-8")
+    monkeypatch.setattr(bench, "measure", None)
+    assert bench.main(["--readme", "--from", str(told)]) == 0
+    assert (readme.read_bytes(), picture.read_bytes()) == made
+    assert "| flat sea |" not in capsys.readouterr().out
+
+
+@pytest.mark.parametrize(
+    ("whole", "group", "said"),
+    [(False, None, "is of small sizes"), (True, "walker", "lacks walker")],
+)
+def test_readme_takes_all_or_nothing(bench, monkeypatch, found, full, tmp_path, whole, group, said):
+    monkeypatch.setattr(bench, "GROUPS", list(found))
+    monkeypatch.setattr(bench, "README", tmp_path / "README.md")
+    found.pop(group, None)
+    sizes = vars(dataclasses.replace(full, full=whole))
+    told = {"machine": HOST, "sizes": sizes, "seconds": 1.0, "found": found}
+    (tmp_path / "told.json").write_text(json.dumps(told), encoding="utf-8")
+    with pytest.raises(SystemExit, match=f"told.json {said}, so README is left as it is"):
+        bench.main(["--readme", "--from", str(tmp_path / "told.json")])
 
 
 @pytest.mark.parametrize("name", ["sea", "half", "woods", "corner", "sector"])
@@ -259,10 +287,16 @@ def test_terrains_are_what_they_are_called(part):
     assert rise["smooth"] < rise["rough"]
 
 
-def test_largest_piece_is_a_share(part):
+def test_largest_piece_is_a_share_of_all(part, monkeypatch):
+    engine = part("_bench_engine")
     (sea,) = [scene for scene in part("_terrains").SCENES if scene.name == "sea"]
-    (run,) = part("_bench_engine").runs_of(sea, {30})
-    assert 1 / 64 < part("_bench_engine").largest_piece(run) < 0.9  # 64 wedges or more
+    (run,) = engine.runs_of(sea, {30})
+    clock = itertools.chain([0.0, 3.0], itertools.count(10.0))  # one piece of 3 s, others of 1 s
+    monkeypatch.setattr(engine, "time", SimpleNamespace(perf_counter=lambda: next(clock)))
+    share = engine.largest_piece(run)
+    pieces = 1 + (next(clock) - 10.0) / 2.0
+    assert pieces >= 64
+    assert share == pytest.approx(3 / (pieces + 2))
 
 
 def test_a_terrain_is_measured_and_told_as_json(bench, sizes, capsys):
