@@ -22,14 +22,21 @@ def asked_cells(row):
     return what, row["yardstick"], got, must, row["met"], aim, row["reached"]
 
 
+def beyond(sizes):
+    """Whether kinds of terrain are seen farther than all scenes."""
+    return sizes.curve[-1] not in sizes.ranges
+
+
 def scene_cells(scene, sizes):
     """Texts of one row of the table of terrains."""
     points = {point["range"]: point for point in scene["points"]}
     cells = [scene["words"], f"{scene['eye']:g}", f"{scene['seen']:.1f}"]
     for reach in sizes.ranges:
         cells += [f"{points[reach]['ns']:.1f}", f"{points[reach]['copies']:.1f}"]
-    last = points.get(sizes.curve[-1])
-    cells += [f"{last['ns']:.1f}", f"{scene['growth']:.2f}"] if last else ["", ""]
+    if beyond(sizes):
+        last = points.get(sizes.curve[-1])
+        cells.append(f"{last['ns']:.1f}" if last else "")
+    cells.append(f"{scene['growth']:.2f}" if "growth" in scene else "")
     cells += [f"{scene[key]:.2f}" for key in ("clearance", "gain")]
     return [*cells, f"1/{1.0 / scene['piece']:.0f}"]
 
@@ -37,8 +44,8 @@ def scene_cells(scene, sizes):
 def scene_heads(sizes):
     """Heads of the table of terrains."""
     ranges = [head for reach in sizes.ranges for head in (f"ns {reach}", "copies")]
-    last = f"ns {sizes.curve[-1]}"
-    return ["terrain", "eye m", "seen %", *ranges, last, "growth", "clear", "gain", "piece"]
+    last = [f"ns {sizes.curve[-1]}"] if beyond(sizes) else []
+    return ["terrain", "eye m", "seen %", *ranges, *last, "growth", "clear", "gain", "piece"]
 
 
 def walker_lines(walker):

@@ -1,10 +1,10 @@
 """Measure against yardsticks of the same run: copying, walking, reading and writing, imports.
 
-    python scripts/bench.py [--quick] [--json] [--only NAME ...] [--cache FOLDER]
+    python scripts/bench.py [--quick] [--short] [--json] [--only NAME ...] [--cache FOLDER]
     python scripts/bench.py --readme [--from FILE]
 
 Prints one table of what is asked and what came out, and what lies behind it. Kernels warm, medians
-of rounds in which all ways take turns, fixed seeds. Needs the libraries of the package, 10 GB of
+of rounds in which all ways take turns, fixed seeds. Needs the libraries of the package, 8 GB of
 memory and 2 GB of disk. Ends with code 1 if an answer is not the walker's, else with 0.
 """
 
@@ -16,6 +16,7 @@ import platform
 import sys
 import tempfile
 import time
+from dataclasses import replace
 from pathlib import Path
 
 import numba
@@ -30,7 +31,7 @@ from _bench_engine import measure_scene, measure_walkers  # noqa: E402
 from _bench_observers import measure_observers  # noqa: E402
 from _bench_plot import draw  # noqa: E402
 from _bench_process import measure_processes, measure_sample, measure_starts  # noqa: E402
-from _bench_table import printed, readme_lines, write_readme  # noqa: E402
+from _bench_table import beyond, printed, readme_lines, write_readme  # noqa: E402
 from _terrains import SCENES  # noqa: E402
 
 from viewshed._version import __version__  # noqa: E402
@@ -108,6 +109,7 @@ def parse(words):
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     names = [*GROUPS, *SCENE_NAMES]
     parser.add_argument("--quick", action="store_true", help="small sizes: about a minute")
+    parser.add_argument("--short", action="store_true", help="leave out the longest ranges")
     parser.add_argument("--json", action="store_true", help="print JSON in place of the tables")
     parser.add_argument(
         "--only", action="append", choices=names, metavar="NAME", help=", ".join(names)
@@ -129,8 +131,8 @@ def parse(words):
     only = options.only or GROUPS
     options.names = [name for name in GROUPS if name in only and name != "scenes"]
     options.names += [name for name in SCENE_NAMES if name in only or "scenes" in only]
-    if options.readme and (options.only or options.quick):
-        parser.error("--readme needs everything at full size: leave out --only and --quick")
+    if options.readme and (options.only or options.quick or options.short):
+        parser.error("--readme needs everything: leave out --only, --quick and --short")
     return options
 
 
@@ -143,6 +145,8 @@ def main(words=None, sizes=None):
         sizes = Sizes(**told["sizes"])
     else:
         sizes = sizes or (QUICK if options.quick else FULL)
+        if options.short:
+            sizes = replace(sizes, curve=sizes.ranges[-1:])
         host, start = machine(), time.perf_counter()
         with contextlib.ExitStack() as stack:
             folder = options.cache or Path(stack.enter_context(tempfile.TemporaryDirectory()))
@@ -158,8 +162,8 @@ def main(words=None, sizes=None):
         print(f"Took {took:.0f} s.")
     if options.readme:
         missing = [name for name in GROUPS if name not in found]
-        if missing or not sizes.full:
-            lacks = f"lacks {', '.join(missing)}" if missing else "is of small sizes"
+        if missing or not sizes.full or not beyond(sizes):
+            lacks = f"lacks {', '.join(missing)}" if missing else "is not of the full sizes"
             msg = f"{options.source} {lacks}, so README is left as it is: measure everything first"
             raise SystemExit(msg)
         draw(found, PICTURE)

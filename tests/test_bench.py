@@ -143,6 +143,13 @@ def test_printed_tables_name_all(part, found, full):
     assert line.split()[-3:] == ["1.50", "1.90", "1/100"]
 
 
+def test_the_longest_range_has_no_second_column(part, found, full):
+    short = dataclasses.replace(full, curve=(30,))
+    text = "\n".join(part("_bench_table").printed(found, short, HOST))
+    (head,) = [line for line in text.splitlines() if line.startswith("terrain")]
+    assert head.split("  ")[-6:] == ["ns 30", "copies", "growth", "clear", "gain", "piece"]
+
+
 def test_readme_gets_the_tables_between_its_marks(part, found, full, tmp_path):
     table, path = part("_bench_table"), tmp_path / "README.md"
     path.write_text(f"before\n\n{table.BEGIN}\nold\n{table.END}\n\nafter\n", encoding="utf-8")
@@ -207,11 +214,11 @@ def test_all_is_measured_where_nothing_is_named(bench):
     assert names[5:] == bench.SCENE_NAMES == bench.parse(["--only", "scenes"]).names
 
 
-@pytest.mark.parametrize("words", [["--quick"], ["--only", "sea"]])
+@pytest.mark.parametrize("words", [["--quick"], ["--short"], ["--only", "sea"]])
 def test_readme_needs_the_whole(bench, words, capsys):
     with pytest.raises(SystemExit):
         bench.parse(["--readme", *words])
-    assert "--readme needs everything at full size" in capsys.readouterr().err
+    assert "--readme needs everything" in capsys.readouterr().err
 
 
 def test_a_wrong_answer_ends_with_1(bench, monkeypatch, sizes, capsys):
@@ -246,14 +253,18 @@ def test_readme_and_picture_are_written_at_the_end(
 
 
 @pytest.mark.parametrize(
-    ("whole", "group", "said"),
-    [(False, None, "is of small sizes"), (True, "walker", "lacks walker")],
+    ("change", "group", "said"),
+    [
+        ({"full": False}, None, "is not of the full sizes"),
+        ({"curve": (30,)}, None, "is not of the full sizes"),
+        ({}, "walker", "lacks walker"),
+    ],
 )
-def test_readme_takes_all_or_nothing(bench, monkeypatch, found, full, tmp_path, whole, group, said):
+def test_readme_takes_all_or_none(bench, monkeypatch, found, full, tmp_path, change, group, said):
     monkeypatch.setattr(bench, "GROUPS", list(found))
     monkeypatch.setattr(bench, "README", tmp_path / "README.md")
     found.pop(group, None)
-    sizes = vars(dataclasses.replace(full, full=whole))
+    sizes = vars(dataclasses.replace(full, **change))
     told = {"machine": HOST, "sizes": sizes, "seconds": 1.0, "found": found}
     (tmp_path / "told.json").write_text(json.dumps(told), encoding="utf-8")
     with pytest.raises(SystemExit, match=f"told.json {said}, so README is left as it is"):
@@ -308,6 +319,14 @@ def test_a_terrain_is_measured_and_told_as_json(bench, sizes, capsys):
     assert 0 < half["piece"] < 1
     assert told["sizes"]["ranges"] == [20, 30]
     assert "visible, 20 cells" in {row["what"] for row in told["rows"]}
+
+
+def test_short_leaves_out_what_is_beyond(bench, monkeypatch, sizes, capsys):
+    asked = []
+    monkeypatch.setattr(bench, "measure", lambda names, sizes, folder: asked.append(sizes) or {})
+    assert bench.main(["--short"], sizes) == 0
+    assert (asked[0].ranges, asked[0].curve) == ((20, 30), (30,))
+    assert "Took" in capsys.readouterr().out
 
 
 @pytest.mark.slow
