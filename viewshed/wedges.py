@@ -141,12 +141,14 @@ def _own_cell(
     f = np.full((2, 2), np.nan)
     u = np.empty((2, 2))
     v = np.empty((2, 2))
+    mains = base[0] + signs[0] * np.array([[0], [1]])
+    minors = base[1] + signs[1] * np.array([[0, 1]])
+    all_p, all_q = pm.pq(*((mains, minors) if by_row else (minors, mains)))
     for j in (0, 1):
         for i in (0, 1):
             main, minor = base[0] + signs[0] * j, base[1] + signs[1] * i
             r, c = (main, minor) if by_row else (minor, main)
-            p, q = (float(w) for w in pm.pq(np.float64(r), np.float64(c)))
-            p, q = p - scene.shift[0], q - scene.shift[1]
+            p, q = float(all_p[j, i]) - scene.shift[0], float(all_q[j, i]) - scene.shift[1]
             u[j, i], v[j, i] = (signs[0] * (q if by_row else p), signs[1] * (p if by_row else q))
             if scene.affine:
                 u[j, i], v[j, i] = x0 + j, y0 + i
@@ -201,7 +203,9 @@ def _bilinear(
     return float(value), float(along), float(across), float(twist)
 
 
-def _octant(scene: Scene, by_row: bool, signs: tuple[int, int], clearance: bool) -> Octant:
+def _octant(
+    scene: Scene, by_row: bool, signs: tuple[int, int], clearance: bool, bend: float
+) -> Octant:
     """Parameters of the octant whose main axis is rows or columns, with the signs of both axes."""
     pm = scene.post_map
     rows, cols = scene.surface.shape
@@ -243,7 +247,7 @@ def _octant(scene: Scene, by_row: bool, signs: tuple[int, int], clearance: bool)
     ints[k.WANT_CLEARANCE] = clearance
     ints[k.HAS_GROUND] = scene.ground is not None
     ints[k.OWN_DIAGONAL] = not by_row
-    ints[k.MARGIN] = 3 + math.ceil(4.0 * _bend(pm, rows, cols))
+    ints[k.MARGIN] = 3 + math.ceil(4.0 * bend)
     _bearing_fields(scene.sector, frame, ints, geo)
     coef_u, coef_v = _octant_polynomials(scene, by_row, signs)
     # does the observer's own row or column run straight, with the observer on it?
@@ -344,14 +348,14 @@ def wedges(scene: Scene, clearance: bool) -> tuple[list[Wedge], list[Octant]]:
     rows, cols = scene.surface.shape
     pm = scene.post_map
     count = wedge_count(scene)
-    spare = skew_of(pm, rows, cols)
+    spare, bend = skew_of(pm, rows, cols), _bend(pm, rows, cols)
     edges = np.linspace(0.0, 1.0, count + 1)
     pieces: list[Wedge] = []
     axes: list[Octant] = []
     for by_row in (False, True):
         for main in (1, -1):
             for minor in (1, -1):
-                octant = _octant(scene, by_row, (main, minor), clearance)
+                octant = _octant(scene, by_row, (main, minor), clearance, bend)
                 if octant.ints[k.LAST_LINE] < 1:
                     continue
                 if octant.straight and minor > 0:
