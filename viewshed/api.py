@@ -38,7 +38,7 @@ __all__ = ["MapResult", "map_visibility"]
 #: A target this tall [m] looked for by eyes this low [m] is a structure entered as a target.
 _TALL_TARGET, _LOW_EYE = 20.0, 3.0
 #: What a cell costs on one thread, about [s], and how long a run may take without being announced.
-_CELL_SECONDS, _LONG_RUN = 4e-8, 120.0
+_CELL_SECONDS, _LONG_RUN = 2.5e-8, 120.0
 
 _log = logging.getLogger("viewshed")
 
@@ -146,8 +146,17 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
         for one in given
     ]
     window = common_window([one.window for one in placed])
-    room = _room(window, placed, question, surface is not None, memory, scratch)
-    _say_cost(placed, usable_threads(threads))
+    workers = usable_threads(threads)
+    room = _room(
+        window,
+        placed,
+        question,
+        surface is not None,
+        memory=memory,
+        scratch=scratch,
+        threads=workers,
+    )
+    _say_cost(placed, workers)
     heights, met = _read(terrain, surface, window, room)
     run = Run(terrain, heights, window, question, placed, room)
     run.look(threads, progress)
@@ -185,8 +194,10 @@ def _room(
     placed: list[Placed],
     question: Question,
     with_surface: bool,
+    *,
     memory: float | None,
     scratch: str | os.PathLike[str] | None,
+    threads: int,
 ) -> Room:
     """Make room for the arrays of a run, or refuse it where there is none."""
     from viewshed.io import _memory
@@ -199,6 +210,7 @@ def _room(
         own_cells=max(cells) if len(placed) > 1 else None,
         surface=with_surface,
         kept_cells=sum(cells) if question.each and len(placed) > 1 else 0.0,
+        threads=threads,
     )
     limit = _memory.usable_memory() if memory is None else _memory.check_limit(memory)
     if limit < _memory.LEAST or not can_map():

@@ -12,6 +12,7 @@ from viewshed.areas import cell_areas
 from viewshed.combine import Combination
 from viewshed.crew import run_jobs
 from viewshed.errors import InputError
+from viewshed.io._memory import windows_at_once
 from viewshed.kernels.sweep import sweep
 from viewshed.placing import Placed, Window, common_window, told_of
 from viewshed.postmap import fit_post_map
@@ -39,9 +40,6 @@ __all__ = ["Heights", "Run"]
 _GREATEST_CLEARANCE = np.float32(10_000.0)
 #: Rows that are copied or changed at a time.
 _STRIP_ROWS = 256
-#: What the windows of observers under way beside the first may take [bytes]: what the page and the
-#: writers need later is free while observers look.
-_MORE_WINDOWS = 300e6
 
 
 @dataclass(frozen=True)
@@ -117,7 +115,12 @@ class Run:
         run_jobs(
             [job(number) for number in range(len(self.placed))],
             threads=workers,
-            at_once=min(workers, self._at_once(max(sizes))),
+            at_once=windows_at_once(
+                max(sizes),
+                workers,
+                self.question.layers,
+                surface=self.heights.surface is not None,
+            ),
             weights=sizes,
             progress=progress,
         )
@@ -125,14 +128,6 @@ class Run:
             self.arrays = common.layers()
         self.views = [views[number] for number in range(len(self.placed))]
         self.kept = common_window([view.window for view in self.views])
-
-    def _at_once(self, cells: int) -> int:
-        """How many observers may be under way together, by the cells of the largest window."""
-        layers = self.question.layers
-        clear = "clearance" in layers or "needed-height" in layers
-        surface = self.heights.surface is not None
-        each = 5 + 4 * surface + 4 * clear + 4 * ("needed-height" in layers)
-        return 1 + int(_MORE_WINDOWS // (each * cells))
 
     def _corner(self, one: Placed) -> tuple[int, int]:
         """Where the window of an observer begins in the common one."""
@@ -224,6 +219,7 @@ class Run:
                 heights=self.heights.facts,
             ),
             warnings=notes,
+            rest=self.room.release if self.room.is_mapped else None,
         )
 
 

@@ -18,7 +18,7 @@ from viewshed.wording import (
 
 if TYPE_CHECKING:
     import os
-    from collections.abc import Mapping
+    from collections.abc import Callable, Mapping
     from pathlib import Path
 
     import numpy as np
@@ -166,6 +166,9 @@ class MapResult:
         What it was made from.
     warnings : tuple of str
         What the user should know.
+    rest : callable or None
+        Called between pieces of work on the arrays where they lie in scratch files, so that memory
+        stays bounded.
     """
 
     arrays: Mapping[str, NDArray[Any]]
@@ -176,6 +179,7 @@ class MapResult:
     asked: Question
     inputs: Inputs
     warnings: tuple[str, ...] = ()
+    rest: Callable[[], None] | None = field(default=None, repr=False)
 
     @property
     def visible(self) -> NDArray[np.uint8]:

@@ -134,7 +134,12 @@ def patches_of(
 
     k = result.refraction.k
     name = result.views[0].observer.name if len(result.views) == 1 else EVERYBODY
-    asked: dict[str, Any] = {"k": k, "states": states, "min_patch_m2": min_patch_m2}
+    asked: dict[str, Any] = {
+        "k": k,
+        "states": states,
+        "min_patch_m2": min_patch_m2,
+        "rest": result.rest,
+    }
     found = [polygonise(result.visible, result.grid, result.areas, observer=name, **asked)]
     for view, visible in _each(result):
         grid, areas = result.grid.window(*view.window), result.areas.window(*view.window)
@@ -265,6 +270,7 @@ def draw_page(result: MapResult, path: Path) -> None:
             for view, name in zip(result.views, names, strict=True)
         ],
         count=None if single else result.count,
+        rest=result.rest,
     )
     words = Words(
         question=result.question,

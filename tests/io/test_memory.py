@@ -17,6 +17,7 @@ from viewshed.io._memory import (
     resident_memory,
     run_bytes,
     usable_memory,
+    windows_at_once,
 )
 
 GB = 10**9
@@ -201,3 +202,27 @@ def test_a_margin_is_left(monkeypatch):
 def test_bytes_of_a_run(layers, bytes_a_cell):
     assert run_bytes(GB, layers) == bytes_a_cell * GB + LEAST
     assert run_bytes(GB, layers, surface=True) == (bytes_a_cell + 4) * GB + LEAST
+
+
+def test_an_answer_that_is_gathered_lies_beside_the_common_one():
+    assert run_bytes(GB, ("visible", "count")) == (4 + 2 * 1 + 2) * GB + LEAST
+    assert run_bytes(GB, ("visible", "clearance", "count")) == (4 + 2 * 5 + 2) * GB + LEAST
+
+
+@pytest.mark.parametrize(
+    ("own_cells", "at_once"),
+    [(1e6, 4), (25e6, 3), (50e6, 2), (70e6, 1), (GB, 1)],
+)
+def test_bytes_of_several_observers(own_cells, at_once):
+    layers = ("visible", "count")
+    assert windows_at_once(own_cells, 4, layers, surface=False) == at_once
+    common, own = (4 + 1 + 2) * GB, (4 + 1) * own_cells
+    for threads in (1, 4):
+        found = run_bytes(GB, layers, own_cells=own_cells, threads=threads, kept_cells=GB)
+        assert found == common + min(threads, at_once) * own + GB + LEAST
+
+
+def test_windows_are_counted_with_all_that_lies_in_them():
+    layers = ("visible", "clearance", "needed-height")
+    found = run_bytes(GB, layers, own_cells=GB, threads=2, surface=True)
+    assert found == 2 * (8 + 1 + 8) * GB + LEAST

@@ -2,6 +2,7 @@
 
 import errno
 import os
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -10,6 +11,7 @@ import viewshed
 from tests.unit.test_api import post, write_dem
 from viewshed.constants import LAYERS
 from viewshed.io import _memory, room
+from viewshed.writing import draw_page
 
 pytestmark = [
     pytest.mark.skipif(not room.can_map(), reason="arrays cannot be kept in files here"),
@@ -70,10 +72,27 @@ def test_files_are_the_same_to_the_byte(terrain, surface, tiny, tmp_path, count,
         while isinstance(owner, np.ndarray):
             owner = owner.base
         assert owner is not None, "this array is not in a file"
-    written = {name: result.write(tmp_path / name) for name, result in results.items()}
+    assert {name: result.rest is not None for name, result in results.items()} == {
+        "memory": False,
+        "files": True,
+    }
+    written = {
+        name: result.write(tmp_path / name, polygons="gpkg") for name, result in results.items()
+    }
     for one, other in zip(*written.values(), strict=True):
         assert one.name == other.name
         assert one.read_bytes() == other.read_bytes(), one.name
+
+
+def test_pages_are_given_back_between_pieces_of_what_comes_after(terrain, tiny, tmp_path):
+    result = viewshed.map_visibility(terrain, observers(3), range_m=700, each=True, **tiny)
+    rests = []
+    result = replace(result, rest=lambda: rests.append(True))
+    result.polygons()
+    assert len(rests) == 3 * (1 + 3), "three times over the common answer and each of three more"
+    rests.clear()
+    draw_page(result, tmp_path / "map.png")
+    assert rests
 
 
 def test_scratch_files_are_where_they_were_asked_for(terrain, tiny, tmp_path):

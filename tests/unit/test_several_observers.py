@@ -14,6 +14,7 @@ import viewshed
 from tests.unit.test_api import LEFT, TOP, post, write_dem
 from viewshed import api, looking
 from viewshed.constants import MOST_OBSERVERS
+from viewshed.io import _memory
 from viewshed.placing import named
 from viewshed.recording import bands_told, observer_table, summary_csv
 
@@ -139,7 +140,7 @@ def test_the_same_observer_twice_changes_only_the_count(terrain, three):
 @pytest.mark.parametrize("room", [0.0, 1e9])
 def test_threads_change_nothing(terrain, three, room, monkeypatch):
     """Neither with a thread an observer nor with all threads on one after the other."""
-    monkeypatch.setattr(looking, "_MORE_WINDOWS", room)
+    monkeypatch.setattr(_memory, "_MORE_WINDOWS", room)
     one, many = (look(terrain, three, layers=EVERY_LAYER, each=True, threads=n) for n in (1, 3))
     for layer in EVERY_LAYER:
         assert one.arrays[layer].tobytes() == many.arrays[layer].tobytes()
@@ -152,7 +153,7 @@ def test_threads_change_nothing(terrain, three, room, monkeypatch):
 
 @pytest.mark.parametrize(("room", "most"), [(0.0, 1), (1e9, 3)])
 def test_windows_under_way_are_bounded_by_their_size(terrain, three, room, most, monkeypatch):
-    monkeypatch.setattr(looking, "_MORE_WINDOWS", room)
+    monkeypatch.setattr(_memory, "_MORE_WINDOWS", room)
     asked = []
     run_jobs = looking.run_jobs
 

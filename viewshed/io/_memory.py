@@ -21,6 +21,9 @@ _FALLBACK = 2 << 30
 _GATHERED_BYTES = {"count": 2, "count-unresolved": 2, "who": 4}
 #: Memory of the process beside the arrays of the window [bytes]: libraries, page, writers, scratch.
 LEAST = 600_000_000
+#: What the windows of observers under way beside the first may take [bytes]: what the page and the
+#: writers need later is free while observers look.
+_MORE_WINDOWS = 300e6
 #: Share of the memory that is free which a run takes if it is not told.
 _SHARE = 0.9
 #: Bytes of the units of a size of memory.
@@ -148,6 +151,7 @@ def run_bytes(
     own_cells: float | None = None,
     surface: bool = False,
     kept_cells: float = 0.0,
+    threads: int = 1,
 ) -> float:
     """Say how much memory a map takes.
 
@@ -163,6 +167,8 @@ def run_bytes(
         Whether a surface is read beside the ground.
     kept_cells : float, optional
         Cells of the answers of single observers that are kept.
+    threads : int, optional
+        Threads that observers are looked after by.
 
     Returns
     -------
@@ -170,13 +176,44 @@ def run_bytes(
         Memory [bytes]: that of the arrays of the window, and of the libraries, the page, the
         writers and the scratch arrays beside them.
     """
-    heights = 8 if surface else 4
-    clear = 4 * len({"clearance", "needed-height"} & set(layers))
+    heights, answer = _cell_bytes(layers, surface)
     gathered = sum(_GATHERED_BYTES.get(name, 0) for name in layers)
-    each = heights + 1 + clear
+    whole = cells * (heights + answer + gathered) + kept_cells + LEAST
     if own_cells is None:
-        return cells * (each + gathered) + LEAST
-    return cells * (each + gathered) + own_cells * each + kept_cells + LEAST
+        return whole + (cells * answer if gathered else 0.0)
+    at_once = windows_at_once(own_cells, threads, layers, surface=surface)
+    return whole + at_once * own_cells * (heights + answer)
+
+
+def windows_at_once(
+    own_cells: float, threads: int, layers: Sequence[str], *, surface: bool
+) -> int:
+    """Say how many observers may be under way together.
+
+    Parameters
+    ----------
+    own_cells : float
+        Cells of the largest window of one.
+    threads : int
+        Threads that look after them.
+    layers : sequence of str
+        Layers that are asked for.
+    surface : bool
+        Whether there is a surface beside the ground.
+
+    Returns
+    -------
+    int
+        One a thread, or fewer where their windows are large; at least 1.
+    """
+    window = own_cells * sum(_cell_bytes(layers, surface))
+    return min(threads, 1 + int(_MORE_WINDOWS // window))
+
+
+def _cell_bytes(layers: Sequence[str], surface: bool) -> tuple[int, int]:
+    """Bytes a cell of the heights, and of what one observer sees."""
+    clear = 4 * len({"clearance", "needed-height"} & set(layers))
+    return 8 if surface else 4, 1 + clear
 
 
 def check_memory(
