@@ -99,6 +99,10 @@ More examples:
     viewshed map tiles/ --observers turbines.gpkg --eye-height 150 \\
         --target-height 2 --surface dsm.tif --layers visible,count \\
         --polygons gpkg --out turbines
+  A grid larger than memory; scratch files hold what does not fit, and the
+  answer is the same:
+    viewshed map country.vrt --observer 512300,4650120 --range 100km \\
+        --memory 2GiB --out far
 
 Take care: the result is no better than the elevation grid, and trees and buildings count only if
 they are in it or in the surface. Real air differs from the stated k, most of all near warm or cold
