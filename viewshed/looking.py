@@ -164,6 +164,7 @@ class Run:
                 clearance="clearance" in layers,
                 needed_height="needed-height" in layers,
                 empty=self.room.empty,
+                turn=self.room.turn,
                 share=share,
             )
         except InputError as error:

@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 import os
 import threading
+from contextlib import nullcontext
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -33,6 +34,7 @@ from viewshed.wedges import (
 
 if TYPE_CHECKING:
     from collections.abc import Callable
+    from contextlib import AbstractContextManager
 
     from numpy.typing import NDArray
 
@@ -197,6 +199,7 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     clearance: bool = False,
     needed_height: bool = False,
     empty: Callable[..., NDArray[Any]] = np.empty,
+    turn: Callable[[int], AbstractContextManager[Any]] = nullcontext,
     threads: int | None = None,
     progress: Callable[[float, float], None] | None = None,
     share: Share | None = None,
@@ -230,6 +233,9 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
         Threads to use; None is one a processor. The answer is the same to the bit.
     progress : callable or None
         Called with pieces done and pieces in all.
+    turn : callable
+        Gives a context in which a piece is done, by its octant; `viewshed.io.room.Room.turn` keeps
+        memory bounded that way.
     share : callable, optional
         Does the pieces, as of a job of `viewshed.crew`, instead of `threads` and `progress`.
 
@@ -307,20 +313,25 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     workers = _Workers(max(elevation.shape), wedge_count(scene))
 
     def sweep_task(piece: Wedge) -> Callable[[], None]:
-        return lambda: _sweep_piece(scene, state, clear, piece, workers)
+        def task() -> None:
+            with turn(id(piece[0])):
+                _sweep_piece(scene, state, clear, piece, workers)
+
+        return task
 
     announce(k.sweep)
     for octant in axes:
-        k.axis(
-            scene.surface,
-            elevation,
-            state,
-            clear,
-            octant.ints,
-            octant.geo,
-            octant.coef_u,
-            octant.own,
-        )
+        with turn(id(octant.ints)):
+            k.axis(
+                scene.surface,
+                elevation,
+                state,
+                clear,
+                octant.ints,
+                octant.geo,
+                octant.coef_u,
+                octant.own,
+            )
     tasks = [sweep_task(piece) for piece in pieces]
     if share is None:
         run_jobs(

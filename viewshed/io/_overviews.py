@@ -5,7 +5,6 @@ cell for cell, but in one pass and many times faster.
 """
 
 from collections.abc import Callable
-from math import ceil
 from pathlib import Path
 from typing import Any
 from xml.sax.saxutils import escape
@@ -24,6 +23,8 @@ Rows = Callable[[int, int], Cells]
 
 #: Most cells of a strip of a coarser copy.
 _STRIP_CELLS = 1 << 20
+#: What an edge between cells may be off by rounding [cells].
+_TIE = 1e-8
 
 
 def sizes(shape: tuple[int, int], block: int) -> list[tuple[int, int]]:
@@ -129,14 +130,19 @@ class _Copy:
                 file.write(self.make(first, count), 1, window=Window(0, first, cols, count))
 
     def _most_frequent(self, first: int, count: int) -> Cells:
-        top = int(first * self.ratio[0] + 1e-8)
-        bottom = min(ceil((first + count) * self.ratio[0] - 1e-8), self.finer[0])
+        rows, cols = self._spans(0, first, count), self._spans(1, 0, self.shape[1])
+        top, bottom = int(rows[0, 0]), int(rows[1, -1])
         out = np.empty((count, self.shape[1]), dtype=np.uint8)
         counts = np.zeros(256, dtype=np.int64)
-        coarser.mode(
-            self.rows(top, bottom), top, out, first, *self.ratio, self.finer[0], self.nodata, counts
-        )
+        sums = np.empty(self.finer[1], dtype=np.uint32)
+        coarser.mode(self.rows(top, bottom), rows - top, cols, out, self.nodata, counts, sums)
         return out
+
+    def _spans(self, axis: int, first: int, count: int) -> NDArray[np.int64]:
+        """Give the first row or column that each coarser one covers, and the one past the last."""
+        edges = np.arange(first, first + count + 1) * self.ratio[axis]
+        ends = np.minimum(np.ceil(edges[1:] - _TIE), self.finer[axis])
+        return np.stack([edges[:-1] + _TIE, ends]).astype(np.int64)
 
     def _nearest(self, first: int, count: int) -> Cells:
         down = self._sources(0, first, count)

@@ -14,7 +14,7 @@ import tempfile
 import threading
 import time
 import weakref
-from collections.abc import Iterator
+from collections.abc import Hashable, Iterator
 from pathlib import Path
 from typing import Any
 
@@ -82,6 +82,9 @@ class Room:
         self._maps: list[weakref.ref[mmap.mmap]] = []
         self._lock = threading.Lock()
         self._keeper: threading.Thread | None = None
+        self._turn = threading.Condition()
+        self._place: Hashable = None
+        self._working = 0
 
     def empty(self, shape: tuple[int, ...], dtype: DTypeLike) -> NDArray[Any]:
         """Give a new array whose cells hold anything.
@@ -119,6 +122,39 @@ class Room:
             return array
         mapped = self._mapped(size)
         return np.frombuffer(mapped, dtype=kind).reshape(shape)
+
+    @contextlib.contextmanager
+    def turn(self, place: Hashable) -> Iterator[None]:
+        """Give a context for work on one part of large arrays, by any number of threads together.
+
+        A part has pages of its own. Before work on another one begins, or where little memory is
+        left, those who work are waited for and all pages are given back.
+
+        Parameters
+        ----------
+        place : hashable
+            Names the part.
+        """
+        if not self.is_mapped:
+            yield
+            return
+        with self._turn:
+            while self._working and (place != self._place or self._is_near_limit()):
+                self._turn.wait()
+            if place != self._place or self._is_near_limit():
+                self.release()
+            self._place = place
+            self._working += 1
+        try:
+            yield
+        finally:
+            with self._turn:
+                self._working -= 1
+                self._turn.notify_all()
+
+    def _is_near_limit(self) -> bool:
+        resident, mapped = resident_memory() or (0, 0)
+        return resident > self.limit - _SLACK and mapped >= _WORTH
 
     def _give_back(self, size: int) -> None:
         """Count memory of an array that has gone away as free."""
@@ -172,12 +208,13 @@ class Room:
                     return
             resident, mapped = resident_memory() or (0, 0)
             spare = self.limit - _SLACK - resident
-            if spare <= 0 and mapped >= _WORTH:
+            if spare < 0 and mapped >= _WORTH:
                 self.release()
             time.sleep(min(_LONGEST, max(_SHORTEST, spare / _PACE)))
 
 
 def _in_small_pages(mapped: mmap.mmap) -> None:
-    """Ask that touching a cell does not bring two megabytes of its neighbours."""
-    with contextlib.suppress(OSError):  # a system that knows no others
-        mapped.madvise(getattr(mmap, "MADV_NOHUGEPAGE", mmap.MADV_NORMAL))
+    """Ask that touching a cell brings few of its neighbours; else it can be megabytes of them."""
+    mapped.madvise(mmap.MADV_RANDOM)
+    with contextlib.suppress(OSError):  # a system that knows no large pages
+        mapped.madvise(getattr(mmap, "MADV_NOHUGEPAGE", mmap.MADV_RANDOM))
