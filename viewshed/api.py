@@ -246,9 +246,9 @@ def _read(
     terrain: Terrain, surface: Surface | None, window: Window, room: Room
 ) -> tuple[Heights, list[str]]:
     """Read the common window; what the reader warns of becomes notes."""
-    fingerprints = [terrain.fingerprint(*window)]
+    fingerprints = [terrain.fingerprint(*window, meanwhile=True)]
     if surface is not None:
-        fingerprints.append(surface.fingerprint(*window))
+        fingerprints.append(surface.fingerprint(*window, meanwhile=True))
     with noted(told=False) as notes:
         over, median = None, None
         if surface is not None:

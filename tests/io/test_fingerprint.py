@@ -12,6 +12,7 @@ import shapely
 from affine import Affine
 
 from viewshed.errors import DataError, InputError
+from viewshed.io._files import file_sha256
 from viewshed.io.elevation import open_terrain
 
 ALL = (0, 0, 12, 10)
@@ -107,3 +108,39 @@ def test_file_given_twice_is_taken_once(make_dem):
     step = Affine(30, 0, 400_300, 0, -30, 6_000_000)
     paths = [make_dem("a.tif"), make_dem("b.tif", transform=step)]
     assert names(open_terrain([*paths, paths[0]]).fingerprint(0, 0, 12, 20)) == ["a.tif", "b.tif"]
+
+
+def test_taken_while_the_file_is_read(make_dem):
+    path = make_dem()
+    found = open_terrain(path).fingerprint(*ALL, meanwhile=True)
+    assert found.entries == open_terrain(path).fingerprint(*ALL).entries
+    found.confirm()
+    make_dem(array=np.ones((12, 10), np.float32))
+    with pytest.raises(DataError, match=r"dem\.tif: was replaced while it was read; start again"):
+        found.confirm()
+
+
+def test_file_that_was_replaced_before_it_was_hashed(make_dem, monkeypatch):
+    terrain = open_terrain(make_dem())
+
+    def late(path):
+        make_dem(array=np.ones((12, 10), np.float32))
+        return file_sha256(path)
+
+    monkeypatch.setattr("viewshed.io.fingerprint.file_sha256", late)
+    found = terrain.fingerprint(*ALL, meanwhile=True)
+    with pytest.raises(DataError, match=r"dem\.tif: was replaced while it was read; start again"):
+        found.confirm()
+
+
+def test_file_that_went_away_before_it_was_hashed(make_dem, monkeypatch):
+    path = make_dem()
+
+    def late(file):
+        path.unlink()
+        return file_sha256(file)
+
+    monkeypatch.setattr("viewshed.io.fingerprint.file_sha256", late)
+    found = open_terrain(path).fingerprint(*ALL, meanwhile=True)
+    with pytest.raises(DataError, match=r"dem\.tif: cannot be read: No such file"):
+        _ = found.entries

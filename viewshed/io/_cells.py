@@ -1,9 +1,11 @@
 """The cells of one tile as metres, strip by strip."""
 
 from collections.abc import Iterator
+from contextlib import ExitStack
 from dataclasses import dataclass, field
 from functools import lru_cache
 from math import ceil, isinf, isnan, sqrt
+from queue import SimpleQueue
 from typing import Any
 
 import numpy as np
@@ -12,8 +14,10 @@ from rasterio.windows import Window
 
 from viewshed.errors import DataError
 from viewshed.io import voids
-from viewshed.io._header import check_header, opened
+from viewshed.io._header import check_header, opened, reading_env
+from viewshed.io._pool import in_order
 from viewshed.io.mosaic import Heights, Part, Tile
+from viewshed.io.raster import threads_allowed
 
 #: Most cells of a strip that is read at a time.
 _STRIP_CELLS = 1 << 22
@@ -23,6 +27,9 @@ _VOID_ROWS = 256
 _MOST_CELLS = 1 << 28
 #: Fewest cells of a block that a thread unpacks faster than it is handed the block.
 _WORTH_A_THREAD = 1 << 15
+#: Formats that several threads can read at a time, and the most threads that do.
+_THREADED = {"GTiff", "COG"}
+_MOST_READERS = 4
 
 
 @dataclass
@@ -48,6 +55,14 @@ class Noticed:
     missing_blocks: int = 0
     difference: float = np.nan
     where: tuple[int, int] = (0, 0)
+
+    def add(self, other: "Noticed") -> None:
+        """Add what was noticed in cells that follow."""
+        self.is_known |= other.is_known
+        for value, cells in other.undeclared.items():
+            self.undeclared[value] = self.undeclared.get(value, 0) + cells
+        if not isnan(other.difference) and not other.difference <= self.difference:
+            self.difference, self.where = other.difference, other.where
 
 
 def fill_void(heights: Heights) -> None:
@@ -78,28 +93,57 @@ def fill(part: Part, window: Heights) -> Noticed:
     DataError
         If the file is missing, truncated or damaged, has changed, or holds an infinite height.
     """
-    notes = Noticed()
-    tile, row, col = part.tile, part.row, part.col
-    out = window[part.rows, part.cols]
-    with opened(tile.path, **_options(tile)) as file:
-        check_header(tile, file)
-        for first, count in _strips(tile, row, out.shape):
-            heights = _to_metres(tile, file, Window(col, first, out.shape[1], count), notes)
-            top = part.rows.start + first - row
-            _compare(part, window, heights, top, notes)
-            target = out[first - row : first - row + count]
-            if part.shared:
-                np.copyto(target, heights, where=np.isnan(target))
-            else:
-                target[...] = heights
-        notes.missing_blocks = _missing_blocks(tile, file, row, col, out.shape)
+    notes, tile = Noticed(), part.tile
+    shape = (part.rows.stop - part.rows.start, part.cols.stop - part.cols.start)
+    boxes = list(_boxes(tile, part.row, part.col, shape))
+    readers = _readers(tile, len(boxes))
+    with ExitStack() as stack:
+        files: SimpleQueue[Any] = SimpleQueue()
+        for _ in range(readers):
+            file = stack.enter_context(opened(tile.path, **_options(tile, readers)))
+            check_header(tile, file)
+            files.put(file)
+
+        def read(box: Window) -> Noticed:
+            own = files.get()
+            try:
+                return _fill_box(part, window, own, box)
+            finally:
+                files.put(own)
+
+        for found in in_order(read, boxes, readers, reading_env):
+            notes.add(found)
+        notes.missing_blocks = _missing_blocks(tile, file, part.row, part.col, shape)
     return notes
 
 
-def _options(tile: Tile) -> dict[str, str]:
+def _fill_box(part: Part, window: Heights, file: Any, box: Window) -> Noticed:
+    """Fill the cells of one box of a tile; boxes may be filled at the same time."""
+    notes = Noticed()
+    top, left = part.rows.start + box.row_off - part.row, part.cols.start + box.col_off - part.col
+    target = window[top : top + box.height, left : left + box.width]
+    if part.shared:
+        heights = _to_metres(part.tile, file, box, notes)
+        _compare(part, window, heights, (top, left), notes)
+        np.copyto(target, heights, where=np.isnan(target))
+    else:
+        _to_metres(part.tile, file, box, notes, out=target)
+    return notes
+
+
+def _readers(tile: Tile, boxes: int) -> int:
+    """Say how many threads read a tile, each from a file that it opened for itself."""
+    if tile.driver not in _THREADED:
+        return 1
+    return max(1, min(boxes, _MOST_READERS, threads_allowed()))
+
+
+def _options(tile: Tile, readers: int = 1) -> dict[str, str]:
     """Give options for reading a file: handing a small block to a thread takes longer than it."""
     is_worth_it = tile.is_compressed and tile.block[0] * tile.block[1] >= _WORTH_A_THREAD
-    return {} if is_worth_it or tile.driver != "GTiff" else {"NUM_THREADS": "1"}
+    if tile.driver != "GTiff" or (is_worth_it and readers == 1):
+        return {}
+    return {"NUM_THREADS": "1"}
 
 
 def height_at(part: Part, row: int, col: int) -> float:
@@ -110,21 +154,24 @@ def height_at(part: Part, row: int, col: int) -> float:
         return float(_to_metres(tile, file, Window(at_col, at_row, 1, 1), Noticed())[0, 0])
 
 
-def _compare(part: Part, window: Heights, heights: Heights, top: int, notes: Noticed) -> None:
-    """Note the largest difference between a strip and what earlier tiles gave for it."""
-    left = part.cols.start
+def _compare(
+    part: Part, window: Heights, heights: Heights, corner: tuple[int, int], notes: Noticed
+) -> None:
+    """Note the largest difference between a box of cells and what earlier tiles gave for it."""
+    top, left = corner
     for rows, cols in part.shared:
-        first, last = max(rows.start, top), min(rows.stop, top + len(heights))
-        if first >= last:
+        first, last = max(rows.start, top), min(rows.stop, top + heights.shape[0])
+        west, east = max(cols.start, left), min(cols.stop, left + heights.shape[1])
+        if first >= last or west >= east:
             continue
-        own = heights[first - top : last - top, cols.start - left : cols.stop - left]
-        apart = np.abs(window[first:last, cols] - own)
+        own = heights[first - top : last - top, west - left : east - left]
+        apart = np.abs(window[first:last, west:east] - own)
         largest = float(np.fmax.reduce(apart, axis=None))
         if isnan(largest) or largest <= notes.difference:
             continue
         notes.difference = largest
         r, c = np.unravel_index(int(np.nanargmax(apart)), apart.shape)
-        notes.where = (first + int(r), cols.start + int(c))
+        notes.where = (first + int(r), west + int(c))
 
 
 def _missing_blocks(tile: Tile, file: Any, row: int, col: int, shape: tuple[int, ...]) -> int:
@@ -154,10 +201,24 @@ def _strips(tile: Tile, row: int, shape: tuple[int, ...]) -> Iterator[tuple[int,
         first = stop
 
 
-def _to_metres(tile: Tile, file: Any, window: Window, notes: Noticed) -> Heights:
-    """Read a strip as metres, NaN for void."""
-    raw = file.read(1, window=window)
-    heights = _converted(tile, raw)
+def _boxes(tile: Tile, row: int, col: int, shape: tuple[int, int]) -> Iterator[Window]:
+    """Cut a part of a raster into boxes of whole blocks and moderate size, row by row."""
+    step = max(1, _STRIP_CELLS // min(tile.block[0], shape[0]) // tile.block[1]) * tile.block[1]
+    for first, count in _strips(tile, row, shape):
+        left, end = col, col + shape[1]
+        while left < end:
+            stop = min(end, (left // step + 1) * step)
+            yield Window(left, first, stop - left, count)
+            left = stop
+
+
+def _to_metres(
+    tile: Tile, file: Any, window: Window, notes: Noticed, *, out: Heights | None = None
+) -> Heights:
+    """Read a box of cells as metres, NaN for void."""
+    is_plain = tile.dtype == "float32" and _is_metres(tile)
+    raw = file.read(1, window=window, out=out if is_plain else None)
+    heights = _converted(tile, raw, out)
     for void in _voids(tile, file, raw, window):
         np.copyto(heights, np.float32(np.nan), where=void)
     low, high = _bounds(heights)
@@ -197,15 +258,25 @@ def _is_habit(tile: Tile, value: float) -> bool:
         return voids.speaks_of_voids(tile, value, strips)
 
 
-def _converted(tile: Tile, raw: NDArray[Any]) -> Heights:
+def _is_metres(tile: Tile) -> bool:
+    """Tell whether the cells of a tile are metres as they are."""
+    return (tile.scale, tile.offset, tile.height_factor) == (1.0, 0.0, 1.0)
+
+
+def _converted(tile: Tile, raw: NDArray[Any], out: Heights | None) -> Heights:
+    """Turn cells into metres, which may be the same array; in `out` if one is given."""
     with np.errstate(over="ignore", invalid="ignore"):
-        if (tile.scale, tile.offset, tile.height_factor) == (1.0, 0.0, 1.0):
-            return raw.astype(np.float32)
-        metres = raw.astype(np.float64)
-        metres *= tile.scale
-        metres += tile.offset
-        metres *= tile.height_factor
-        return metres.astype(np.float32)
+        metres = raw
+        if not _is_metres(tile):
+            metres = raw.astype(np.float64)
+            metres *= tile.scale
+            metres += tile.offset
+            metres *= tile.height_factor
+        if out is None:
+            return metres.astype(np.float32, copy=False)
+        if metres is not out:
+            np.copyto(out, metres, casting="unsafe")
+        return out
 
 
 def _voids(

@@ -197,8 +197,10 @@ class Terrain:
         undeclared = sum(sum(note.undeclared.values()) for note in notes)
         return Reading(out, overlap, undeclared, voids_set)
 
-    def fingerprint(self, row_off: int, col_off: int, rows: int, cols: int) -> Fingerprint:
-        """Take size and SHA-256 of the files that reach into a window; do so before it is read.
+    def fingerprint(
+        self, row_off: int, col_off: int, rows: int, cols: int, *, meanwhile: bool = False
+    ) -> Fingerprint:
+        """Take size and SHA-256 of the files that reach into a window; begin before it is read.
 
         Parameters
         ----------
@@ -206,6 +208,8 @@ class Terrain:
             First row and column of the window in `grid`.
         rows, cols : int
             Size of the window.
+        meanwhile : bool, optional
+            Whether that goes on while the caller reads the window.
 
         Returns
         -------
@@ -224,7 +228,7 @@ class Terrain:
         parts = self._layout.parts(row_off, col_off, rows, cols)
         files = [file for part in parts for file in _files(part)]
         mask = None if self.void_height is None else self.void_height.fingerprint
-        return Fingerprint(files, mask)
+        return Fingerprint(files, mask, meanwhile=meanwhile)
 
     def fingerprints(self) -> list[dict[str, Any]]:
         """Give name, size and SHA-256 of every file, as `fingerprint` does for the whole grid."""

@@ -62,6 +62,16 @@ def _threads() -> str:
     return str(asked or "ALL_CPUS")
 
 
+def threads_allowed() -> int:
+    """Give the number of threads the user set for the raster library, else of processors."""
+    asked = _threads()
+    if asked.isdigit():
+        return max(1, int(asked))
+    if hasattr(os, "sched_getaffinity"):
+        return len(os.sched_getaffinity(0))
+    return os.cpu_count() or 1
+
+
 def gdal_message(error: BaseException) -> str:
     """Give the first cause of an error of the raster library in one short line."""
     while error.__cause__ is not None:

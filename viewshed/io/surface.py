@@ -84,8 +84,10 @@ class Surface:
         """The files, folders and patterns as the caller named them."""
         return self.own.given
 
-    def fingerprint(self, row_off: int, col_off: int, rows: int, cols: int) -> Fingerprint:
-        """Take size and SHA-256 of the files that a window needs; do so before it is read.
+    def fingerprint(
+        self, row_off: int, col_off: int, rows: int, cols: int, *, meanwhile: bool = False
+    ) -> Fingerprint:
+        """Take size and SHA-256 of the files that a window needs; begin before it is read.
 
         Parameters
         ----------
@@ -93,6 +95,8 @@ class Surface:
             First row and column of the window in the grid of the ground.
         rows, cols : int
             Size of the window.
+        meanwhile : bool, optional
+            Whether that goes on while the caller reads the window.
 
         Returns
         -------
@@ -112,7 +116,9 @@ class Surface:
             row, col = np.round(row), np.round(col)
         margin = 0.0 if self.offset is not None else self._margin * self.blocks[0]
         box = box_round(row, col, margin, self.own.grid.shape)
-        return Fingerprint(()) if box is None else self.own.fingerprint(*box)
+        if box is None:
+            return Fingerprint(())
+        return self.own.fingerprint(*box, meanwhile=meanwhile)
 
     def read(
         self,
