@@ -23,6 +23,8 @@ Rows = Callable[[int, int], Cells]
 
 #: Most cells of a strip of a coarser copy.
 _STRIP_CELLS = 1 << 20
+#: Rows of a coarser copy that are stored together.
+_BLOCK_ROWS = 64
 #: What an edge between cells may be off by rounding [cells].
 _TIE = 1e-8
 
@@ -86,7 +88,7 @@ def with_overviews(
 
 def _reader(path: Path, shape: tuple[int, int]) -> Rows:
     def read(first: int, last: int) -> Cells:
-        with rasterio.open(path) as file:
+        with rasterio.open(path, NUM_THREADS="1") as file:
             return np.asarray(file.read(1, window=Window(0, first, shape[1], last - first)))
 
     return read
@@ -123,6 +125,7 @@ class _Copy:
             count=1,
             dtype=kind.name,
             transform=Affine.scale(2.0),
+            blockysize=min(rows, _BLOCK_ROWS),
             bigtiff="IF_SAFER",
         ) as file:
             for first in range(0, rows, step):

@@ -35,7 +35,7 @@ Colour = tuple[int, int, int]
 
 BLOCK = 512
 #: Block cache that the raster library may use [bytes].
-CACHE_BYTES = 128 * 2**20
+CACHE_BYTES = 64 * 2**20
 #: Everything that the raster library raises when a file cannot be read or written.
 GDAL_ERRORS = (RasterioError, CPLE_BaseError, CRSError, OSError, SystemError)
 
