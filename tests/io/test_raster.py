@@ -217,13 +217,13 @@ def test_a_silent_failure_is_found(tmp_path, monkeypatch, damage):
     write_cog(path, states((9, 9)), a_grid((9, 9)), nodata=255, **SAID)
     before, copy = path.read_bytes(), raster._copy
 
-    def bad_copy(draft, made, options):
+    def bad_copy(source, draft, made, options):
         if damage == "cells":
             with rasterio.open(draft, "r+") as file:
                 cells = file.read(1)
                 cells[-1, -1] ^= 1
                 file.write(cells, 1)
-        copy(draft, made, options)
+        copy(source, draft, made, options)
         if damage == "end":
             os.truncate(made, made.stat().st_size - 2000)
 

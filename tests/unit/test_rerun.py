@@ -329,7 +329,13 @@ def test_changed_inputs_are_named_and_used(recorded, tmp_path, fake_run):
     assert [one.state for one in found.inputs] == ["changed"]
     ((asked, how),) = fake_run[0]
     assert asked == arguments(a_record(options=options(dem=["../dems/a.tif"])), recorded.parent)
-    assert how == {"threads": 1, "overwrite": False, "progress": None}
+    assert how == {
+        "memory": None,
+        "scratch": tmp_path,
+        "threads": 1,
+        "overwrite": False,
+        "progress": None,
+    }
 
 
 def test_inputs_that_were_not_there_before_are_named(recorded, tmp_path, fake_run):
