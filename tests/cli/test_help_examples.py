@@ -57,7 +57,7 @@ def country(tmp_path, monkeypatch):
 
 
 def test_the_help_has_examples():
-    assert len(EXAMPLES) == 6
+    assert len(EXAMPLES) == 7
 
 
 @pytest.mark.parametrize("line", EXAMPLES, ids=[shlex.split(e)[-1] for e in EXAMPLES])

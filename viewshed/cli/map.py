@@ -101,7 +101,7 @@ More examples:
         --polygons gpkg --out turbines
   A grid larger than memory; scratch files hold what does not fit, and the
   answer is the same:
-    viewshed map country.vrt --observer 512300,4650120 --range 100km \\
+    viewshed map dem.tif --observer 512300,4650120 --range 100km \\
         --memory 2GiB --out far
 
 Take care: the result is no better than the elevation grid, and trees and buildings count only if
