@@ -88,7 +88,7 @@ def map_visibility(  # noqa: PLR0913 - one name for each thing a question is mad
     notes : sequence of str
         What was warned of when the inputs were opened and the result is to say too.
     memory : float or None
-        What the whole process may take [bytes], at least 600 MB. None is what the system has free,
+        What the whole process may take [bytes], at least 750 MB. None is what the system has free,
         less a margin. The answer is the same to the bit.
     scratch : path or None
         Folder in which arrays that do not fit in memory lie as long as the result is kept; None is

@@ -15,6 +15,7 @@ import rasterio.shutil
 from affine import Affine
 
 from viewshed.errors import DataError, InputError, ViewshedWarning
+from viewshed.io import _cells
 from viewshed.io.elevation import HEIGHT_UNITS, open_terrain
 
 PLAIN = np.arange(12 * 10, dtype=np.float32).reshape(12, 10)
@@ -515,3 +516,52 @@ def test_memory_is_the_result_and_a_strip(make_dem, layout):
     finally:
         tracemalloc.stop()
     assert peak < out.nbytes + 60e6
+
+
+@pytest.mark.parametrize("block", [16, 64])
+@pytest.mark.parametrize("dtype", ["int16", "float32", "float64"])
+@pytest.mark.parametrize("options", [{}, {"scale": 0.5, "offset": -3.0}])
+def test_boxes_and_threads_change_nothing(make_dem, monkeypatch, block, dtype, options):
+    heights = np.random.default_rng(3).integers(-400, 3000, (150, 170)).astype(dtype)
+    heights[40:44, 100:130] = -999
+    path = make_dem(
+        array=heights, nodata=-999, tiled=True, blockxsize=block, blockysize=block, **options
+    )
+    window = (7, 5, 140, 160)
+    whole = open_terrain(path).read(*window)
+    monkeypatch.setattr(_cells, "_STRIP_CELLS", 2 * block * block)
+    monkeypatch.setattr(_cells, "threads_allowed", lambda: 3)
+    np.testing.assert_array_equal(open_terrain(path).read(*window), whole)
+    assert np.isnan(whole).sum() == 4 * 30
+
+
+def test_what_is_noticed_does_not_depend_on_threads(make_dem, monkeypatch):
+    heights = np.random.default_rng(3).normal(size=(150, 170)).astype(np.float32)
+    heights[[3, 90, 149], [5, 100, 169]] = -9999
+    shift = Affine(30, 0, 400_000, 0, -30, 6_000_000)
+    other = heights + np.float32(1.0)
+    other[120, 33] += 5
+    tiled = {"tiled": True, "blockxsize": 16, "blockysize": 16, "transform": shift}
+    paths = [make_dem("a.tif", heights, **tiled), make_dem("b.tif", other, **tiled)]
+    found = []
+    for strip, threads in ((1 << 22, 1), (512, 3)):
+        monkeypatch.setattr(_cells, "_STRIP_CELLS", strip)
+        monkeypatch.setattr(_cells, "threads_allowed", lambda threads=threads: threads)
+        with pytest.warns(ViewshedWarning) as told:
+            reading = open_terrain(paths).load(0, 0, 150, 170)
+        told = [str(one.message) for one in told]
+        found.append((told, reading.overlap, reading.undeclared_voids))
+    assert found[0] == found[1]
+    assert found[0][1][2] == pytest.approx(6.0)
+
+
+def test_a_damaged_file_is_one_line_whichever_thread_meets_it(make_dem, monkeypatch):
+    heights = np.random.default_rng(3).normal(size=(150, 170)).astype(np.float32)
+    path = make_dem(array=heights, tiled=True, blockxsize=16, blockysize=16, compress="deflate")
+    data = bytearray(path.read_bytes())
+    data[len(data) // 2 : len(data) // 2 + 4000] = bytes(4000)
+    path.write_bytes(data)
+    monkeypatch.setattr(_cells, "_STRIP_CELLS", 512)
+    monkeypatch.setattr(_cells, "threads_allowed", lambda: 3)
+    with pytest.raises(DataError, match=r"dem\.tif: cannot be read, the file is truncated"):
+        open_terrain(path).read(0, 0, 150, 170)

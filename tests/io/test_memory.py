@@ -165,7 +165,7 @@ def test_what_is_no_size(text):
 
 @pytest.mark.parametrize("memory", [0, -1, LEAST - 1, float("nan")])
 def test_less_than_the_process_itself_takes(memory):
-    with pytest.raises(InputError, match="give at least 600MB"):
+    with pytest.raises(InputError, match="give at least 750MB"):
         check_limit(memory)
 
 

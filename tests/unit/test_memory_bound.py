@@ -111,16 +111,16 @@ def test_a_full_disk_ends_the_run_in_one_line(terrain, tiny, tmp_path, monkeypat
         viewshed.map_visibility(terrain, observers(1), range_m=700, scratch=tmp_path, **tiny)
 
 
-@pytest.mark.parametrize("memory", [10, 599_999_999, float("nan"), -1])
+@pytest.mark.parametrize("memory", [10, 749_999_999, float("nan"), -1])
 def test_too_little_memory_is_refused(terrain, memory):
-    with pytest.raises(viewshed.InputError, match="give at least 600MB"):
+    with pytest.raises(viewshed.InputError, match="give at least 750MB"):
         viewshed.map_visibility(terrain, observers(1), range_m=700, memory=memory)
 
 
 def test_a_bound_that_is_kept_anyhow_changes_nothing(terrain):
     found = [
         viewshed.map_visibility(terrain, observers(1), range_m=700, memory=memory)
-        for memory in (None, 600_000_000, float("inf"))
+        for memory in (None, 750_000_000, float("inf"))
     ]
     for result in found[1:]:
         np.testing.assert_array_equal(result.visible, found[0].visible)

@@ -19,8 +19,8 @@ _NO_LIMIT = 1 << 60
 _FALLBACK = 2 << 30
 #: Bytes a cell of the layers that gather several observers.
 _GATHERED_BYTES = {"count": 2, "count-unresolved": 2, "who": 4}
-#: Memory of the process beside the arrays of the window [bytes]: libraries, page, writers, scratch.
-LEAST = 600_000_000
+#: What the process takes beside the arrays of the window [bytes]: libraries, page and writers.
+LEAST = 750_000_000
 #: What the windows of observers under way beside the first may take [bytes]: what the page and the
 #: writers need later is free while observers look.
 _MORE_WINDOWS = 300e6

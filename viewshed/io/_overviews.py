@@ -4,6 +4,7 @@ Each copy is made from the one before, of half its rows and columns, as the rast
 cell for cell, but in one pass and many times faster.
 """
 
+import hashlib
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -41,7 +42,7 @@ def sizes(shape: tuple[int, int], block: int) -> list[tuple[int, int]]:
 
 def with_overviews(
     draft: Path, array: Cells, how: str, nodata: float | None, block: int
-) -> Path:
+) -> tuple[Path, list[bytes]]:
     """Make coarser copies of a raster beside its draft.
 
     Parameters
@@ -59,18 +60,21 @@ def with_overviews(
 
     Returns
     -------
-    pathlib.Path
-        A raster that has the draft's cells and these copies, the draft itself where it has none.
+    joined : pathlib.Path
+        A raster that has the draft's cells and these copies, the draft itself where none was made.
+    digests : list of bytes
+        SHA-256 of the cells of each copy, to know them by when they are read back.
     """
     wanted = sizes(array.shape, block)
     if not wanted or min(wanted[-1]) < 1:
-        return draft
+        return draft, []
     names: list[str] = []
+    digests: list[bytes] = []
     rows: Rows = lambda first, last: array[first:last]  # noqa: E731
     finer = array.shape
     for number, shape in enumerate(wanted, 1):
         path = draft.with_name(f"{draft.name}-{number}.tif")
-        _Copy(rows, finer, shape, how, nodata).write(path, array.dtype)
+        digests.append(_Copy(rows, finer, shape, how, nodata).write(path, array.dtype))
         rows, finer = _reader(path, shape), shape
         names.append(path.name)
     joined = draft.with_name(f"{draft.name}.vrt")
@@ -83,7 +87,7 @@ def with_overviews(
     )
     text = text.replace("</VRTRasterBand>", f"{copies}</VRTRasterBand>")
     joined.write_text(text, encoding="utf-8", errors="surrogateescape")
-    return joined
+    return joined, digests
 
 
 def _reader(path: Path, shape: tuple[int, int]) -> Rows:
@@ -112,8 +116,9 @@ class _Copy:
         self.nodata = np.uint8(nodata or 0) if how == "mode" else None
         self.ratio = finer[0] / shape[0], finer[1] / shape[1]
 
-    def write(self, path: Path, kind: np.dtype[Any]) -> None:
-        """Write it into a plain raster."""
+    def write(self, path: Path, kind: np.dtype[Any]) -> bytes:
+        """Write it into a plain raster; give the SHA-256 of its cells."""
+        digest: Any = hashlib.sha256()
         rows, cols = self.shape
         step = max(1, _STRIP_CELLS // cols)
         with rasterio.open(
@@ -130,7 +135,10 @@ class _Copy:
         ) as file:
             for first in range(0, rows, step):
                 count = min(step, rows - first)
-                file.write(self.make(first, count), 1, window=Window(0, first, cols, count))
+                made = np.ascontiguousarray(self.make(first, count))
+                file.write(made, 1, window=Window(0, first, cols, count))
+                digest.update(made.view(np.uint8))
+        return digest.digest()
 
     def _most_frequent(self, first: int, count: int) -> Cells:
         rows, cols = self._spans(0, first, count), self._spans(1, 0, self.shape[1])

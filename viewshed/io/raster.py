@@ -10,7 +10,7 @@ import os
 import select
 import threading
 import uuid
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -175,12 +175,12 @@ def write_cog(  # noqa: PLR0913 - path, cells, place, and what the file says of 
         with _quiet_stderr(), gdal_env():
             _write_draft(draft, array, grid, facts)
             block = int(chosen.get("blocksize", BLOCK))
-            source = with_overviews(draft, array, overview, nodata, block)
+            source, copies = with_overviews(draft, array, overview, nodata, block)
             _copy(source, draft, made, _cog_options(overview, array.dtype.kind == "f") | chosen)
             _remove(final.parent, prefix + draft_name)
             _sync(made)
             pixels = _read_back(made, array, grid, facts)
-            _read_overviews(made)
+            _read_overviews(made, copies)
         found = {
             "sha256": file_sha256(made),
             "size": made.stat().st_size,
@@ -405,14 +405,19 @@ def _is_same_crs(found: CRS | None, grid: Grid, facts: _Facts) -> bool:
     )
 
 
-def _read_overviews(path: Path) -> None:
-    """Read every coarser copy in a file, which fails where blocks are missing."""
+def _read_overviews(path: Path, digests: Sequence[bytes]) -> None:
+    """Read every coarser copy in a file, and compare those whose SHA-256 is known."""
     with rasterio.open(path) as file:
         levels = len(file.overviews(1))
     for level in range(levels):
+        digest = hashlib.sha256()
         with rasterio.open(path, overview_level=level) as file:
             for first, count in _strips(file.height):
-                file.read(1, window=Window(0, first, file.width, count))
+                read = file.read(1, window=Window(0, first, file.width, count))
+                digest.update(read.view(np.uint8))
+        if digests and digest.digest() != digests[level]:
+            msg = "a coarser copy does not read back as it was made; the disk may be full"
+            raise OutputError(msg)
 
 
 def _sync(path: Path) -> None:

@@ -30,8 +30,9 @@ __all__ = ["Room", "can_map"]
 _SMALL = 1 << 20
 #: Share of the memory for arrays that arrays in memory may take where some are in files.
 _IN_MEMORY_SHARE = 0.5
-#: Bytes under the limit at which mapped pages are given back: what is touched until that is done.
-_SLACK = 320 << 20
+#: Bytes under the limit at which mapped pages are given back, and the greatest share of the limit:
+#: what is touched until that is done.
+_SLACK, _SLACK_SHARE = 320 << 20, 1 / 6
 #: Fewest mapped bytes that are worth giving back.
 _WORTH = 32 << 20
 #: How fast pages come in at most, about [bytes/s] (touching one brings its neighbours), and the
@@ -75,7 +76,7 @@ class Room:
         need: float,
         folder: str | os.PathLike[str] | None = None,
     ) -> None:
-        self.limit = limit
+        self._high_water = limit - min(_SLACK, int(limit * _SLACK_SHARE))
         self.is_mapped = need > share
         self.folder = Path(tempfile.gettempdir() if folder is None else folder)
         self._left = share * _IN_MEMORY_SHARE if self.is_mapped else float("inf")
@@ -154,7 +155,7 @@ class Room:
 
     def _is_near_limit(self) -> bool:
         resident, mapped = resident_memory() or (0, 0)
-        return resident > self.limit - _SLACK and mapped >= _WORTH
+        return resident > self._high_water and mapped >= _WORTH
 
     def _give_back(self, size: int) -> None:
         """Count memory of an array that has gone away as free."""
@@ -207,7 +208,7 @@ class Room:
                     self._maps, self._keeper = [], None
                     return
             resident, mapped = resident_memory() or (0, 0)
-            spare = self.limit - _SLACK - resident
+            spare = self._high_water - resident
             if spare < 0 and mapped >= _WORTH:
                 self.release()
             time.sleep(min(_LONGEST, max(_SHORTEST, spare / _PACE)))
