@@ -155,8 +155,8 @@ def test_feet(look):
 def test_memory(look):
     memory = look(hills()).memory
     cells = SHAPE[0] * SHAPE[1]
-    assert memory["whole_grid"]["visible"] == 600e6 + 5 * cells
-    assert memory["whole_grid"]["all_layers"] == 600e6 + 30 * cells
+    assert memory["whole_grid"]["visible"] == 750e6 + 5 * cells
+    assert memory["whole_grid"]["all_layers"] == 750e6 + 30 * cells
     assert memory["default_range"] == memory["whole_grid"]  # the range reaches past the grid
 
 
@@ -164,7 +164,7 @@ def test_memory_of_a_range_inside_the_grid(look):
     transform = Affine(1000, 0, 400_000, 0, -1000, 6_000_000)
     checkup = look(hills(), transform=transform)
     assert 60 * 61 <= checkup.range_cells < 60 * 70 < checkup.cells
-    assert checkup.memory["default_range"]["visible"] == 600e6 + 5 * checkup.range_cells
+    assert checkup.memory["default_range"]["visible"] == 750e6 + 5 * checkup.range_cells
 
 
 def test_grid_without_any_height(look):
