@@ -138,7 +138,7 @@ class _Copy:
                 made = np.ascontiguousarray(self.make(first, count))
                 file.write(made, 1, window=Window(0, first, cols, count))
                 digest.update(made.view(np.uint8))
-        return digest.digest()
+        return bytes(digest.digest())
 
     def _most_frequent(self, first: int, count: int) -> Cells:
         rows, cols = self._spans(0, first, count), self._spans(1, 0, self.shape[1])
