@@ -325,17 +325,12 @@ def test_missing_inputs_are_named_before_anything_is_computed(recorded, tmp_path
 def test_changed_inputs_are_named_and_used(recorded, tmp_path, fake_run):
     put(tmp_path / "dems/a.tif", b"HEIGHTS")
     with pytest.warns(ViewshedWarning, match=r"a\.tif: has changed since the record was made"):
-        found = rerun(recorded, tmp_path / "again", threads=1)
+        found = rerun(recorded, tmp_path / "again", threads=1, memory=2e9)
     assert [one.state for one in found.inputs] == ["changed"]
     ((asked, how),) = fake_run[0]
     assert asked == arguments(a_record(options=options(dem=["../dems/a.tif"])), recorded.parent)
-    assert how == {
-        "memory": None,
-        "scratch": tmp_path,
-        "threads": 1,
-        "overwrite": False,
-        "progress": None,
-    }
+    run = {"threads": 1, "overwrite": False, "progress": None}
+    assert how == {**run, "memory": 2e9, "scratch": tmp_path}
 
 
 def test_inputs_that_were_not_there_before_are_named(recorded, tmp_path, fake_run):
