@@ -19,6 +19,7 @@ from rasterio.crs import CRS
 from viewshed.errors import OutputError
 from viewshed.grid import Grid
 from viewshed.io import raster
+from viewshed.io._voice import quiet_stderr
 from viewshed.io.raster import pixel_sha256, write_cog
 
 ROOT = Path(__file__).parents[2]
@@ -316,7 +317,7 @@ def test_ctrl_c_ends_a_long_copy_soon(tmp_path):
 
 
 def test_stderr_of_others_passes_on(capfd):
-    with raster._quiet_stderr():
+    with quiet_stderr():
         os.write(2, b"_tiffWriteProc: File too large.\nprogress 1\r")
         os.write(2, b"_tiff")
         os.write(2, b"SeekProc: bad\n_tin\nend")
@@ -325,7 +326,7 @@ def test_stderr_of_others_passes_on(capfd):
 
 def test_quiet_stderr_does_not_wait_for_a_child(capfd):
     start = time.perf_counter()
-    with raster._quiet_stderr():
+    with quiet_stderr():
         child = subprocess.Popen([sys.executable, "-c", "import time; time.sleep(20)"])
     assert time.perf_counter() - start < 5
     child.kill()
@@ -337,8 +338,8 @@ def test_quiet_stderr_without_a_stream(tmp_path):
     code = (
         "import os; os.close(2)\n"
         "import sys; sys.path.insert(0, sys.argv[1])\n"
-        "from viewshed.io.raster import _quiet_stderr\n"
-        "with _quiet_stderr():\n    print('fine')\n"
+        "from viewshed.io._voice import quiet_stderr\n"
+        "with quiet_stderr():\n    print('fine')\n"
     )
     done = subprocess.run(
         [sys.executable, "-c", code, str(ROOT)], stdout=subprocess.PIPE, check=True
