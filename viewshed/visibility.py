@@ -28,7 +28,7 @@ from viewshed.wedges import (
     corner_weights,
     shift_of,
     skew_of,
-    wedge_count,
+    wedge_counts,
     wedges,
 )
 
@@ -310,7 +310,7 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
         state[first : first + _STRIP_ROWS] = NODATA
         clear[first : first + _STRIP_ROWS] = np.nan
     pieces, axes = wedges(scene, want)
-    workers = _Workers(max(elevation.shape), wedge_count(scene))
+    workers = _Workers(max(elevation.shape), min(wedge_counts(scene).values()))
 
     def sweep_task(piece: Wedge) -> Callable[[], None]:
         def task() -> None:

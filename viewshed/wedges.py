@@ -6,6 +6,7 @@ A wedge is the unit of work: some directions of one octant, swept on its own. Th
 
 from __future__ import annotations
 
+import itertools
 import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -22,10 +23,13 @@ if TYPE_CHECKING:
     from viewshed.grid import PostMap
     from viewshed.places import Sector
 
-#: Posts that a wedge is wide at the end of the range, about: few enough for the nearest cache,
-#: many enough to outweigh the first lines, which every wedge has to itself.
-_WEDGE_POSTS = 256
-_MIN_WEDGES = 16
+#: Most and fewest posts that a wedge is wide at the end of the range, about: few enough for the
+#: nearest cache, many enough to outweigh what each line costs whatever its length.
+_MOST_POSTS, _FEWEST_POSTS = 256, 48
+#: Pieces that a run is cut into where that leaves them wide enough, so that many threads share it.
+_PIECES = 192
+#: Pieces an octant is cut into at least.
+_LEAST_WEDGES = 8
 #: Wedges are swept this much beyond the directions they answer, so that ties stay inside [t].
 _TIE = 1e-12
 #: Skew up to which an octant's sight lines meet its lines of posts in their order; more happens
@@ -335,21 +339,43 @@ def _touches(sector: Sector | None, octant: Octant, low: float, high: float) -> 
 Wedge = tuple[Octant, "NDArray[np.float64]"]
 
 
-def wedge_count(scene: Scene) -> int:
-    """Wedges an octant is cut into."""
+def wedge_counts(scene: Scene) -> dict[tuple[bool, int, int], int]:
+    """Wedges that each octant is cut into: by row, sign along and sign across.
+
+    Octants that reach farther, as those of an observer near a corner do, get more of them.
+    """
     pm = scene.post_map
+    rows, cols = scene.surface.shape
     step = min(np.hypot(*pm.jacobian[:, 0]), np.hypot(*pm.jacobian[:, 1]))
-    reach = min(scene.range_m / step, max(scene.surface.shape))
-    return int(max(_MIN_WEDGES, math.ceil(reach / _WEDGE_POSTS)))
+    reach = scene.range_m / step
+    lines, weights = {}, {}
+    for by_row, main, minor in itertools.product((False, True), (1, -1), (1, -1)):
+        down = pm.row0 if (main if by_row else minor) < 0 else rows - 1 - pm.row0
+        right = pm.col0 if (minor if by_row else main) < 0 else cols - 1 - pm.col0
+        along, across = (down, right) if by_row else (right, down)
+        length = min(along, reach)
+        width = min(across, length)
+        lines[by_row, main, minor] = length
+        weights[by_row, main, minor] = length * width - 0.5 * width * width
+    total = max(sum(weights.values()), 1.0)
+    if scene.sector is not None:
+        total *= min(scene.sector.width_deg, 360.0) / 360.0
+    return {
+        key: max(
+            _LEAST_WEDGES,
+            math.ceil(length / _MOST_POSTS),
+            min(math.ceil(_PIECES * weights[key] / total), math.ceil(length / _FEWEST_POSTS)),
+        )
+        for key, length in lines.items()
+    }
 
 
 def wedges(scene: Scene, clearance: bool) -> tuple[list[Wedge], list[Octant]]:
     """Wedges to sweep and axes to walk. They depend on the scene alone, not on the threads."""
     rows, cols = scene.surface.shape
     pm = scene.post_map
-    count = wedge_count(scene)
+    counts = wedge_counts(scene)
     spare, bend = skew_of(pm, rows, cols), _bend(pm, rows, cols)
-    edges = np.linspace(0.0, 1.0, count + 1)
     pieces: list[Wedge] = []
     axes: list[Octant] = []
     for by_row in (False, True):
@@ -360,6 +386,8 @@ def wedges(scene: Scene, clearance: bool) -> tuple[list[Wedge], list[Octant]]:
                     continue
                 if octant.straight and minor > 0:
                     axes.append(octant)
+                count = counts[by_row, main, minor]
+                edges = np.linspace(0.0, 1.0, count + 1)
                 for n in range(count):
                     low, high = float(edges[n]), float(edges[n + 1])
                     swept = (max(low - _TIE, 0.0), high + _TIE)

@@ -1570,9 +1570,10 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
         Directions answered, from piece[0] up to but not at piece[1], and those swept, piece[2]
         to piece[3].
     work : tuple of arrays
-        Scratch space: raws (5, w) float32, lines (2, 7, w), spans (2 + PARTS, 4) int64, ends (PARTS, 2) int64, post (9, w), loud
-        (w,) uint8, env (2, 3, e), seg (4, w), arcs (a, 16), gaps (2, b), poly (4, n + 1), cell
-        (1, 16), corner (2, 8), bounds (7, PARTS), highest (WINDOWS, w) float32.
+        Scratch space: raws (5, w) float32, lines (2, 7, w), spans (2 + PARTS, 4) int64, ends (PARTS,
+        2) int64, post (9, w), loud (w,) uint8, env (2, 3, e), seg (4, w), arcs (a, 16), gaps
+        (2, b), poly (4, n + 1), cell (1, 16), corner (2, 8), bounds (7, PARTS), highest
+        (WINDOWS, w) float32.
 
     Returns
     -------
@@ -1884,8 +1885,8 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
                     break
                 answer(
                     state, clearance, ints, geo, own, before, here, goal, at, wants, loud, j, lo,
-                    shift, max(w_lo, run_lo), min(w_hi, run_hi), plain, main, minor, arcs, n_arcs, gaps,
-                    n_gaps, cell,
+                    shift, max(w_lo, run_lo), min(w_hi, run_hi), plain, main, minor, arcs, n_arcs,
+                    gaps, n_gaps, cell,
                 )  # fmt: skip
         # merge this strip
         for b in range(ranges):
