@@ -1024,24 +1024,39 @@ def examine(
 
 
 @inline
-def clear_heights(geo, own, here, goal, at, u_line, lo, first, last, arcs, n_arcs, over):
-    """Fill the heights of targets first .. last of a line over envelope and bulging cells."""
-    t, u = here[0], here[3]
+def clear_heights(
+    env, n_env, geo, own, here, goal, u_line, lo, first, last, arcs, n_arcs, over
+):
+    """Fill the heights of targets first .. last of a line over envelope and bulging cells.
+
+    Without dividing: a direction is compared as v with t u. Where it is that of a border between
+    two pieces, give or take rounding, the higher one counts.
+    """
+    u, v = here[3], here[4]
+    k = max(piece_at(env, n_env, v[first] / u[first]) - 1, 0)
     for n in range(first, last + 1):
-        over[n] = goal[n] - at[n] * u[n]
+        while k < n_env - 1 and env[0, k + 1] * u[n] <= v[n]:
+            k += 1
+        horizon = env[1, k] * u[n] + env[2, k] * v[n]
+        tie = 1e-12 * u[n]
+        if k > 0 and v[n] - env[0, k] * u[n] <= tie:
+            horizon = max(horizon, env[1, k - 1] * u[n] + env[2, k - 1] * v[n])
+        if k < n_env - 1 and env[0, k + 1] * u[n] - v[n] <= tie:
+            horizon = max(horizon, env[1, k + 1] * u[n] + env[2, k + 1] * v[n])
+        over[n] = goal[n] - horizon
     for k in range(n_arcs):
         t0 = arcs[k, 0]
         t1 = arcs[k, 1]
-        if t1 < t[first] or t0 > t[last]:
+        if t1 * u[first] < v[first] or t0 * u[last] > v[last]:
             continue
         n = min(max(int(t0 * u_line - geo[Y0]) + 1 - lo, first), last)
-        while n > first and t[n - 1] >= t0:
+        while n > first and v[n - 1] >= t0 * u[n - 1]:
             n -= 1
-        while n <= last and t[n] < t0:
+        while n <= last and v[n] < t0 * u[n]:
             n += 1
-        while n <= last and t[n] <= t1:
-            if arcs[k, 2] + arcs[k, 3] * t[n] > at[n]:
-                over[n] = min(over[n], goal[n] - arc_value(arcs, k, own, t[n]) * u[n])
+        while n <= last and v[n] <= t1 * u[n]:
+            if arcs[k, 2] * u[n] + arcs[k, 3] * v[n] > goal[n] - over[n]:
+                over[n] = min(over[n], goal[n] - arc_value(arcs, k, own, v[n] / u[n]) * u[n])
             n += 1
 
 
@@ -1085,8 +1100,8 @@ def answer_hidden(
 def overtops(pf, f, v, u, shift, n_low, n_high, n_first, n_last):
     """Whether a line of posts stands above the line before it everywhere, and no cell bulges.
 
-    On an affine grid a sight line to post n crosses the line before between posts n - 1 and n, v / u
-    of the way back from n; one through post n of the line before crosses this line between n and
+    On an affine grid a sight line to post n crosses the line before between posts n - 1 and n, v /
+    u of the way back from n; one through post n of the line before crosses this line between n and
     n + 1.
     """
     bad = 0
@@ -1570,9 +1585,9 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
         Directions answered, from piece[0] up to but not at piece[1], and those swept, piece[2]
         to piece[3].
     work : tuple of arrays
-        Scratch space: raws (5, w) float32, lines (2, 7, w), spans (2 + PARTS, 4) int64, ends (PARTS,
-        2) int64, post (9, w), loud (w,) uint8, env (2, 3, e), seg (4, w), arcs (a, 16), gaps
-        (2, b), poly (4, n + 1), cell (1, 16), corner (2, 8), bounds (7, PARTS), highest
+        Scratch space: raws (5, w) float32, lines (2, 7, w), spans (2 + PARTS, 4) int64, ends
+        (PARTS, 2) int64, post (9, w), loud (w,) uint8, env (2, 3, e), seg (4, w), arcs (a, 16),
+        gaps (2, b), poly (4, n + 1), cell (1, 16), corner (2, 8), bounds (7, PARTS), highest
         (WINDOWS, w) float32.
 
     Returns
@@ -1742,8 +1757,10 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
         plain = (
             not cut and w_lo <= w_hi and asked(ints, geo, ua, va) and asked(ints, geo, ub, vb)
         )
-        if not plain or (want_clearance and not is_line):
-            work_out(ints, geo, own, j, lo, own_poly, raw, here, span, 0, count)
+        if span[1] < count and (not plain or want_clearance or is_line):
+            place(degree, geo[Y0], lo, u_line, geo[SCALE], own_poly, u, v, 0, whole(0, count))
+            if want_clearance or is_line:
+                flatten(raw, 0.0, geo, u, v, f, 0, whole(0, count))
         goal = f
         goal_raw = raw
         other_goal = target != 0.0 or on_ground
@@ -1752,17 +1769,14 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
             if on_ground:
                 goal_raw = raws[2]
                 fetch(ground, main_is_row, main, minor, sign, goal_raw, count)
+            if want_clearance:
+                flatten(goal_raw, target, geo, u, v, goal, 0, whole(0, count))
 
         if is_line:
             # the horizon is the line before: does this one, all of it, take its place?
-            if span[1] < count:
-                place(degree, geo[Y0], lo, u_line, geo[SCALE], own_poly, u, v, 0, whole(0, count))
-                flatten(raw, 0.0, geo, u, v, f, 0, whole(0, count))
             if not (curved or void or opens or on_ground) and n_gaps == 0 and target >= 0.0 and (
                 overtops(before[2], f, v, u_line, shift, n_low, n_high, n_first, n_last)
             ):
-                if other_goal:
-                    flatten(raw, target, geo, u, v, goal, 0, whole(0, count))
                 answer_seen(
                     state, clearance, ints, geo, before[2], goal, u, v, u_line, shift, w_lo, w_hi,
                     plain, main, minor, over,
@@ -1788,8 +1802,6 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
                 return FULL
             stale = True
             stale_floors = True
-            if want_clearance:
-                work_out(ints, geo, own, j, lo, own_poly, raw, here, span, 0, count)
 
         # where may something be seen, or rise above the horizon?
         tops = bounds[1 + now]
@@ -1797,11 +1809,11 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
         tops_prev = bounds[1 + then]
         for b in range(PARTS):
             goal_tops[b] = -BIG
-        parts = PARTS if n_last - n_first >= 3 * PARTS and not want_clearance else 1
+        parts = PARTS if n_last - n_first >= 3 * PARTS else 1
         even = part_ends(
             geo, degree, own_poly, j, lo, low, high, n_first, n_last, count, parts, ends
         )
-        if near or want_clearance or not even:
+        if near or not even:
             parts = 1
             ends[0, 1] = min(n_last + 3, count - 1)
             for b in range(PARTS):
@@ -1859,7 +1871,9 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
 
         # the rest is hidden
         if want_clearance and w_lo <= w_hi:
-            clear_heights(geo, own, here, goal, at, u_line, lo, w_lo, w_hi, arcs, n_arcs, over)
+            clear_heights(
+                envs[which], n_env, geo, own, here, goal, u_line, lo, w_lo, w_hi, arcs, n_arcs, over
+            )
         answer_hidden(
             state, clearance, ints, geo, here, goal_raw, goal, over, w_lo, w_hi, plain,
             void or on_ground, main, minor,
