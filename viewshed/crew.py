@@ -4,18 +4,24 @@ from __future__ import annotations
 
 import threading
 from functools import partial
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Protocol
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Sequence
 
     Piece = Callable[[], None]
-    #: Has pieces done by whoever is free, and returns when all are.
-    Share = Callable[[Sequence[Piece]], None]
-    Job = Callable[[Share], None]
+    Job = Callable[["Share"], None]
     Progress = Callable[[float, float], None]
 
-__all__ = ["run_jobs"]
+__all__ = ["Share", "run_jobs"]
+
+
+class Share(Protocol):
+    """Has pieces done by whoever is free, and returns when all are."""
+
+    def __call__(self, pieces: Sequence[Piece], *, told: bool = True) -> None:
+        """Do the pieces; `told` is whether they count in the progress."""
+
 
 #: Seconds between two looks at how far the work is.
 _LOOK_EVERY = 0.1
@@ -82,8 +88,9 @@ class _Dropped(BaseException):
 class _Shared:
     """Pieces of one job: taken in order, done in any."""
 
-    def __init__(self, pieces: Sequence[Piece]) -> None:
+    def __init__(self, pieces: Sequence[Piece], told: bool) -> None:
         self.pieces = pieces
+        self.told = told
         self.taken = 0
         self.done = 0
 
@@ -137,7 +144,7 @@ class _Crew:
             if self._begun < self._wanted and len(self._under_way) < self._at_once:
                 number = self._begun
                 self._begun += 1
-                self._under_way[number] = _Shared(())
+                self._under_way[number] = _Shared((), told=False)
                 return number, None
             for number, shared in self._under_way.items():
                 if shared.open and number < self._wanted:
@@ -145,9 +152,9 @@ class _Crew:
             self._change.wait()
         return None
 
-    def _share(self, number: int, pieces: Sequence[Piece]) -> None:
+    def _share(self, number: int, pieces: Sequence[Piece], *, told: bool = True) -> None:
         """Do the pieces of a job together with those who help."""
-        shared = _Shared(pieces)
+        shared = _Shared(pieces, told)
         with self._change:
             self._under_way[number] = shared
             self._change.notify_all()
@@ -201,7 +208,7 @@ class _Crew:
             parts = (
                 self._weights[number] * shared.done / len(shared.pieces)
                 for number, shared in self._under_way.items()
-                if shared.pieces
+                if shared.told and shared.pieces
             )
             self._told = max(self._told, self._finished + sum(parts))
             return self._told, sum(self._weights)

@@ -11,6 +11,7 @@ import os
 import threading
 from contextlib import nullcontext
 from dataclasses import dataclass
+from functools import partial
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -23,6 +24,7 @@ from viewshed.kernels import sweep as k
 from viewshed.wedges import (
     MOST_SKEW,
     Air,
+    Octant,
     Scene,
     Wedge,
     corner_weights,
@@ -33,7 +35,7 @@ from viewshed.wedges import (
 )
 
 if TYPE_CHECKING:
-    from collections.abc import Callable
+    from collections.abc import Callable, Hashable
     from contextlib import AbstractContextManager
 
     from numpy.typing import NDArray
@@ -199,7 +201,7 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
     clearance: bool = False,
     needed_height: bool = False,
     empty: Callable[..., NDArray[Any]] = np.empty,
-    turn: Callable[[int], AbstractContextManager[Any]] = nullcontext,
+    turn: Callable[[Hashable], AbstractContextManager[Any]] = nullcontext,
     threads: int | None = None,
     progress: Callable[[float, float], None] | None = None,
     share: Share | None = None,
@@ -271,6 +273,32 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
         msg = f"eye height {eye_height} and target height {target_height} must be finite numbers"
         raise InputError(msg)
     elevation = np.require(elevation, dtype=np.float32, requirements=["C", "W"])
+    if surface is not None:
+        surface = np.require(surface, dtype=np.float32, requirements=["C", "W"])
+    heights = eye_height, target_height
+    scene, eye = _scene(elevation, surface, post_map, heights, refraction_k, range_m, sector)
+    asked = _Asked(scene, elevation, clearance, needed_height, empty, turn)
+    announce(k.sweep)
+    if share is None:
+        run_jobs([asked.work], threads=n_threads, progress=progress)
+    else:
+        asked.work(share)
+    return Visibility(
+        asked.state, asked.clear if clearance else None, asked.height, eye_elevation=eye
+    )
+
+
+def _scene(
+    elevation: NDArray[np.float32],
+    surface: NDArray[np.float32] | None,
+    post_map: PostMap,
+    heights: tuple[float, float],
+    refraction_k: float,
+    range_m: float,
+    sector: Sector | None,
+) -> tuple[Scene, float]:
+    """Check that the observer can look, and give the scene and the elevation of the eye [m]."""
+    eye_height, target_height = heights
     ground = ground_at(elevation, post_map.row0, post_map.col0)
     if eye_height < 0.0:
         msg = (
@@ -289,7 +317,6 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
         raise InputError(msg)
     foot = ground
     if surface is not None:
-        surface = np.require(surface, dtype=np.float32, requirements=["C", "W"])
         foot = _surface_under(surface, elevation, post_map, ground + eye_height)
     scene = Scene(
         surface=elevation if surface is None else surface,
@@ -302,52 +329,89 @@ def compute(  # noqa: PLR0913 - one name for each thing a question is made of
         range_m=min(range_m, 1e9),
         sector=sector,
         shift=shift_of(post_map) if post_map.degree > 1 else (0.0, 0.0),
+        spare=eye_height + target_height,
     )
-    want = clearance or needed_height
-    state = empty(elevation.shape, np.uint8)
-    clear = empty(elevation.shape if want else (1, 1), np.float32)
-    for first in range(0, state.shape[0], _STRIP_ROWS):
-        state[first : first + _STRIP_ROWS] = NODATA
-        clear[first : first + _STRIP_ROWS] = np.nan
-    pieces, axes = wedges(scene, want)
-    workers = _Workers(max(elevation.shape), min(wedge_counts(scene).values()))
+    return scene, ground + eye_height
 
-    def sweep_task(piece: Wedge) -> Callable[[], None]:
-        def task() -> None:
-            with turn(id(piece[0])):
-                _sweep_piece(scene, state, clear, piece, workers)
 
-        return task
+class _Asked:
+    """The arrays of an answer, and the work that fills them.
 
-    announce(k.sweep)
-    for octant in axes:
-        with turn(id(octant.ints)):
+    Parameters
+    ----------
+    scene : Scene
+        What is looked at.
+    elevation : (rows, cols) float32
+        What targets stand on [m].
+    clearance, needed_height : bool
+        Layers beside `visible`.
+    empty, turn : callable
+        As for `compute`.
+    """
+
+    def __init__(
+        self,
+        scene: Scene,
+        elevation: NDArray[np.float32],
+        clearance: bool,
+        needed_height: bool,
+        empty: Callable[..., NDArray[Any]],
+        turn: Callable[[Hashable], AbstractContextManager[Any]],
+    ) -> None:
+        self.scene = scene
+        self.elevation = elevation
+        self.turn = turn
+        self.wants_clear = clearance or needed_height
+        self.state: NDArray[np.uint8] = empty(elevation.shape, np.uint8)
+        self.clear = empty(elevation.shape if self.wants_clear else (1, 1), np.float32)
+        self.height: NDArray[np.float32] | None = None
+        if needed_height:
+            self.height = empty(elevation.shape, np.float32) if clearance else self.clear
+
+    def work(self, share: Share) -> None:
+        """Fill the arrays: all pieces may be done by any thread."""
+        rows = range(0, self.elevation.shape[0], _STRIP_ROWS)
+        strips = [slice(first, first + _STRIP_ROWS) for first in rows]
+        share([partial(self._blank, strip) for strip in strips], told=False)
+        pieces, axes = wedges(self.scene, self.wants_clear)
+        for octant in axes:
+            self._walk(octant)
+        counts = wedge_counts(self.scene)
+        workers = _Workers(max(self.elevation.shape), min(counts.values()))
+        share([partial(self._sweep, piece, workers) for piece in pieces])
+        clear = self.clear if self.wants_clear else None
+        _answer_own_place(self.scene, self.elevation, self.state, clear)
+        if self.height is not None:
+            share([partial(self._lower, strip) for strip in strips], told=False)
+
+    def _blank(self, rows: slice) -> None:
+        with self.turn("blank"):
+            self.state[rows] = NODATA
+            self.clear[rows] = np.nan
+
+    def _walk(self, octant: Octant) -> None:
+        with self.turn(id(octant.ints)):
             k.axis(
-                scene.surface,
-                elevation,
-                state,
-                clear,
+                self.scene.surface,
+                self.elevation,
+                self.state,
+                self.clear,
                 octant.ints,
                 octant.geo,
                 octant.coef_u,
                 octant.own,
             )
-    tasks = [sweep_task(piece) for piece in pieces]
-    if share is None:
-        run_jobs(
-            [lambda together: together(tasks)],
-            threads=n_threads,
-            weights=[len(tasks)],
-            progress=progress,
-        )
-    else:
-        share(tasks)
-    _answer_own_place(scene, elevation, state, clear if want else None)
-    asked = (clearance, needed_height)
-    cleared, needed = (
-        _finish(state, clear, eye_height, target_height, asked, empty) if want else (None, None)
-    )
-    return Visibility(state, cleared, needed, eye_elevation=ground + eye_height)
+
+    def _sweep(self, piece: Wedge, workers: _Workers) -> None:
+        with self.turn(id(piece[0])):
+            _sweep_piece(self.scene, self.state, self.clear, piece, workers)
+
+    def _lower(self, rows: slice) -> None:
+        """Turn clearances into needed heights."""
+        target = np.float32(self.scene.target_height)
+        with self.turn("lower"):
+            if self.height is not None:
+                np.maximum(np.float32(0.0), target - self.clear[rows], out=self.height[rows])
 
 
 def _surface_under(
@@ -394,30 +458,4 @@ def _answer_own_place(
         over = (top - scene.foot) * (1.0 - (top - scene.eye_over) * scene.air.inverse_radius)
     state[at] = VISIBLE if over >= 0.0 else HIDDEN
     if clear is not None:
-        clear[at] = over
-
-
-def _finish(
-    state: NDArray[np.uint8],
-    clear: NDArray[np.float32],
-    eye_height: float,
-    target_height: float,
-    asked: tuple[bool, bool],
-    empty: Callable[..., NDArray[Any]],
-) -> tuple[NDArray[np.float32] | None, NDArray[np.float32] | None]:
-    """Clearance and needed height, with a number also where nothing stands between.
-
-    There the sight line has the full height of eye and target to spare. Strip by strip, so that
-    nothing as large as the layer is made on the way.
-    """
-    spare = np.float32(eye_height + target_height)
-    target = np.float32(target_height)
-    height = (empty(clear.shape, np.float32) if asked[0] else clear) if asked[1] else None
-    for first in range(0, state.shape[0], _STRIP_ROWS):
-        rows = slice(first, first + _STRIP_ROWS)
-        part = clear[rows]
-        part[np.isposinf(part)] = spare
-        part[(state[rows] != VISIBLE) & (state[rows] != HIDDEN)] = np.nan
-        if height is not None:
-            np.maximum(np.float32(0.0), target - part, out=height[rows])
-    return (clear if asked[0] else None), height
+        clear[at] = scene.spare if over == np.inf else over

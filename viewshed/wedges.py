@@ -101,6 +101,8 @@ class Scene:
         Surface under the observer [m].
     eye_over : float
         Height of the eye over it [m].
+    spare : float
+        Clearance where nothing at all stands between: that of eye and target over the ground [m].
     """
 
     surface: NDArray[np.float32]
@@ -113,6 +115,7 @@ class Scene:
     range_m: float
     sector: Sector | None
     shift: tuple[float, float]
+    spare: float
 
     @property
     def affine(self) -> bool:
@@ -232,6 +235,7 @@ def _octant(
     geo[k.INV_R] = scene.air.inverse_radius
     geo[k.Z_EYE] = scene.foot + scene.eye_over
     geo[k.TARGET] = scene.target_height
+    geo[k.SPARE] = scene.spare
     geo[k.RANGE2] = scene.range_m**2 * (1.0 + 1e-12)
     geo[k.D20] = radii[0] * n[0] ** 2 + radii[1] * e[0] ** 2
     geo[k.D11] = 2.0 * (radii[0] * n[0] * n[1] + radii[1] * e[0] * e[1])

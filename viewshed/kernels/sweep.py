@@ -26,6 +26,8 @@ import numpy as np
 from viewshed._jit import exact_max, inline, kernel
 
 BIG = 1e300
+#: A clearance this great says that nothing stands between; geo[SPARE] is written in its place.
+NO_HORIZON = 1e200
 #: A post this much under the horizon is hidden and raises nothing, whatever the rounding [m].
 NEAR = 1e-7
 #: Why a post is looked at: a cell or edge that it belongs to may rise above the horizon, its target
@@ -56,7 +58,8 @@ N_INTS = 15
 X0, Y0, SCALE, INV_R, Z_EYE, TARGET, RANGE2 = 0, 1, 2, 3, 4, 5, 6
 D20, D11, D02, G20, G11, G02, EPS = 7, 8, 9, 10, 11, 12, 13
 B_FROM_U, B_FROM_V, B_TO_U, B_TO_V = 14, 15, 16, 17
-N_FLOATS = 18
+SPARE = 18
+N_FLOATS = 19
 # the observer's own cell: corner values [line, row] and their differences at the observer
 O_U, O_V, O_F = 0, 4, 8
 O_F0, O_FA, O_FB, O_FAB = 12, 13, 14, 15
@@ -772,7 +775,7 @@ def add_strip_gaps(pt, pf, t, f, shift, from_a, to_a, j, lo_prev, low, high, gap
 
 @inline
 def piece_at(env, n_env, t):
-    """Number of the piece of the envelope at t, the right one of two that meet there."""
+    """Give the number of the piece of the envelope at t, the right one of two that meet there."""
     lo = 0
     hi = n_env - 1
     while lo < hi:
@@ -1410,8 +1413,8 @@ def answer(
         if want_clearance:
             if answer == 2:
                 clearance[r, c] = np.nan
-            elif clear >= BIG:
-                clearance[r, c] = np.inf
+            elif clear >= NO_HORIZON:
+                clearance[r, c] = geo[SPARE]
             else:
                 clearance[r, c] = clear
 
@@ -2038,8 +2041,8 @@ def axis(z, ground, state, clearance, ints, geo, coef_u, own):
             if ints[WANT_CLEARANCE]:
                 if answer == 2:
                     clearance[r, c] = np.nan
-                elif clear >= BIG:
-                    clearance[r, c] = np.inf
+                elif clear >= NO_HORIZON:
+                    clearance[r, c] = geo[SPARE]
                 else:
                     clearance[r, c] = clear
         if not known:
