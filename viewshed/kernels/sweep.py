@@ -1038,14 +1038,12 @@ def clear_heights(
     u, v = here[3], here[4]
     k = max(piece_at(env, n_env, v[first] / u[first]) - 1, 0)
     for n in range(first, last + 1):
-        while k < n_env - 1 and env[0, k + 1] * u[n] <= v[n]:
+        tie = 1e-12 * u[n]
+        while k < n_env - 1 and env[0, k + 1] * u[n] <= v[n] + tie:
             k += 1
         horizon = env[1, k] * u[n] + env[2, k] * v[n]
-        tie = 1e-12 * u[n]
-        if k > 0 and v[n] - env[0, k] * u[n] <= tie:
+        if k > 0 and env[0, k] * u[n] >= v[n] - tie:
             horizon = max(horizon, env[1, k - 1] * u[n] + env[2, k - 1] * v[n])
-        if k < n_env - 1 and env[0, k + 1] * u[n] - v[n] <= tie:
-            horizon = max(horizon, env[1, k + 1] * u[n] + env[2, k + 1] * v[n])
         over[n] = goal[n] - horizon
     for k in range(n_arcs):
         t0 = arcs[k, 0]
@@ -1088,6 +1086,15 @@ def answer_hidden(
                     state[minor + sign * n, main] = 0
     if ints[WANT_CLEARANCE] != 0:
         on_ground = ints[HAS_GROUND] != 0
+        if plain and not holes and main_is_row and sign > 0:
+            for n in range(w_lo, w_hi + 1):
+                clearance[main, minor + n] = over[n]
+            return
+        if plain and not holes:
+            for n in range(w_lo, w_hi + 1):
+                k = minor + sign * n
+                clearance[main if main_is_row else k, k if main_is_row else main] = over[n]
+            return
         for n in range(w_lo, w_hi + 1):
             if goal[n] == goal[n] and (plain or asked(ints, geo, u[n], v[n])):
                 clear = over[n]
