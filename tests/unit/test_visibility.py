@@ -10,6 +10,7 @@ import pytest
 from tests.helpers import affine_map, bent_map, flat, fractal, noise, with_voids
 from viewshed import visibility
 from viewshed.errors import InputError, ViewshedError
+from viewshed.kernels import sweep
 from viewshed.places import Sector
 from viewshed.visibility import compute, ground_at, usable_threads
 
@@ -229,6 +230,10 @@ def test_what_a_wedge_raises_ends_the_run(monkeypatch):
             compute(HILLS, affine_map(*PLACE), eye_height=3.0, threads=threads)
 
 
+#: Posts that the scratch arrays are longer than the lines they hold.
+SPARE = 4 * sweep.CHUNK
+
+
 def tight_workers(names):
     """Make a stand-in for the scratch arrays in which some start out far too small."""
 
@@ -238,16 +243,17 @@ def tight_workers(names):
         def get(self, factor):
             type(self).largest = max(type(self).largest, factor)
             self._local.factor = 0
-            lines, post, env, seg, arcs, gaps, *rest = super().get(1)
+            arrays = super().get(1)
+            loud, env, seg, arcs, gaps = arrays[5:10]
             if "lines" in names:
-                lines = np.zeros((2, 7, factor))
+                loud = np.zeros(SPARE + factor, np.uint8)
             if "env" in names:
                 env = np.zeros((2, 3, 5 + factor))
             if "arcs" in names:
                 arcs = np.zeros((factor, 16))
             if "gaps" in names:
                 gaps = np.zeros((2, factor))
-            return (lines, post, env, seg, arcs, gaps, *rest)
+            return (*arrays[:5], loud, env, seg, arcs, gaps, *arrays[10:])
 
     return Tight
 
@@ -270,7 +276,8 @@ def test_scratch_arrays_grow(monkeypatch, names, make):
 def test_scratch_arrays_that_never_fit(monkeypatch):
     class Never(visibility._Workers):
         def get(self, factor):
-            return (np.zeros((2, 7, 4)), *super().get(1)[1:])
+            arrays = super().get(1)
+            return (*arrays[:5], np.zeros(SPARE + 4, np.uint8), *arrays[6:])
 
     monkeypatch.setattr(visibility, "_Workers", Never)
     with pytest.raises(ViewshedError, match="does not fit in memory: narrow the range"):
