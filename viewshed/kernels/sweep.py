@@ -17,7 +17,8 @@ The horizon of all lines passed is kept in three parts:
   the polyline and is evaluated exactly at the targets it may decide.
 * `gaps`: disjoint open intervals of t whose sight lines have met something unknown.
 
-All three are merged line by line, so a target costs the same wherever it stands. Targets stand on
+All three are merged line by line, so a target costs the same wherever it stands. A line is first
+bounded in stretches: what is surely hidden and raises nothing is never worked out. Targets stand on
 the surface `z` itself or, with HAS_GROUND, on a ground of their own, under the surface or over it.
 """
 
