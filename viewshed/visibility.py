@@ -128,7 +128,7 @@ class _Workers:
                 np.zeros((2, 7, w)),
                 np.zeros((2 + k.PARTS, 4), np.int64),
                 np.zeros((k.PARTS, 2), np.int64),
-                np.zeros((9, w)),
+                np.zeros((8, w)),
                 np.zeros(w, np.uint8),
                 np.zeros((2, 3, 12 * w + 256)),
                 np.zeros((4, w)),

@@ -403,19 +403,25 @@ def merge_edges(old, n_old, seg, n_seg, eps, new):
 
 
 @inline
-def above(env, n_env, a, b, t0, t1, eps):
-    """Hull of the part of [t0, t1] where the line a + b t is more than eps above the envelope."""
+def piece_at(env, n_env, t):
+    """Give the number of the piece of the envelope at t, the right one of two that meet there."""
     lo = 0
     hi = n_env - 1
     while lo < hi:
         mid = (lo + hi + 1) >> 1
-        if env[0, mid] <= t0:
+        if env[0, mid] <= t:
             lo = mid
         else:
             hi = mid - 1
+    return lo
+
+
+@inline
+def above(env, n_env, a, b, t0, t1, eps):
+    """Hull of the part of [t0, t1] where the line a + b t is more than eps above the envelope."""
     first = BIG
     last = -BIG
-    k = lo
+    k = piece_at(env, n_env, t0)
     t = t0
     while t < t1 and k < n_env:
         stop = min(env[0, k + 1], t1)
@@ -775,20 +781,6 @@ def add_strip_gaps(pt, pf, t, f, shift, from_a, to_a, j, lo_prev, low, high, gap
 
 
 @inline
-def piece_at(env, n_env, t):
-    """Give the number of the piece of the envelope at t, the right one of two that meet there."""
-    lo = 0
-    hi = n_env - 1
-    while lo < hi:
-        mid = (lo + hi + 1) >> 1
-        if env[0, mid] <= t:
-            lo = mid
-        else:
-            hi = mid - 1
-    return lo
-
-
-@inline
 def survey_line(env, n_env, first, last, t, low, high, at, least, most):
     """Envelope at some posts of a line, and its least and greatest between neighbours."""
     k = piece_at(env, n_env, min(max(t[first], low), high))
@@ -876,6 +868,15 @@ def highest_of(highest, first, last):
     for n in range(first, last + 1 - reach, reach):
         top = max(top, highest[k, n])
     return np.float64(top)
+
+
+@inline
+def unknown_posts(raw, first, last):
+    """Count the posts first .. last - 1 that are void."""
+    unknown = 0
+    for m in range(first, last):
+        unknown += raw[m] != raw[m]
+    return unknown
 
 
 @inline
@@ -1597,7 +1598,7 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
         to piece[3].
     work : tuple of arrays
         Scratch space: raws (5, w) float32, lines (2, 7, w), spans (2 + PARTS, 4) int64, ends
-        (PARTS, 2) int64, post (9, w), loud (w,) uint8, env (2, 3, e), seg (4, w), arcs (a, 16),
+        (PARTS, 2) int64, post (8, w), loud (w,) uint8, env (2, 3, e), seg (4, w), arcs (a, 16),
         gaps (2, b), poly (4, n + 1), cell (1, 16), corner (2, 8), bounds (7, PARTS), highest
         (WINDOWS, w) float32.
 
@@ -1628,8 +1629,8 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
     ts = corner[0]
     gs = corner[1]
     at, least, most, wants, over = post[0], post[1], post[2], post[3], post[4]
-    peaks = post[7]
-    lows = post[8]
+    peaks = post[6]
+    lows = post[7]
     floors = bounds[0]
     for k in range(PARTS):
         floors[k] = -BIG
@@ -1718,15 +1719,8 @@ def sweep(z, ground, state, clearance, ints, geo, coef_u, coef_v, own, piece, wo
         n_low = cell_lo - lo
         n_high = cell_hi + 1 - lo
         shift = lo_prev - lo  # post a of the line before stands on the row of post a + shift
-        unknown = 0
-        for n in range(count):
-            unknown += raw[n] != raw[n]
-        ragged = unknown != 0
-        unknown = 0
-        if ragged:
-            for n in range(n_low, n_high + 1):
-                unknown |= raw[n] != raw[n]
-        void = unknown != 0
+        ragged = unknown_posts(raw, 0, count) > 0
+        void = ragged and unknown_posts(raw, n_low, n_high + 1) > 0
         near = j <= 2  # the sharp posts about the observer: everything is looked at
         blind = n_gaps == 1 and gaps[0, 0] <= low and gaps[1, 0] >= high
         opens = (void or void_prev) and not blind
